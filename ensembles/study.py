@@ -1,0 +1,287 @@
+"""The study file: which data, which prior, how to solve, what to write. TOML, checked as a whole before anything runs."""
+
+from __future__ import annotations
+
+import inspect
+import tomllib
+from collections.abc import Mapping
+from dataclasses import dataclass
+from os import PathLike
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, ValidationError
+
+from . import checks
+from .priors.base import LinearGaussianPrior
+from .priors.registry import PRIORS, build_prior
+from .snapshots.files import read_snapshots
+from .snapshots.series import SnapshotSeries
+from .study_problems import Problem, line_of, problem_of, refuse, syntax_line, unknown_key
+
+__all__ = ["DataTable", "OutputTable", "SolveTable", "Study", "UnitsTable", "read_study"]
+
+_Names = Annotated[tuple[str, ...], Field(strict=False)]
+
+
+class _Table(BaseModel):
+    """A table of the study file: no key but the known ones, no silent conversion, nothing changed afterwards."""
+
+    model_config = ConfigDict(frozen=True, extra="forbid", strict=True)
+
+
+class StudyTable(_Table):
+    """[study]: what it is called, and the seed of every random number in it."""
+
+    title: str = ""
+    seed: int = Field(default=0, ge=0)
+
+
+class DataTable(_Table):
+    """[data]: the file, beside the study file unless its path is absolute, and what its columns mean."""
+
+    file: str = Field(min_length=1)
+    time: str
+    position: _Names = Field(min_length=1)
+    weight: str | None = None
+    label: str | None = None
+    features: _Names = ()
+
+
+class UnitsTable(_Table):
+    """[units]: words for tables and axes; nothing is converted."""
+
+    time: str = ""
+    length: str = ""
+
+
+class SolveTable(_Table):
+    """[solve]: the L1 error of the marginals to reach, and the largest number of sweeps (default: the solver's own)."""
+
+    tolerance: float = Field(default=1e-6, gt=0, allow_inf_nan=False)
+    sweeps: int | None = Field(default=None, ge=1)
+
+
+class OutputTable(_Table):
+    """[output]: how much is written, and how."""
+
+    paths: int = Field(default=200, ge=1)
+    path_times: int = Field(default=41, ge=2)
+    intermediate: int = Field(default=5, ge=1)
+    format: Literal["csv", "parquet"] = "csv"
+    links: int = Field(default=3, ge=1)
+
+
+class PriorTable(BaseModel):
+    """[prior]: its kind, and the parameters of that kind, which the prior itself checks."""
+
+    model_config = ConfigDict(frozen=True, extra="allow", strict=True)
+    kind: str
+
+    @property
+    def parameters(self) -> dict[str, Any]:
+        """Every key but `kind`."""
+        return dict(self.model_extra or {})
+
+
+class _Tables(_Table):
+    study: StudyTable = StudyTable()
+    data: DataTable
+    units: UnitsTable = UnitsTable()
+    prior: PriorTable
+    solve: SolveTable = SolveTable()
+    output: OutputTable = OutputTable()
+
+
+@dataclass(frozen=True)
+class Study:
+    """A study file that was read and found in order.
+
+    Attributes
+    ----------
+    path : Path, where it stands; the data file is looked up from its folder.
+    text : str, as it was read.
+    title, seed, data, units, prior, solve, output : its tables; title and seed are those of [study].
+    """
+
+    path: Path
+    text: str
+    title: str
+    seed: int
+    data: DataTable
+    units: UnitsTable
+    prior: PriorTable
+    solve: SolveTable
+    output: OutputTable
+
+    @property
+    def data_file(self) -> Path:
+        """Where the data stand."""
+        return self.path.parent / self.data.file
+
+    def read_series(self) -> SnapshotSeries:
+        """Read the snapshots.
+
+        Raises
+        ------
+        InputError
+            If the file or one of its columns is missing, or a value in it cannot be used.
+        """
+        return read_snapshots(
+            self.data_file,
+            time=self.data.time,
+            position=list(self.data.position),
+            weight=self.data.weight,
+            label=self.data.label,
+            features=list(self.data.features),
+            units={"time": self.units.time, "length": self.units.length},
+        )
+
+    def build_prior(self) -> LinearGaussianPrior:
+        """Build the prior of [prior]."""
+        return build_prior(self.prior.kind, self.prior.parameters)
+
+
+def read_study(path: str | PathLike[str]) -> Study:
+    """Read a study file and check all of it.
+
+    Parameters
+    ----------
+    path : path of a TOML file with the tables [data] and [prior], and if wanted [study], [units], [solve], [output].
+
+    Raises
+    ------
+    InputError
+        If the file is missing, is no TOML, or a table, key or value is unknown, missing or wrong. Every problem of the
+        file is listed with its line.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> file = Path(tempfile.mkdtemp()) / "study.toml"
+    >>> _ = file.write_text('''
+    ... [data]
+    ... file = "beads.csv"
+    ... time = "t_s"
+    ... position = ["x_um", "y_um"]
+    ... [prior]
+    ... kind = "brownian"
+    ... diffusion = 0.43
+    ... ''')
+    >>> read_study(file).build_prior()
+    Brownian(diffusion=0.43)
+    """
+    place = Path(path)
+    text = _read_text(place)
+    try:
+        content = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as cause:
+        refuse(place, [Problem(syntax_line(str(cause)), f"not a TOML file; {cause}; correct that line")])
+    tables = _known_keys(content)
+    problems = []
+    found = None
+    try:
+        found = _Tables.model_validate(content)
+    except ValidationError as cause:
+        # Rules of a union or a container can report one key twice; a key is named once.
+        errors = {tuple(error["loc"]): error for error in cause.errors(include_url=False)}
+        problems = [problem_of(text, error, tables) for error in errors.values()]
+    problems += _prior_problems(content, text, tables)
+    refuse(place, problems)
+    assert found is not None  # refuse() raised otherwise
+    return Study(
+        path=place,
+        text=text,
+        title=found.study.title,
+        seed=found.study.seed,
+        data=found.data,
+        units=found.units,
+        prior=found.prior,
+        solve=found.solve,
+        output=found.output,
+    )
+
+
+def _read_text(path: Path) -> str:
+    try:
+        return path.read_text(encoding="utf-8")
+    except FileNotFoundError:
+        raise checks.InputError(f"study file not found; {str(path)!r}; check its path") from None
+    except IsADirectoryError:
+        raise checks.InputError(f"the study file is a folder; {str(path)!r}; name the .toml file in it") from None
+    except UnicodeDecodeError as cause:
+        raise checks.InputError(f"the study file is not text; {str(path)!r}: {cause}; save it as UTF-8") from None
+    except OSError as cause:
+        raise checks.InputError(f"the study file cannot be read; {str(path)!r}: {cause.strerror}; check it") from None
+
+
+def _known_keys(content: Mapping[str, Any]) -> dict[str, list[str]]:
+    """The known keys of every table; those of [prior] depend on its kind."""
+    keys = {
+        name: list(field.annotation.model_fields)  # type: ignore[union-attr]
+        for name, field in _Tables.model_fields.items()
+    }
+    prior = content.get("prior")
+    kind = prior.get("kind") if isinstance(prior, Mapping) else None
+    if isinstance(kind, str) and kind in PRIORS:
+        keys["prior"] += list(inspect.signature(PRIORS[kind]).parameters)
+    else:
+        keys["prior"] += sorted({name for prior in PRIORS.values() for name in inspect.signature(prior).parameters})
+    return keys
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, (int, float)) and not isinstance(value, bool)
+
+
+def _holds_numbers(value: Any) -> bool:
+    """A number, a list of numbers, or a list of lists of numbers: what a parameter of a prior may be."""
+    if not isinstance(value, list):
+        return _is_number(value)
+    return bool(value) and all(_is_number(item) or isinstance(item, list) and _holds_numbers(item) for item in value)
+
+
+def _prior_problems(content: Mapping[str, Any], text: str, tables: Mapping[str, list[str]]) -> list[Problem]:
+    """What is wrong with the parameters of [prior]; that the table and its `kind` are there is checked elsewhere."""
+    table = content.get("prior")
+    if not isinstance(table, Mapping) or not isinstance(table.get("kind"), str):
+        return []
+    kind = table["kind"]
+    if kind not in PRIORS:
+        return [Problem(line_of(text, ["prior", "kind"]), str(checks.unknown_name("prior.kind", kind, list(PRIORS))))]
+    given = {name: value for name, value in table.items() if name != "kind"}
+    problems = [_unknown_parameter(kind, name, text, tables) for name in given if name not in tables["prior"]]
+    for name, parameter in inspect.signature(PRIORS[kind]).parameters.items():
+        line = line_of(text, ["prior", name])
+        if name not in given:
+            if parameter.default is parameter.empty:
+                message = f"missing key; [prior] has no {name!r}, which {kind!r} needs; add a line: {name} = ..."
+                problems.append(Problem(line_of(text, ["prior"]), message))
+        elif not _holds_numbers(given[name]):
+            message = f"wrong value; prior.{name} = {given[name]!r}; it should be a number or a list of numbers"
+            problems.append(Problem(line, message))
+    return problems or _refused_by_prior(kind, given, content, text)
+
+
+def _unknown_parameter(kind: str, name: str, text: str, tables: Mapping[str, list[str]]) -> Problem:
+    others = [other for other, prior in PRIORS.items() if name in inspect.signature(prior).parameters]
+    if not others:
+        return unknown_key(text, ["prior", name], tables)
+    message = f"key of another prior; {name!r} does not belong to kind {kind!r}; remove it, or use kind = {others[0]!r}"
+    return Problem(line_of(text, ["prior", name]), message)
+
+
+def _refused_by_prior(kind: str, given: dict[str, Any], content: Mapping[str, Any], text: str) -> list[Problem]:
+    """What the prior itself says of its values, and of their number when the position columns are known."""
+    try:
+        prior = build_prior(kind, given)
+        data = content.get("data")
+        position = data.get("position") if isinstance(data, Mapping) else None
+        if isinstance(position, list) and position:
+            prior.linear_drift(len(position))
+            prior.diffusion_matrix(len(position))
+    except checks.InputError as cause:
+        message = str(cause)
+        name = next((name for name in given if message.startswith(name)), "kind")
+        return [Problem(line_of(text, ["prior", name]), f"prior.{message}" if name != "kind" else message)]
+    return []
