@@ -1,4 +1,4 @@
-"""The study file: which data, which prior, how to solve, what to write. TOML, checked as a whole before anything runs."""
+"""The study file: which data, which prior, how to solve, what to write. TOML, checked as a whole at once."""
 
 from __future__ import annotations
 
@@ -38,11 +38,14 @@ class StudyTable(_Table):
 
 
 class DataTable(_Table):
-    """[data]: the file, beside the study file unless its path is absolute, and what its columns mean."""
+    """[data]: the file, looked up from the folder of the study file, and what its columns mean.
+
+    An .npz archive names its own columns; any other file needs `time` and `position`.
+    """
 
     file: str = Field(min_length=1)
-    time: str
-    position: _Names = Field(min_length=1)
+    time: str | None = None
+    position: _Names | None = Field(default=None, min_length=1)
     weight: str | None = None
     label: str | None = None
     features: _Names = ()
@@ -130,7 +133,7 @@ class Study:
         return read_snapshots(
             self.data_file,
             time=self.data.time,
-            position=list(self.data.position),
+            position=None if self.data.position is None else list(self.data.position),
             weight=self.data.weight,
             label=self.data.label,
             features=list(self.data.features),
@@ -186,7 +189,7 @@ def read_study(path: str | PathLike[str]) -> Study:
         # Rules of a union or a container can report one key twice; a key is named once.
         errors = {tuple(error["loc"]): error for error in cause.errors(include_url=False)}
         problems = [problem_of(text, error, tables) for error in errors.values()]
-    problems += _prior_problems(content, text, tables)
+    problems += _unnamed_columns(content, text) + _prior_problems(content, text, tables)
     refuse(place, problems)
     assert found is not None  # refuse() raised otherwise
     return Study(
@@ -230,6 +233,19 @@ def _known_keys(content: Mapping[str, Any]) -> dict[str, list[str]]:
     return keys
 
 
+def _unnamed_columns(content: Mapping[str, Any], text: str) -> list[Problem]:
+    data = content.get("data")
+    if not isinstance(data, Mapping) or str(data.get("file")).endswith(".npz"):
+        return []
+    line = line_of(text, ["data"])
+    examples = {"time": '"t"', "position": '["x", "y"]'}
+    return [
+        Problem(line, f"missing key; [data] has no {name!r}; add a line such as: {name} = {example}")
+        for name, example in examples.items()
+        if name not in data
+    ]
+
+
 def _is_number(value: Any) -> bool:
     return isinstance(value, (int, float)) and not isinstance(value, bool)
 
@@ -238,7 +254,7 @@ def _holds_numbers(value: Any) -> bool:
     """A number, a list of numbers, or a list of lists of numbers: what a parameter of a prior may be."""
     if not isinstance(value, list):
         return _is_number(value)
-    return bool(value) and all(_is_number(item) or isinstance(item, list) and _holds_numbers(item) for item in value)
+    return bool(value) and all(_is_number(item) or (isinstance(item, list) and _holds_numbers(item)) for item in value)
 
 
 def _prior_problems(content: Mapping[str, Any], text: str, tables: Mapping[str, list[str]]) -> list[Problem]:

@@ -107,9 +107,7 @@ def _without_nonfinite(value: Any) -> Any:
 
 def write_json(path: str | os.PathLike[str], content: Any) -> None:
     """Write JSON to `path`; NaN and infinite numbers, which JSON does not have, become null."""
-    text = json.dumps(
-        _without_nonfinite(content), indent=2, ensure_ascii=False, allow_nan=False, default=_plain_number
-    )
+    text = json.dumps(_without_nonfinite(content), indent=2, ensure_ascii=False, allow_nan=False, default=_plain_number)
     write_text(path, text + "\n")
 
 

@@ -26,7 +26,7 @@ title = "Beads in a shallow channel"
 seed = 0                          # of every random number: the same seed gives the same result
 
 [data]
-file = "beads.csv"                # beside this file; also .tsv, .parquet, .npz, .h5ad
+file = "beads.csv"                # beside this file; also .tsv, .parquet, .npz
 time = "t_s"                      # the column that says which snapshot a row belongs to
 position = ["x_um", "y_um"]       # one column a coordinate
 # weight = "mass"                 # optional: a weight for each row
@@ -40,7 +40,7 @@ length = "µm"
 [prior]                           # what a bead does when nothing else is known
 kind = "ornstein-uhlenbeck"       # dX = -rate (X - centre) dt + sqrt(2 diffusion) dW; or "brownian"
 diffusion = 0.43                  # µm²/s: a sphere of 1 µm in water at 20 °C; a number, one an axis, or a matrix
-rate = [0.08, 0.25]               # 1/s: the trap's pull along and across the channel; a number, one an axis, or a matrix
+rate = [0.08, 0.25]               # 1/s: the trap's pull along and across the channel; a number or matrix will do
 centre = [0.0, 0.0]               # µm
 # drift = [0.1, 0.0]              # µm/s: of kind "brownian" only
 
@@ -65,7 +65,7 @@ title = "A fin ray grows back"
 seed = 0                          # of every random number: the same seed gives the same result
 
 [data]
-file = "cells.csv"                # beside this file; also .tsv, .parquet, .npz, .h5ad
+file = "cells.csv"                # beside this file; also .tsv, .parquet, .npz
 time = "day"                      # the column that says which snapshot a row belongs to
 position = ["C1", "C2", "C3", "C4", "C5", "C6", "C7", "C8"]
 label = "type"                    # a class for each row

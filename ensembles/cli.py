@@ -1,0 +1,174 @@
+"""The command line: a thin layer that reads a study, calls the package and says what it did. No mathematics.
+
+Exit status: 0 done, 1 the computation failed and says why, 2 wrong usage or input, 130 interrupted.
+"""
+
+from __future__ import annotations
+
+import functools
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any, ParamSpec
+
+import typer
+from rich.console import Console
+from rich.table import Table
+from rich.text import Text
+
+from . import __version__, checks, writing
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+__all__ = ["app", "main"]
+
+app = typer.Typer(
+    name="ensembles",
+    help="Schrödinger bridges between snapshots of a population whose individuals were lost.",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+)
+_Arguments = ParamSpec("_Arguments")
+_WIDE = 200  # columns of a table that goes into a file or a pipe, where no terminal sets a width
+
+StudyFile = Annotated[Path, typer.Argument(metavar="STUDY", help="The study file (TOML).", show_default=False)]
+Force = Annotated[bool, typer.Option("--force", help="Replace what an earlier run wrote.")]
+
+
+def _output() -> Console:
+    return Console(width=None if sys.stdout.isatty() else _WIDE, highlight=False)
+
+
+def _errors() -> Console:
+    return Console(stderr=True, highlight=False, soft_wrap=True)
+
+
+def _reported(command: Callable[_Arguments, None]) -> Callable[_Arguments, None]:
+    """Turn the package's errors into a message on stderr and an exit status; let nothing else pass unseen."""
+
+    def failed(message: str, status: int) -> typer.Exit:
+        _errors().print(message, markup=False)
+        return typer.Exit(status)
+
+    @functools.wraps(command)
+    def reported(*arguments: _Arguments.args, **options: _Arguments.kwargs) -> None:
+        try:
+            command(*arguments, **options)
+        except checks.InputError as cause:
+            raise failed(f"input error: {cause}", 2) from None
+        except checks.ComputationError as cause:
+            raise failed(f"computation failed: {cause}", 1) from None
+        except MemoryError as cause:
+            raise failed(f"computation failed: out of memory; {cause}; use fewer particles or paths", 1) from None
+        except KeyboardInterrupt:
+            raise failed("interrupted; nothing was written", 130) from None
+        except BrokenPipeError:
+            raise
+        except OSError as cause:
+            raise failed(
+                f"a file could not be read or written; {cause}; check the disk and the permissions", 1
+            ) from None
+
+    return reported
+
+
+@contextmanager
+def _progress() -> Iterator[Callable[[str], None]]:
+    """Yield a function that says on the terminal what is being done; in a pipe it says nothing."""
+    console = _errors()
+    if not console.is_terminal:
+        yield lambda message: None
+        return
+    with console.status("") as status:
+        yield lambda message: status.update(message)
+
+
+def _print_frame(console: Console, title: str, frame: pd.DataFrame) -> None:
+    table = Table(title=Text(title), title_justify="left")
+    for name in frame.columns:
+        table.add_column(Text(str(name)), justify="left" if frame[name].dtype == object else "right", overflow="fold")
+    for row in frame.itertuples(index=False):
+        table.add_row(*[Text(f"{value:.4g}" if isinstance(value, float) else str(value)) for value in row])
+    console.print(table)
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        _output().print(f"ensembles {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _common(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version and stop.")
+    ] = False,
+) -> None:
+    pass
+
+
+@app.command()
+@_reported
+def demo(
+    name: Annotated[str, typer.Argument(help="Which data: beads or cells.", show_default=False)],
+    folder: Annotated[Path, typer.Argument(help="Where to write them.", show_default=False)],
+    force: Annotated[bool, typer.Option("--force", help="Write into a folder that holds something.")] = False,
+    seed: Annotated[int, typer.Option("--seed", min=0, help="Of the random numbers.")] = 0,
+) -> None:
+    """Write an invented data set and the study file that goes with it."""
+    from .snapshots.demo import write_demo
+
+    console = _output()
+    data, study = write_demo(name, folder, rng=seed, force=force)
+    console.print(f"Wrote {data} and {study}", markup=False, soft_wrap=True)
+    console.print(f"Next: ensembles look {study}", markup=False, soft_wrap=True)
+
+
+@app.command()
+@_reported
+def look(study_file: StudyFile) -> None:
+    """Show what a study's data hold, and whether its noise is of the right order. Writes nothing."""
+    from .overview import gap_table, position_table, snapshot_table, verdicts
+    from .study import read_study
+
+    study = read_study(study_file)
+    series, prior = study.read_series(), study.build_prior()
+    console = _output()
+    _print_frame(console, f"{study.title or study_file}: snapshots", snapshot_table(series))
+    _print_frame(console, "Mean ± spread", position_table(series))
+    _print_frame(console, f"Gaps under {prior!r}", gap_table(series, prior))
+    for sentence in (*verdicts(series, prior), *series.notes()):
+        console.print(sentence, markup=False, soft_wrap=True)
+
+
+@app.command()
+@_reported
+def solve(
+    study_file: StudyFile,
+    out: Annotated[Path, typer.Option("--out", help="The folder to write.", show_default=False)],
+    seed: Annotated[
+        int | None, typer.Option("--seed", min=0, help="Instead of the study's.", show_default=False)
+    ] = None,
+    force: Force = False,
+) -> None:
+    """Fit the bridge of a study and write its tables, pictures and report page."""
+    from .results import fit_study, write_results
+    from .study import read_study
+
+    study = read_study(study_file)
+    writing.require_free_folder(out, force=force)
+    with _progress() as say:
+        say("Reading the snapshots")
+        bridge = fit_study(study, say=say)
+        with writing.output_folder(out, force=force) as folder:
+            written = write_results(study, bridge, folder, seed=study.seed if seed is None else seed, say=say)
+    console = _output()
+    console.print(f"Wrote {out}: {', '.join(written)}", markup=False, soft_wrap=True)
+
+
+def main(arguments: list[str] | None = None) -> Any:
+    """Run the command line; ends the process with its exit status."""
+    app(args=arguments, prog_name="ensembles")
