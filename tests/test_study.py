@@ -120,7 +120,7 @@ def test_demonstrations_repeat_with_their_seed():
 
 def test_beads_follow_their_law():
     # Ornstein-Uhlenbeck from N(-6, 0.8²) with κ = 0.08/s, D = 0.43 µm²/s, over 12 s: mean -6 e^{-0.96} = -2.2974,
-    # variance 0.64 e^{-1.92} + 0.43 (1 - e^{-1.92}) / 0.08 = 4.5869; computed by hand. Six standard errors of 405 beads.
+    # variance 0.64 e^{-1.92} + 0.43 (1 - e^{-1.92}) / 0.08 = 4.5869, by hand. Six standard errors of 405 beads.
     columns = DEMOS["beads"](np.random.default_rng(3))
     x = columns["x_um"][columns["t_s"] == 12.0]
     assert abs(x.mean() + 2.2974) < 6 * np.sqrt(4.5869 / x.size)
@@ -160,7 +160,7 @@ def test_cells_branch():
             3,
             r"key in the wrong table; 'tolerance' stands in \[study\]; move it under \[solve\]",
         ),
-        ("diffusion = 0.43", "diffusion = 0.43\nrate = 1", 13, r"'rate' does not belong to kind 'brownian'"),
+        ("diffusion = 0.43", "diffusion = 0.43\nrate = 1", 13, r"key of another prior; 'rate' does not belong to kind 'bro"),
         ("[study]", "[studdy]", 1, r"unknown table; 'studdy' \(did you mean 'study'\?\)"),
         ("seed = 7", "seed = 7.5", 3, r"wrong value; study.seed = 7.5; it should be a whole number"),
         ("seed = 7", "seed = -7", 3, r"wrong value; study.seed = -7; it should be greater than or equal to 0"),

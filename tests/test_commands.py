@@ -1,0 +1,288 @@
+"""The command line from end to end: what it prints where, its exit status, and what it leaves behind."""
+
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+from typer.testing import CliRunner
+
+import ensembles
+from ensembles import cli
+from ensembles.checks import ComputationError
+
+SMALL = """\
+[study]
+title = "small"
+
+[data]
+file = "points.csv"
+time = "t"
+position = ["x", "y"]
+
+[units]
+time = "s"
+length = "µm"
+
+[prior]
+kind = "brownian"
+diffusion = 0.5
+
+[output]
+paths = 6
+path_times = 5
+intermediate = 2
+links = 2
+"""
+ROWS = [
+    (0, 0.0, 0.1),
+    (0, 0.4, 0.0),
+    (0, 0.1, 0.7),
+    (2, 1.0, 0.2),
+    (2, 1.5, 0.9),
+    (5, 2.0, 1.0),
+    (5, 2.2, 0.3),
+    (5, 3.1, 1.4),
+]
+
+
+def run(*arguments):
+    return CliRunner().invoke(cli.app, [str(argument) for argument in arguments])
+
+
+def table(rows, header="t,x,y"):
+    return "\n".join([header, *(",".join(map(str, row)) for row in rows)]) + "\n"
+
+
+@pytest.fixture
+def small(tmp_path):
+    """A study of eight points at three times."""
+    (tmp_path / "points.csv").write_text(table(ROWS), encoding="utf-8")
+    study = tmp_path / "study.toml"
+    study.write_text(SMALL, encoding="utf-8")
+    return study
+
+
+def files_in(folder: Path) -> set[str]:
+    return {str(path.relative_to(folder)) for path in folder.rglob("*")}
+
+
+# ---- the program as a process -----------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    "program", [[sys.executable, "-m", "ensembles"], [str(Path(sys.executable).parent / "ensembles")]]
+)
+def test_it_runs_as_a_module_and_as_a_script(program):
+    found = subprocess.run([*program, "--version"], capture_output=True, text=True, check=True)
+    assert found.stdout.strip() == f"ensembles {ensembles.__version__}"
+
+
+def test_an_error_goes_to_stderr_without_a_traceback(tmp_path):
+    program = [sys.executable, "-m", "ensembles", "look", "none.toml"]
+    found = subprocess.run(program, capture_output=True, text=True, cwd=tmp_path)
+    assert found.returncode == 2
+    assert found.stdout == ""
+    assert found.stderr == "input error: study file not found; 'none.toml'; check its path\n"
+
+
+def test_there_is_help_for_every_command():
+    listed = run("--help")
+    assert listed.exit_code == 0
+    for command in ("demo", "look", "solve"):
+        assert command in listed.stdout
+        assert run(command, "--help").exit_code == 0
+
+
+@pytest.mark.parametrize(
+    "arguments",
+    [
+        [],
+        ["nothing"],
+        ["solve"],
+        ["solve", "a.toml"],
+        ["demo", "beads"],
+        ["look", "a", "b"],
+        ["demo", "beads", "x", "--seed", "-1"],
+    ],
+)
+def test_wrong_usage_ends_with_2(arguments):
+    assert run(*arguments).exit_code == 2
+
+
+# ---- errors and their exit status -------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("error", "status", "expected"),
+    [
+        (ComputationError("it broke; here; do that"), 1, "computation failed: it broke; here; do that"),
+        (MemoryError("8 GiB"), 1, "out of memory; 8 GiB"),
+        (KeyboardInterrupt(), 130, "interrupted; nothing was written"),
+        (PermissionError(13, "Permission denied", "x.csv"), 1, "[Errno 13] Permission denied: 'x.csv'"),
+    ],
+)
+def test_exit_status_of_each_failure(small, monkeypatch, error, status, expected):
+    def fail(path):
+        raise error
+
+    monkeypatch.setattr("ensembles.study.read_study", fail)
+    found = run("look", small)
+    assert found.exit_code == status
+    assert expected in found.stderr
+    assert len(found.stderr.strip().splitlines()) == 1
+    assert found.stdout == ""
+
+
+def test_an_error_of_the_program_itself_is_not_hidden(small, monkeypatch):
+    def fail(path):
+        raise ZeroDivisionError("a mistake of ours")
+
+    monkeypatch.setattr("ensembles.study.read_study", fail)
+    assert isinstance(run("look", small).exception, ZeroDivisionError)
+
+
+# ---- demo -------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", ["beads", "cells"])
+def test_demo_writes_data_and_a_study_that_look_can_read(tmp_path, name):
+    found = run("demo", name, tmp_path / "deep" / name)
+    assert found.exit_code == 0, found.stderr
+    assert files_in(tmp_path / "deep" / name) == {f"{name}.csv", "study.toml"}
+    assert f"ensembles look {tmp_path / 'deep' / name / 'study.toml'}" in found.stdout
+    looked = run("look", tmp_path / "deep" / name / "study.toml")
+    assert looked.exit_code == 0, looked.stderr
+    assert looked.stdout.count("the diffusion is of the right order") == {"beads": 2, "cells": 3}[name]
+
+
+def test_demo_repeats_with_its_seed(tmp_path):
+    for folder, seed in (("a", 1), ("b", 1), ("c", 2)):
+        assert run("demo", "beads", tmp_path / folder, "--seed", seed).exit_code == 0
+    first, again, other = ((tmp_path / folder / "beads.csv").read_bytes() for folder in "abc")
+    assert first == again != other
+
+
+def test_demo_spares_a_folder_that_holds_something(tmp_path):
+    (tmp_path / "mine.txt").write_text("mine")
+    found = run("demo", "beads", tmp_path)
+    assert found.exit_code == 2 and "not empty" in found.stderr and "--force" in found.stderr
+    assert files_in(tmp_path) == {"mine.txt"}
+    assert run("demo", "beads", tmp_path, "--force").exit_code == 0
+    assert files_in(tmp_path) == {"mine.txt", "beads.csv", "study.toml"}
+
+
+def test_demo_offers_the_nearest_name(tmp_path):
+    found = run("demo", "bead", tmp_path / "x")
+    assert found.exit_code == 2
+    assert "unknown demonstration; 'bead' (did you mean 'beads'?); use one of: beads, cells" in found.stderr
+    assert not (tmp_path / "x").exists()
+
+
+# ---- look -------------------------------------------------------------------------------------------------------
+
+
+def test_look_shows_the_snapshots_and_the_gaps(small):
+    found = run("look", small)
+    assert found.exit_code == 0, found.stderr
+    for expected in (
+        "t (s)",
+        "particles",
+        "effective sample size",
+        "duplicates",
+        "x (µm)",
+        "prior's spread (µm)",
+        "equal at (µm²/s)",
+    ):
+        assert expected in found.stdout
+    assert "1.25 ± 0.25" in found.stdout  # x of the second snapshot: 1.0 and 1.5
+    assert files_in(small.parent) == {"points.csv", "study.toml"}
+
+
+@pytest.mark.parametrize(
+    ("diffusion", "verdict"), [("1e-4", "much too small"), ("0.5", "of the right order"), ("100.0", "much too large")]
+)
+def test_look_judges_the_noise(small, diffusion, verdict):
+    small.write_text(SMALL.replace("diffusion = 0.5", f"diffusion = {diffusion}"), encoding="utf-8")
+    found = run("look", small)
+    assert found.stdout.count(verdict) == 2
+
+
+def test_look_says_what_one_particle_makes_meaningless(small):
+    (small.parent / "points.csv").write_text(table([*ROWS, (9, 3.0, 3.0)]), encoding="utf-8")
+    found = run("look", small)
+    assert found.exit_code == 0
+    assert (
+        "snapshot t = 9 has one particle: its spread, effective sample size and any error bar are meaningless"
+        in found.stdout
+    )
+
+
+def test_a_title_is_printed_as_it_is(small):
+    small.write_text(SMALL.replace('"small"', '"[bold]x[/nothing]"'), encoding="utf-8")
+    assert "[bold]x[/nothing]" in run("look", small).stdout
+
+
+# ---- bad input: a message, status 2, nothing written ------------------------------------------------------------
+
+STUDY_CHANGES = [
+    ('file = "points.csv"', 'file = "pionts.csv"', "missing file; there is no"),
+    ('position = ["x", "y"]', 'position = ["x", "yy"]', "there is no column 'yy' (did you mean 'y'?)"),
+    ('position = ["x", "y"]', 'position = ["x", "y"]\nweight = "w"', "there is no column 'w'"),
+    ('time = "t"\n', "", "missing key; [data] has no 'time'"),
+    ("paths = 6", "path = 6", "unknown key in [output]; 'path' (did you mean 'paths'?)"),
+    ("diffusion = 0.5", "diffusion = [[1.0, 2.0], [2.0, 1.0]]", "prior.diffusion must be positive definite"),
+    ("diffusion = 0.5", "diffusion = 0.0", "prior.diffusion must be positive; diffusion = 0"),
+    ("diffusion = 0.5", "diffusion = [0.5, 0.5, 0.5]", "prior.diffusion has the wrong dimension"),
+    ("diffusion = 0.5", "diffusion = 0.5\ndrift = [1.0]", "prior.drift has the wrong dimension"),
+]
+DATA_CHANGES = [
+    (table([*ROWS[:3], (2, "much", 1.0), *ROWS[3:]]), ["'x'", "line 5", "much"]),
+    (table([*ROWS, (5, "", 1.0)]), ["'x'", "line 10"]),
+    (table([*ROWS, (5, "nan", 1.0)]), ["'x'", "line 10"]),
+    (table([*ROWS, (5, "inf", 1.0)]), ["x", "inf"]),
+    (table(ROWS[:3]), ["a series needs at least two snapshots; column 't' holds one time only, 0"]),
+    (table([]), ["points.csv"]),
+    ("", ["empty file"]),
+    (table([(0, 1.0, 1.0), (1, 1.0, 1.0), (1, 1.0, 1.0)]), ["the positions must differ; all 3 particles"]),
+]
+WEIGHT_CHANGES = [
+    ([1, 1, 1, -1, 1, 1, 1, 1], "weights must be non-negative"),
+    ([1, 1, 1, 0, 0, 1, 1, 1], "weights must not all be zero"),
+    ([1, 1, 1, "inf", 1, 1, 1, 1], "must be finite"),
+]
+
+
+def refused(study: Path, command: str):
+    """The message of a refusal; asserts its status and that nothing was written."""
+    before = files_in(study.parent)
+    found = run("look", study) if command == "look" else run("solve", study, "--out", study.parent / "out")
+    assert found.exit_code == 2, (found.exit_code, found.stderr, found.exception)
+    assert found.stderr.startswith("input error: ") and "Traceback" not in found.stderr
+    assert found.stderr.count(";") >= 2, "three parts: what, value and place, remedy"
+    assert files_in(study.parent) == before
+    return found.stderr
+
+
+@pytest.mark.parametrize("command", ["look", "solve"])
+@pytest.mark.parametrize(("old", "new", "expected"), STUDY_CHANGES)
+def test_a_bad_study_is_refused(small, command, old, new, expected):
+    assert SMALL.count(old) == 1
+    small.write_text(SMALL.replace(old, new), encoding="utf-8")
+    assert expected in refused(small, command)
+
+
+@pytest.mark.parametrize("command", ["look", "solve"])
+@pytest.mark.parametrize(("data", "expected"), DATA_CHANGES)
+def test_bad_data_are_refused(small, command, data, expected):
+    (small.parent / "points.csv").write_text(data, encoding="utf-8")
+    message = refused(small, command)
+    assert all(part in message for part in expected), message
+
+
+@pytest.mark.parametrize(("values", "expected"), WEIGHT_CHANGES)
+def test_bad_weights_are_refused(small, values, expected):
+    rows = [(*row, value) for row, value in zip(ROWS, values)]
+    (small.parent / "points.csv").write_text(table(rows, "t,x,y,w"), encoding="utf-8")
+    small.write_text(SMALL.replace('time = "t"', 'time = "t"\nweight = "w"'), encoding="utf-8")
+    assert expected in refused(small, "solve")
