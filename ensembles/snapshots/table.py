@@ -154,9 +154,7 @@ def _numbers(column: pandas.Series, name: str, place: Callable[[int], str]) -> n
         row = int(np.argmax(bad))
         found = "is empty or NaN" if np.isnan(values[row]) else f"is {values[row]}"
         more = f" ({int(bad.sum())} such rows)" if bad.sum() > 1 else ""
-        raise InputError(
-            f"column {name!r} must hold finite numbers; {place(row)} {found}{more}; correct it or delete that row"
-        )
+        raise InputError(f"column {name!r} must be finite; {place(row)} {found}{more}; correct it or delete that row")
     return values
 
 
@@ -168,8 +166,7 @@ def _mixed_numbers(column: pandas.Series, name: str, place: Callable[[int], str]
         entry = column.iloc[row]
         kind = "text" if isinstance(entry, str) else type(entry).__name__
         return InputError(
-            f"column {name!r} must hold finite numbers; {place(row)} holds the {kind} {str(entry)!r}; "
-            "write a number there"
+            f"column {name!r} must hold numbers; {place(row)} holds the {kind} {str(entry)!r}; write a number there"
         )
 
     values = np.empty(len(column))
