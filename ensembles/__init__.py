@@ -1,0 +1,49 @@
+"""Schrödinger bridges between snapshots of a population whose individuals were lost.
+
+Names are loaded on first use, so that ``import ensembles`` stays light.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+__version__ = "0.1.0"
+
+_HOMES = {
+    "SnapshotSeries": "snapshots.series",
+    "read_snapshots": "snapshots.files",
+    "Brownian": "priors.brownian",
+    "OrnsteinUhlenbeck": "priors.ornstein_uhlenbeck",
+    "fit_bridge": "bridges.fit",
+    "load_bridge": "bridges.storage",
+    "gaussian_bridge": "bridges.closed_form",
+    "InputError": "checks",
+    "ComputationError": "checks",
+    "ConvergenceError": "schrodinger.solution",
+}
+
+__all__ = [*_HOMES, "__version__"]  # noqa: PLE0604
+
+if TYPE_CHECKING:
+    from .bridges.closed_form import gaussian_bridge
+    from .bridges.fit import fit_bridge
+    from .bridges.storage import load_bridge
+    from .checks import ComputationError, InputError
+    from .priors.brownian import Brownian
+    from .priors.ornstein_uhlenbeck import OrnsteinUhlenbeck
+    from .schrodinger.solution import ConvergenceError
+    from .snapshots.files import read_snapshots
+    from .snapshots.series import SnapshotSeries
+
+
+def __getattr__(name: str) -> Any:
+    if name in _HOMES:
+        value = getattr(import_module(f".{_HOMES[name]}", __name__), name)
+        globals()[name] = value
+        return value
+    raise AttributeError(f"module 'ensembles' has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)

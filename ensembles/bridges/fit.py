@@ -1,0 +1,175 @@
+"""Fit a bridge: the one place where data, dynamics and arithmetic meet."""
+
+from __future__ import annotations
+
+import warnings
+from collections.abc import Callable
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from .. import checks
+from ..kernels.choose import gaussian_kernel
+from ..priors.base import LinearGaussianPrior, Transition
+from ..schrodinger.gaussian_start import gaussian_potentials
+from ..schrodinger.iteration import Start
+from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
+from ..schrodinger.solve import SWEEP_LIMIT, solve
+from .bridge import Bridge
+
+if TYPE_CHECKING:
+    from ..snapshots.series import SnapshotSeries
+
+__all__ = ["fit_bridge"]
+
+_LARGEST_RATIO = 1e6  # mean squared whitened distance; beyond it the noise ladder is not known to arrive
+_WARM_RATIO = 8.0  # change of noise variance up to which another fit's potentials beat the closed-form start
+
+
+def fit_bridge(
+    series: SnapshotSeries,
+    prior: LinearGaussianPrior,
+    *,
+    tolerance: float = 1e-6,
+    sweep_limit: int = SWEEP_LIMIT,
+    start: Bridge | None = None,
+    allow_unconverged: bool = False,
+    observe: Callable[[int, State], bool | None] | None = None,
+) -> Bridge:
+    """Fit the Schrödinger bridge through all snapshots of a series.
+
+    Over every gap, π_ij = a_i b_j exp(f_i + g_j) k_ij with the prior's transition density k and the two clouds' weights as
+    marginals; the bridge over K snapshots is the chain of the pairwise ones.
+
+    Parameters
+    ----------
+    series : SnapshotSeries of K ≥ 2 snapshots.
+    prior : Brownian or OrnsteinUhlenbeck, in the units of the series.
+    tolerance : largest L1 error of either marginal of each coupling (weights sum to 1).
+    sweep_limit : passes over the kernel allowed a gap.
+    start : another bridge through the same snapshots, whose potentials are a warm start.
+    allow_unconverged : return a bridge that misses its tolerance, with a warning, in place of an error.
+    observe : called as observe(gap, state) after every pass; a true return stops that gap.
+
+    Returns
+    -------
+    Bridge
+
+    Raises
+    ------
+    InputError
+        If the noise is below 1e-6 of the squared distances in a gap, or a parameter is out of range.
+    ConvergenceError
+        If a gap misses its tolerance; its `solution` is what was reached.
+
+    Examples
+    --------
+    >>> import ensembles
+    >>> series = ensembles.SnapshotSeries.from_arrays([0.0, 2.0], [[0.0, 1.0], [0.5, 2.0, 3.0]])
+    >>> bridge = ensembles.fit_bridge(series, ensembles.Brownian(diffusion=0.43))
+    >>> bridge.coupling(0).matrix().sum(axis=1).round(6).tolist()
+    [0.5, 0.5]
+    """
+    if not isinstance(prior, LinearGaussianPrior):
+        raise checks.InputError(
+            f"prior must be a prior of this package; it is {type(prior).__name__}; use Brownian or OrnsteinUhlenbeck"
+        )
+    solutions = []
+    for k in range(len(series.times) - 1):
+        solution = _solve_gap(series, prior, k, tolerance, sweep_limit, start, observe)
+        if solution.outcome is not Outcome.CONVERGED:
+            message = (
+                f"the bridge did not converge between t = {series.times[k]:g} and t = {series.times[k + 1]:g}; "
+                f"{solution.message}"
+            )
+            if solution.outcome is Outcome.UNREACHABLE or not allow_unconverged:
+                raise ConvergenceError(message, solution)
+            warnings.warn(message, RuntimeWarning, stacklevel=2)
+        solutions.append(solution)
+    return Bridge(series, prior, tuple(solutions), float(tolerance))
+
+
+def _solve_gap(
+    series: SnapshotSeries,
+    prior: LinearGaussianPrior,
+    k: int,
+    tolerance: float,
+    sweep_limit: int,
+    start: Bridge | None,
+    observe: Callable[[int, State], bool | None] | None,
+) -> Solution:
+    transition = prior.transition(float(series.times[k + 1] - series.times[k]), series.dimension)
+    u = transition.whiten_sources(series.clouds[k])
+    v = transition.whiten_targets(series.clouds[k + 1])
+    weights = (series.weights[k], series.weights[k + 1])
+    _require_enough_noise(u, v, weights, prior, series, k)
+
+    def watch(state: State) -> bool | None:
+        return observe(k, state) if observe is not None else None
+
+    return solve(
+        gaussian_kernel(u, v),
+        weights,
+        tolerance=tolerance,
+        sweep_limit=sweep_limit,
+        start=_start(u, v, weights, transition, start, series, k),
+        observe=watch,
+    )
+
+
+def _start(
+    u: np.ndarray,
+    v: np.ndarray,
+    weights: tuple[np.ndarray, np.ndarray],
+    transition: Transition,
+    warm: Bridge | None,
+    series: SnapshotSeries,
+    k: int,
+) -> Start | tuple[np.ndarray, np.ndarray]:
+    if warm is not None:
+        counts = [len(cloud) for cloud in warm.series.clouds]
+        if counts != [len(cloud) for cloud in series.clouds] or warm.series.dimension != series.dimension:
+            raise checks.InputError(
+                f"start is a bridge through other snapshots; they hold {counts} particles where "
+                f"{[len(cloud) for cloud in series.clouds]} are needed; start from a fit of the same snapshots"
+            )
+        old = warm.gaps[k].transition
+        ratio = float(np.exp(2.0 * (transition.log_normaliser - old.log_normaliser) / series.dimension))
+        if 1.0 / _WARM_RATIO <= ratio <= _WARM_RATIO:
+            # Potentials times noise variance are lengths², nearly the same at neighbouring noise levels.
+            solution = warm.solutions[k]
+            return solution.log_f * ratio, solution.log_g * ratio
+
+    def closed_form(scale: float) -> tuple[np.ndarray, np.ndarray]:
+        root = np.sqrt(scale)
+        return gaussian_potentials(u / root, v / root, *weights)
+
+    return closed_form
+
+
+def _require_enough_noise(
+    u: np.ndarray,
+    v: np.ndarray,
+    weights: tuple[np.ndarray, np.ndarray],
+    prior: LinearGaussianPrior,
+    series: SnapshotSeries,
+    k: int,
+) -> None:
+    """Refuse noise below 1e-6 of the mean squared distance, and name the smallest diffusion that works."""
+    a, b = weights
+    mean_u, mean_v = a @ u, b @ v
+    squared = float(
+        a @ ((u - mean_u) ** 2).sum(axis=1) + b @ ((v - mean_v) ** 2).sum(axis=1) + ((mean_u - mean_v) ** 2).sum()
+    )
+    if squared <= _LARGEST_RATIO:
+        return
+    factor = squared / _LARGEST_RATIO
+    diffusion = prior.diffusion_matrix(series.dimension)
+    smallest = diffusion * factor
+    uniform = np.array_equal(diffusion, diffusion[0, 0] * np.eye(series.dimension))
+    named = f"{smallest[0, 0]:.3g}" if uniform else f"{np.diag(smallest).tolist()} on the diagonal"
+    raise checks.InputError(
+        f"the noise is too small for the displacement between t = {series.times[k]:g} and t = {series.times[k + 1]:g}; "
+        f"its variance is {1.0 / squared:.3g} of the mean squared distance and at least {1.0 / _LARGEST_RATIO:g} is needed; "
+        f"the smallest usable diffusion here is {named} ({factor:.3g} times the one given)"
+    )

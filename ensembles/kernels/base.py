@@ -1,0 +1,79 @@
+"""The contract of a kernel: what the solver and the bridge ask of k_ij > 0.
+
+With log-weights w, the one primitive is ``log_sum(w)_i = log Σ_j exp(w_j) k_ij``. The fused `sweep` gives the row sums
+and the column sums of a coupling while reading the kernel once. Nothing here knows weights, potentials' meaning or priors.
+
+To add a kernel, you must
+1. inherit `Kernel` and give every abstract method (a kernel between points gives `at_scale` too),
+2. keep results independent of the number of threads (fixed blocks, fixed order of summation),
+3. list it in `kernels/choose.py`, the only place with thresholds.
+tests/test_kernels.py runs every law on every listed kernel.
+"""
+
+from __future__ import annotations
+
+from abc import ABC, abstractmethod
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.sparse import csr_matrix
+
+__all__ = ["Kernel", "Sweep"]
+
+
+@dataclass(frozen=True)
+class Sweep:
+    """One pass over the kernel at potentials (f, g), before and after the update of f.
+
+    Attributes
+    ----------
+    log_f : (n,) the updated f - ω (row_excess).
+    row_excess : (n,) log Σ_j exp(f_i + q_j) k_ij: 0 where the row sum of the incoming coupling is right.
+    column_log_sums : (m,) log Σ_i exp(log a_i + log_f_i) k_ij with the updated f.
+    """
+
+    log_f: np.ndarray
+    row_excess: np.ndarray
+    column_log_sums: np.ndarray
+
+
+class Kernel(ABC):
+    """A positive n by m matrix k that need not exist in memory. See the module's docstring to add one."""
+
+    shape: tuple[int, int]
+
+    @abstractmethod
+    def log_sum_targets(self, log_weights: np.ndarray) -> np.ndarray:
+        """log Σ_j exp(log_weights_j) k_ij for every source i; log_weights (m,), result (n,)."""
+
+    @abstractmethod
+    def log_sum_sources(self, log_weights: np.ndarray) -> np.ndarray:
+        """log Σ_i exp(log_weights_i) k_ij for every target j; log_weights (n,), result (m,)."""
+
+    @abstractmethod
+    def sweep(self, log_f: np.ndarray, q: np.ndarray, log_a: np.ndarray, relaxation: float) -> Sweep:
+        """Row sums, the relaxed update of f, and the column sums with it; q = log b + g (m,). Reads the kernel once."""
+
+    @abstractmethod
+    def entries(self, p: np.ndarray, q: np.ndarray, cutoff: float, limit: int) -> csr_matrix | None:
+        """Sparse exp(p_i + q_j) k_ij above `cutoff`, or None if there are more than `limit` of them; p (n,), q (m,)."""
+
+    @abstractmethod
+    def restrict(self, rows: np.ndarray, columns: np.ndarray) -> Kernel:
+        """The kernel between some sources and some targets, by their row numbers."""
+
+    @abstractmethod
+    def nearest_costs(self) -> np.ndarray:
+        """min_i -log k_ij for every target j, shape (m,)."""
+
+    @abstractmethod
+    def mean_cost(self) -> float:
+        """Mean of -log k_ij over finite entries, the size of the problem in units of the noise."""
+
+    @abstractmethod
+    def diameter_bound(self) -> float:
+        """A rigorous upper bound on Birkhoff's projective diameter of k."""
+
+    def at_scale(self, scale: float) -> Kernel:
+        """The kernel k^(1/scale): the same costs at `scale` times the noise variance."""
+        raise NotImplementedError

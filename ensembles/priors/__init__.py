@@ -1,0 +1,1 @@
+"""Prior dynamics: linear stochastic differential equations with exact transitions."""

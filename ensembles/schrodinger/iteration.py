@@ -1,0 +1,127 @@
+"""The iteration as a stream of states: noise ladder, over-relaxed sweeps, second-order finish.
+
+One state follows every pass over the kernel, so a caller shows progress, stops early, or keeps the last state at will.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..kernels.base import Kernel
+from .newton import newton_states
+from .relaxation import RelaxationControl
+from .solution import State
+
+__all__ = ["Start", "Strategy", "solver_states", "sweep_states"]
+
+Start = Callable[[float], tuple[np.ndarray, np.ndarray]]
+
+
+@dataclass(frozen=True)
+class Strategy:
+    """What the iteration may use; each part earns its place in `scripts/benchmark`.
+
+    Attributes
+    ----------
+    ladder_factor : ratio of successive noise variances on the way down to the problem's own.
+    ladder_top : mean cost at the top of the ladder; above it the kernel is too sharp to start on.
+    level_sweeps, level_error : a level above the last ends after that many sweeps, or at that error.
+    relaxation : whether sweeps are over-relaxed.
+    newton : whether second-order steps are taken.
+    newton_after : predicted further sweeps beyond which they are taken.
+    entry_limit : entries the sparsified coupling of a second-order step may have.
+    """
+
+    ladder_factor: float = 4.0
+    ladder_top: float = 8.0
+    level_sweeps: int = 12
+    level_error: float = 0.02
+    relaxation: bool = True
+    newton: bool = True
+    newton_after: float = 60.0
+    entry_limit: int = 60_000_000
+
+
+def ladder(mean_cost: float, strategy: Strategy) -> list[float]:
+    """Noise variances from the top of the ladder down to 1, in units of the problem's own."""
+    levels = int(np.ceil(np.log(max(mean_cost / strategy.ladder_top, 1.0)) / np.log(strategy.ladder_factor)))
+    return [strategy.ladder_factor**k for k in range(levels, -1, -1)]
+
+
+def sweep_states(
+    kernel: Kernel, log_a: np.ndarray, log_b: np.ndarray, state: State, control: RelaxationControl, relaxation: bool
+) -> Iterator[State]:
+    """Sinkhorn sweeps without end from the potentials of `state`; one pass over the kernel each.
+
+    f ← f - ω log(row sum / a), then g ← g - ω log(column sum / b), each with the other's newest value; ω = 1 is the plain
+    Sinkhorn iteration. The state's errors belong to its own potentials: f after the update and g before it.
+    """
+    a, b = np.exp(log_a), np.exp(log_b)
+    log_f, log_g, sweeps = state.log_f, state.log_g, state.sweep
+    while True:
+        factor = control.factor if relaxation else 1.0
+        sweep = kernel.sweep(log_f, log_b + log_g, log_a, factor)
+        residual = log_g + sweep.column_log_sums
+        sweeps += 1
+        with np.errstate(over="ignore"):
+            row_error = float(a @ np.abs(np.expm1(sweep.row_excess + sweep.log_f - log_f)))
+            column_error = float(b @ np.abs(np.expm1(residual)))
+        yield State(
+            sweeps, "sweep", state.scale, sweep.log_f, log_g, row_error, column_error,
+            factor * float(np.ptp(residual)), factor,
+        )  # fmt: skip
+        log_f, log_g = sweep.log_f, log_g - factor * residual
+        control.observe(max(row_error, column_error))
+
+
+def solver_states(
+    kernel: Kernel, weights: tuple[np.ndarray, np.ndarray], tolerance: float, start: Start, strategy: Strategy
+) -> Iterator[State]:
+    """States down the ladder to the first one at the problem's own noise with error ≤ tolerance; never ends before.
+
+    `weights` are positive and sum to 1; `start(scale)` gives potentials at the top of the ladder.
+    """
+    log_a, log_b = np.log(weights[0]), np.log(weights[1])
+    scales = ladder(kernel.mean_cost(), strategy)
+    log_f, log_g = start(scales[0])
+    state = State(0, "start", scales[0], log_f, log_g, np.inf, np.inf, np.inf, 1.0)
+    for scale in scales:
+        ratio = state.scale / scale
+        state = State(
+            state.sweep, "ladder", scale, state.log_f * ratio, state.log_g * ratio, np.inf, np.inf, np.inf, 1.0
+        )
+        scaled = kernel if scale == 1.0 else kernel.at_scale(scale)
+        last = scale == 1.0
+        goal = tolerance if last else max(strategy.level_error, tolerance)
+        for state in _level_states(scaled, (log_a, log_b), state, goal, strategy, last):
+            yield state
+
+
+def _level_states(
+    kernel: Kernel,
+    log_weights: tuple[np.ndarray, np.ndarray],
+    state: State,
+    goal: float,
+    strategy: Strategy,
+    last: bool,
+) -> Iterator[State]:
+    """States at one noise, until the goal is met or (above the last level) the sweeps of a level are used up."""
+    begun = state.sweep
+    second_order = strategy.newton
+    while True:
+        control = RelaxationControl()
+        for state in sweep_states(kernel, *log_weights, state, control, strategy.relaxation):
+            yield state
+            if state.error <= goal or (not last and state.sweep - begun >= strategy.level_sweeps):
+                return
+            if second_order and control.sweeps_to(state.error, goal) > strategy.newton_after and control.settled:
+                break
+        for state in newton_states(kernel, *log_weights, state, strategy.entry_limit):
+            yield state
+            if state.error <= goal:
+                return
+        # No second-order step helped, or the coupling is too dense for one: sweep on.
+        second_order = False

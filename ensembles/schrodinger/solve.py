@@ -1,0 +1,189 @@
+"""Solve the static Schrödinger problem: run the iteration, judge its end, certify the result."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import replace
+
+import numpy as np
+
+from .. import checks
+from ..kernels.base import Kernel
+from ..kernels.dense import DenseKernel
+from .certificate import certify, scaling_exists
+from .iteration import Start, Strategy, solver_states
+from .solution import Certificate, Outcome, Solution, State
+
+__all__ = ["SWEEP_LIMIT", "solve"]
+
+SWEEP_LIMIT = 20_000
+_UNRESOLVED_COST = 1e12  # at this cost the exponent is rounded to 2e-4: the kernel itself is no longer known
+_PATIENCE = 1_000  # sweeps without a new best error by 1 % before the run counts as stalled
+_SUPPORT_ENTRIES = 200_000  # entries up to which the existence of a scaling is decided by linear programming
+
+
+def solve(
+    kernel: Kernel,
+    weights: tuple[np.ndarray, np.ndarray],
+    *,
+    tolerance: float = 1e-6,
+    start: Start | tuple[np.ndarray, np.ndarray] | None = None,
+    sweep_limit: int = SWEEP_LIMIT,
+    strategy: Strategy | None = None,
+    observe: Callable[[State], bool | None] | None = None,
+) -> Solution:
+    """Find f, g with π_ij = a_i b_j exp(f_i + g_j) k_ij of row sums a and column sums b.
+
+    Parameters
+    ----------
+    kernel : Kernel of shape (n, m).
+    weights : a (n,) and b (m,), non-negative; each is divided by its sum.
+    tolerance : largest L1 error of either marginal.
+    start : potentials (n,), (m,) to start from at the problem's own noise, or a function of the noise scale that gives
+        them at the top of the ladder; zeros by default.
+    sweep_limit : passes over the kernel.
+    strategy : what the iteration may use.
+    observe : called with every `State`; a true return stops the run, which then counts as having met its limit.
+
+    Returns
+    -------
+    Solution : always with its outcome and certificate; a coupling that misses the tolerance says so.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from ensembles.kernels.dense import DenseKernel
+    >>> half = np.array([0.5, 0.5])
+    >>> solution = solve(DenseKernel(np.log([[1.0, 0.5], [0.5, 1.0]])), (half, half))
+    >>> solution.outcome.value
+    'converged'
+    """
+    tolerance = checks.positive_number(tolerance, "tolerance", "give the L1 error allowed, such as 1e-6")
+    a = checks.weights(weights[0], kernel.shape[0], "source weights")
+    b = checks.weights(weights[1], kernel.shape[1], "target weights")
+    rows, columns = np.flatnonzero(a), np.flatnonzero(b)
+    reduced = kernel
+    if rows.size < a.size or columns.size < b.size:
+        reduced = kernel.restrict(rows, columns)
+    pair = (a[rows] / a.sum(), b[columns] / b.sum())
+    unreached = _unreached(reduced, pair)
+    if unreached is not None:
+        return _refused(kernel, tolerance, tuple(int(columns[j]) for j in unreached))
+
+    run = _Run(tolerance, sweep_limit, observe)
+    begin = _restricted_start(start, kernel.shape, rows, columns)
+    if isinstance(start, tuple):
+        strategy = _without_ladder(strategy or Strategy())
+    for state in solver_states(reduced, pair, tolerance, begin, strategy or Strategy()):
+        if run.ends(state):
+            break
+    certificate = certify(
+        reduced, (np.log(pair[0]), np.log(pair[1])), (state.log_f, state.log_g), run.contraction, tolerance
+    )
+    outcome = run.outcome
+    if outcome is Outcome.CONVERGED and certificate.marginal_error > tolerance:
+        outcome = Outcome.STALLED
+    log_f, log_g = _extended(kernel, (a, b), rows, columns, state)
+    shift = 0.5 * (pair[1] @ log_g[columns] - pair[0] @ log_f[rows])
+    return Solution(log_f + shift, log_g - shift, state.sweep, outcome, certificate, np.array(run.history))
+
+
+class _Run:
+    """Judges the states of one run: goal, limit, stall; keeps the history and the contraction of plain sweeps."""
+
+    def __init__(self, tolerance: float, limit: int, observe: Callable[[State], bool | None] | None) -> None:
+        self.tolerance, self.limit, self.observe = tolerance, limit, observe
+        self.outcome = Outcome.ITERATION_LIMIT
+        self.history: list[tuple[float, float, float, float]] = []
+        self.contraction = float("nan")
+        self._last: State | None = None
+        self._best, self._best_at = np.inf, 0
+
+    def ends(self, state: State) -> bool:
+        self.history.append((state.scale, state.row_error, state.column_error, state.hilbert_step))
+        last, self._last = self._last, state
+        if last and last.stage == state.stage == "sweep" and last.relaxation == state.relaxation == 1.0:
+            if last.scale == state.scale == 1.0 and last.hilbert_step > 1e-9:
+                self.contraction = state.hilbert_step / last.hilbert_step
+        if self.observe is not None and self.observe(state):
+            return True
+        if state.scale == 1.0 and state.error <= self.tolerance:
+            self.outcome = Outcome.CONVERGED
+            return True
+        if state.scale != 1.0 or state.error < 0.99 * self._best:
+            self._best, self._best_at = (np.inf if state.scale != 1.0 else state.error), state.sweep
+        elif state.sweep - self._best_at > _PATIENCE:
+            self.outcome = Outcome.STALLED
+            return True
+        return state.sweep >= self.limit
+
+
+def _unreached(kernel: Kernel, weights: tuple[np.ndarray, np.ndarray]) -> np.ndarray | None:
+    """Target rows that stop the solve: no source reaches them, or the zeros of the kernel admit no scaling at all."""
+    costs = kernel.nearest_costs()
+    far = np.flatnonzero(~(costs < _UNRESOLVED_COST))
+    if far.size:
+        return far
+    if isinstance(kernel, DenseKernel) and kernel.log_kernel.size <= _SUPPORT_ENTRIES:
+        zeros = np.isneginf(kernel.log_kernel)
+        if zeros.any() and not scaling_exists(kernel.log_kernel, *weights):
+            return np.flatnonzero(zeros.any(axis=0))
+    return None
+
+
+def _refused(kernel: Kernel, tolerance: float, unreached: tuple[int, ...]) -> Solution:
+    nothing = float("nan")
+    certificate_values = [nothing] * 8
+    return Solution(
+        np.full(kernel.shape[0], nothing),
+        np.full(kernel.shape[1], nothing),
+        0,
+        Outcome.UNREACHABLE,
+        Certificate(*certificate_values, tolerance=tolerance),
+        np.empty((0, 4)),
+        unreached,
+    )
+
+
+def _without_ladder(strategy: Strategy) -> Strategy:
+    return replace(strategy, ladder_top=np.inf)
+
+
+def _restricted_start(
+    start: Start | tuple[np.ndarray, np.ndarray] | None,
+    shape: tuple[int, int],
+    rows: np.ndarray,
+    columns: np.ndarray,
+) -> Start:
+    def begin(scale: float) -> tuple[np.ndarray, np.ndarray]:
+        if start is None:
+            return np.zeros(rows.size), np.zeros(columns.size)
+        log_f, log_g = start if isinstance(start, tuple) else start(scale)
+        for name, values, size in (("log_f", log_f, shape[0]), ("log_g", log_g, shape[1])):
+            if np.shape(values) != (size,):
+                raise checks.InputError(
+                    f"start potentials do not fit; {name} has shape {np.shape(values)} for {size} particle(s); "
+                    "start from a fit of the same snapshots"
+                )
+        return np.array(log_f[rows]), np.array(log_g[columns])
+
+    return begin
+
+
+def _extended(
+    kernel: Kernel, weights: tuple[np.ndarray, np.ndarray], rows: np.ndarray, columns: np.ndarray, state: State
+) -> tuple[np.ndarray, np.ndarray]:
+    """Potentials at every row: those of weight 0 by the formula that the others satisfy."""
+    log_f, log_g = state.log_f, state.log_g
+    a, b = weights[0] / weights[0].sum(), weights[1] / weights[1].sum()
+    if rows.size < a.size:
+        p = np.log(b[columns]) + log_g
+        full = -kernel.restrict(np.arange(a.size), columns).log_sum_targets(p)
+        full[rows] = log_f
+        log_f = full
+    if columns.size < b.size:
+        p = np.log(a[rows]) + state.log_f
+        full = -kernel.restrict(rows, np.arange(b.size)).log_sum_sources(p)
+        full[columns] = log_g
+        log_g = full
+    return log_f, log_g
