@@ -5,6 +5,7 @@ Everything is written beside its destination under a hidden name ending in ``.pa
 
 from __future__ import annotations
 
+import importlib.util
 import json
 import os
 import secrets
@@ -26,12 +27,14 @@ __all__ = [
     "atomic_path",
     "output_folder",
     "require_free_folder",
+    "require_table_format",
     "write_bytes",
     "write_json",
     "write_table",
     "write_text",
 ]
 
+_TABLE_FORMATS = (".csv", ".tsv", ".parquet")
 MARKER = "summary.json"
 """The file by which a folder is known as an earlier output, so that it may be replaced."""
 
@@ -111,6 +114,20 @@ def write_json(path: str | os.PathLike[str], content: Any) -> None:
     write_text(path, text + "\n")
 
 
+def require_table_format(suffix: str) -> None:
+    """Refuse a table format that cannot be written here, before any work is done for it.
+
+    Raises
+    ------
+    InputError
+        If it is not .csv, .tsv or .parquet, or Parquet is asked for and pyarrow is not installed.
+    """
+    if suffix not in _TABLE_FORMATS:
+        raise checks.unknown_name("table format", suffix, _TABLE_FORMATS)
+    if suffix == ".parquet" and importlib.util.find_spec("pyarrow") is None:
+        raise checks.InputError("Parquet needs pyarrow; it is not installed; install ensembles[parquet], or write CSV")
+
+
 def write_table(path: str | os.PathLike[str], frame: pd.DataFrame) -> None:
     """Write a data frame as CSV, TSV or Parquet, by the suffix of `path`.
 
@@ -120,15 +137,7 @@ def write_table(path: str | os.PathLike[str], frame: pd.DataFrame) -> None:
         If the suffix is another one, or Parquet is asked for and pyarrow is not installed.
     """
     suffix = Path(path).suffix
-    if suffix not in (".csv", ".tsv", ".parquet"):
-        raise checks.unknown_name("table format", suffix, [".csv", ".tsv", ".parquet"])
-    if suffix == ".parquet":
-        try:
-            import pyarrow  # noqa: F401
-        except ImportError:
-            raise checks.InputError(
-                "Parquet needs pyarrow; it is not installed; install ensembles[parquet], or write CSV"
-            ) from None
+    require_table_format(suffix)
     with atomic_path(path) as temporary:
         if suffix == ".parquet":
             frame.to_parquet(temporary, index=False)

@@ -1,14 +1,18 @@
 """The command line from end to end: what it prints where, its exit status, and what it leaves behind."""
 
+import json
+import shutil
 import subprocess
 import sys
 from pathlib import Path
 
+import pandas as pd
 import pytest
+from numpy.testing import assert_allclose
 from typer.testing import CliRunner
 
 import ensembles
-from ensembles import cli
+from ensembles import cli, writing
 from ensembles.checks import ComputationError
 
 SMALL = """\
@@ -286,3 +290,136 @@ def test_bad_weights_are_refused(small, values, expected):
     (small.parent / "points.csv").write_text(table(rows, "t,x,y,w"), encoding="utf-8")
     small.write_text(SMALL.replace('time = "t"', 'time = "t"\nweight = "w"'), encoding="utf-8")
     assert expected in refused(small, "solve")
+
+
+# ---- solve ------------------------------------------------------------------------------------------------------
+
+# path_times = 5 between 0 and 5, and the snapshots themselves
+SMALL_TIMES = {0.0, 1.25, 2.0, 2.5, 3.75, 5.0}
+TABLES = {"links.csv", "paths.csv", "clouds.csv", "drift.csv", "moments.csv"}
+
+
+@pytest.fixture(scope="module")
+def solved(tmp_path_factory):
+    """A small study, solved once; its folder holds the study and `out`."""
+    folder = tmp_path_factory.mktemp("solved")
+    (folder / "points.csv").write_text(table(ROWS), encoding="utf-8")
+    (folder / "study.toml").write_text(SMALL, encoding="utf-8")
+    found = run("solve", folder / "study.toml", "--out", folder / "out")
+    assert found.exit_code == 0, (found.stderr, found.exception)
+    assert found.stderr == ""
+    return folder
+
+
+def test_solve_writes_everything_and_nothing_else(solved):
+    assert {path.name for path in solved.iterdir()} == {"points.csv", "study.toml", "out"}
+    names = {path.name for path in (solved / "out").iterdir()}
+    assert names >= TABLES | {"summary.json", "study.toml", "report.html"}
+    assert len([name for name in names if name.endswith(".png")]) >= 5
+    assert (solved / "out" / "study.toml").read_text(encoding="utf-8") == SMALL
+
+
+def test_the_summary_says_what_was_done(solved):
+    summary = json.loads((solved / "out" / "summary.json").read_text(encoding="utf-8"))
+    assert summary["program"] == "ensembles"
+    assert summary["versions"]["ensembles"] == ensembles.__version__
+    assert summary["study"]["seed"] == 0 and summary["study"]["title"] == "small"
+    series = ensembles.read_snapshots(solved / "points.csv", time="t", position=["x", "y"])
+    assert summary["study"]["data"]["fingerprint"] == series.fingerprint()
+    assert len(summary["notes"]) >= 2  # a verdict on the noise of each gap
+
+
+def test_the_tables_hold_what_the_study_asks_for(solved):
+    out = solved / "out"
+    paths = pd.read_csv(out / "paths.csv")
+    assert paths["path"].nunique() == 6
+    assert SMALL_TIMES == set(paths["time"]) and set(paths.columns) >= {"x", "y"}
+    assert pd.read_csv(out / "clouds.csv")["time"].nunique() == 2
+    links = pd.read_csv(out / "links.csv")
+    series = ensembles.read_snapshots(solved / "points.csv", time="t", position=["x", "y"])
+    bridge = ensembles.fit_bridge(series, ensembles.Brownian(diffusion=0.5))
+    assert len(links) == 2 * 3 + 2 * 2  # two links for each source of the two gaps
+    expected = pd.concat([bridge.coupling(gap).top_links(2) for gap in range(2)])
+    assert_allclose(links["probability"], expected["probability"], rtol=1e-9)
+    moments = pd.read_csv(out / "moments.csv")
+    assert len(moments) == len(SMALL_TIMES)
+
+
+def test_the_seed_decides(solved):
+    for name, seed in (("same", 0), ("other", 1)):
+        found = run("solve", solved / "study.toml", "--out", solved / "seeds" / name, "--seed", seed)
+        assert found.exit_code == 0, found.stderr
+    first, same, other = (solved / name for name in ("out", "seeds/same", "seeds/other"))
+    for name in TABLES:
+        assert (first / name).read_bytes() == (same / name).read_bytes()
+    assert (first / "paths.csv").read_bytes() != (other / "paths.csv").read_bytes()
+    assert (first / "links.csv").read_bytes() == (other / "links.csv").read_bytes()
+    assert json.loads((other / "summary.json").read_text(encoding="utf-8"))["study"]["seed"] == 1
+    shutil.rmtree(solved / "seeds")
+
+
+def test_paths_as_parquet(small):
+    small.write_text(SMALL + 'format = "parquet"\n', encoding="utf-8")
+    assert run("solve", small, "--out", small.parent / "out").exit_code == 0
+    assert pd.read_parquet(small.parent / "out" / "paths.parquet")["path"].nunique() == 6
+    assert not (small.parent / "out" / "paths.csv").exists()
+
+
+def test_an_existing_folder_is_kept_without_force_and_replaced_with_it(small):
+    out = small.parent / "out"
+    assert run("solve", small, "--out", out).exit_code == 0
+    stamp = (out / "paths.csv").read_bytes()
+    again = run("solve", small, "--out", out, "--seed", 5)
+    assert again.exit_code == 2 and "the output folder exists" in again.stderr and "--force" in again.stderr
+    assert (out / "paths.csv").read_bytes() == stamp
+    (out / "left over.txt").write_text("old")
+    assert run("solve", small, "--out", out, "--seed", 5, "--force").exit_code == 0
+    assert (out / "paths.csv").read_bytes() != stamp
+    assert not (out / "left over.txt").exists()
+    assert {path.name for path in small.parent.iterdir()} == {"points.csv", "study.toml", "out"}
+
+
+def test_force_does_not_replace_the_folder_of_the_data(small):
+    found = run("solve", small, "--out", small.parent, "--force")
+    assert found.exit_code == 2 and "something else than an earlier output" in found.stderr
+    assert files_in(small.parent) == {"points.csv", "study.toml"}
+
+
+@pytest.mark.parametrize("error", [RuntimeError("in the middle"), KeyboardInterrupt()])
+def test_a_failure_in_the_middle_leaves_nothing(small, monkeypatch, error):
+    def fail(*arguments, **options):
+        raise error
+
+    monkeypatch.setattr(writing, "write_json", fail)  # the last thing that is written
+    found = run("solve", small, "--out", small.parent / "out")
+    assert found.exit_code == (130 if isinstance(error, KeyboardInterrupt) else 1)
+    assert files_in(small.parent) == {"points.csv", "study.toml"}
+
+
+def test_too_few_sweeps_end_with_1(small):
+    small.write_text(SMALL + "[solve]\nsweeps = 1\ntolerance = 1e-14\n", encoding="utf-8")
+    found = run("solve", small, "--out", small.parent / "out")
+    assert found.exit_code == 1
+    assert "computation failed: the bridge did not converge between t = 0 and t = 2; iteration limit" in found.stderr
+    assert files_in(small.parent) == {"points.csv", "study.toml"}
+
+
+def test_noise_that_is_far_too_small_names_the_smallest_usable(small):
+    small.write_text(SMALL.replace("diffusion = 0.5", "diffusion = 1e-9"), encoding="utf-8")
+    message = refused(small, "solve")
+    assert "the noise is too small" in message and "the smallest usable diffusion here is" in message
+
+
+def test_one_particle_is_solved_with_a_note(small):
+    (small.parent / "points.csv").write_text(table([*ROWS, (9, 3.0, 3.0)]), encoding="utf-8")
+    found = run("solve", small, "--out", small.parent / "out")
+    assert found.exit_code == 0, found.stderr
+    summary = json.loads((small.parent / "out" / "summary.json").read_text(encoding="utf-8"))
+    assert any("t = 9 has one particle" in note for note in summary["notes"])
+
+
+def test_nothing_but_the_result_line_goes_into_a_pipe(small):
+    program = [sys.executable, "-m", "ensembles", "solve", str(small), "--out", "out"]
+    found = subprocess.run(program, capture_output=True, text=True, cwd=small.parent)
+    assert (found.returncode, found.stderr) == (0, "")
+    assert found.stdout.startswith("Wrote out: ") and len(found.stdout.splitlines()) == 1

@@ -1,0 +1,148 @@
+"""Fit the bridge of a study, and write everything that came out of it into one folder."""
+
+from __future__ import annotations
+
+import importlib.metadata
+import platform
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from . import __version__, writing
+from .overview import verdicts
+from .study import Study
+
+if TYPE_CHECKING:
+    from .bridges.bridge import Bridge
+    from .bridges.paths import Paths
+    from .schrodinger.solution import State
+
+__all__ = ["fit_study", "intermediate_times", "write_results"]
+
+_LIBRARIES = ("numpy", "scipy", "pandas", "matplotlib", "numba")
+_LARGEST_CLOUD = 2000  # points of an intermediate cloud: enough for a picture and a table one can open
+
+
+def fit_study(study: Study, *, say: Callable[[str], None]) -> Bridge:
+    """Read the snapshots of a study and fit their bridge.
+
+    Parameters
+    ----------
+    study : what `study.read_study` gave.
+    say : told what is being done, for a progress line.
+
+    Raises
+    ------
+    InputError
+        If the data or the prior cannot be used.
+    ComputationError
+        If a gap does not reach the tolerance.
+    """
+    from .bridges.fit import fit_bridge
+    from .schrodinger.solve import SWEEP_LIMIT
+
+    writing.require_table_format(f".{study.output.format}")
+    say("Reading the snapshots")
+    series = study.read_series()
+
+    def observe(gap: int, state: State) -> None:
+        say(f"Gap {gap + 1} of {len(series) - 1}: sweep {state.sweep}, L1 error {state.error:.2g}")
+
+    return fit_bridge(
+        series,
+        study.build_prior(),
+        tolerance=study.solve.tolerance,
+        sweep_limit=study.solve.sweeps or SWEEP_LIMIT,
+        observe=observe,
+    )
+
+
+def intermediate_times(times: np.ndarray, count: int) -> np.ndarray:
+    """Share `count` times among the gaps by their durations, evenly inside each and never at a snapshot.
+
+    At a snapshot the bridge is a set of atoms, which has no density.
+
+    Examples
+    --------
+    >>> intermediate_times(np.array([0.0, 6.0, 12.0]), 5).tolist()
+    [1.5, 3.0, 4.5, 8.0, 10.0]
+    """
+    shares = count * np.diff(times) / (times[-1] - times[0])
+    counts = np.floor(shares).astype(int)
+    # Largest remainders; a stable sort gives ties to the earlier gap.
+    counts[np.argsort(counts - shares, kind="stable")[: count - counts.sum()]] += 1
+    inside = [np.linspace(start, end, n + 2)[1:-1] for start, end, n in zip(times, times[1:], counts)]
+    return np.concatenate(inside)
+
+
+def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say: Callable[[str], None]) -> list[str]:
+    """Write tables, pictures, the report page, a summary and a copy of the study file into `folder`.
+
+    Parameters
+    ----------
+    study, bridge : the study and what was fitted to it.
+    folder : an existing, empty folder.
+    seed : of every random number here; the study's own unless the command line gave another.
+    say : told what is being done.
+
+    Returns
+    -------
+    list of the names of the files written, sorted.
+    """
+    from .report.figures import save_figures
+    from .report.page import write_page
+
+    # One stream each: more paths do not change the clouds, and more clouds do not change the paths.
+    path_stream, cloud_stream, picture_stream = np.random.default_rng(seed).spawn(3)
+    snapshots = bridge.series.times
+    say("Drawing paths")
+    times = np.union1d(np.linspace(snapshots[0], snapshots[-1], study.output.path_times), snapshots)
+    paths = bridge.sample_paths(study.output.paths, times, rng=path_stream)
+    say("Writing tables")
+    _write_tables(study, bridge, paths, folder, cloud_stream)
+    say("Drawing pictures")
+    figures = save_figures(bridge, folder, paths=paths, rng=picture_stream)
+    summary = _summary(study, bridge, seed)
+    write_page(folder, summary, figures)
+    writing.write_text(folder / "study.toml", study.text)
+    # Last: the folder is known as a complete output by this file.
+    writing.write_json(folder / writing.MARKER, summary)
+    return sorted(path.name for path in folder.iterdir())
+
+
+def _write_tables(study: Study, bridge: Bridge, paths: Paths, folder: Path, rng: np.random.Generator) -> None:
+    from .report import tables
+
+    times = intermediate_times(bridge.series.times, study.output.intermediate)
+    count = min(int(bridge.series.counts.max()), _LARGEST_CLOUD)
+    clouds = [bridge.sample(t, count, rng) for t in times]
+    writing.write_table(folder / "links.csv", tables.links_table(bridge, study.output.links))
+    writing.write_table(folder / f"paths.{study.output.format}", tables.paths_table(bridge, paths))
+    writing.write_table(folder / "clouds.csv", tables.clouds_table(bridge, times, clouds))
+    writing.write_table(folder / "drift.csv", tables.drift_table(bridge, times, clouds))
+    writing.write_table(folder / "moments.csv", tables.moments_table(bridge, paths.times))
+
+
+def _summary(study: Study, bridge: Bridge, seed: int) -> dict[str, Any]:
+    from .report import tables
+
+    return {
+        "program": "ensembles",
+        "versions": {"ensembles": __version__, "python": platform.python_version(), **_versions()},
+        "study": {
+            "file": study.path.name,
+            "title": study.title,
+            "seed": seed,
+            "data": {"file": study.data.file, "fingerprint": bridge.series.fingerprint()},
+            "solve": study.solve.model_dump(),
+            "output": study.output.model_dump(),
+        },
+        **tables.summary(bridge),
+        "notes": [*bridge.series.notes(), *verdicts(bridge.series, bridge.prior)],
+    }
+
+
+def _versions() -> dict[str, str]:
+    return {name: importlib.metadata.version(name) for name in _LIBRARIES}
