@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, Annotated, Any, ParamSpec
 
 import typer
 from rich.console import Console
+from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 from rich.table import Table
 from rich.text import Text
 
@@ -76,14 +77,13 @@ def _reported(command: Callable[_Arguments, None]) -> Callable[_Arguments, None]
 
 
 @contextmanager
-def _progress() -> Iterator[Callable[[str], None]]:
-    """Yield a function that says on the terminal what is being done; in a pipe it says nothing."""
+def _progress() -> Iterator[Callable[[str, float], None]]:
+    """Yield a function of what is being done and the share that is done: a bar on the terminal, nothing in a pipe."""
     console = _errors()
-    if not console.is_terminal:
-        yield lambda message: None
-        return
-    with console.status("") as status:
-        yield lambda message: status.update(message)
+    columns = (BarColumn(), TimeElapsedColumn(), TextColumn("{task.description}", markup=False))
+    with Progress(*columns, console=console, transient=True, disable=not console.is_terminal) as progress:
+        task = progress.add_task("", total=1.0)
+        yield lambda message, done: progress.update(task, description=message, completed=done)
 
 
 def _print_frame(console: Console, title: str, frame: pd.DataFrame) -> None:
@@ -161,7 +161,6 @@ def solve(
     study = read_study(study_file)
     writing.require_free_folder(out, force=force)
     with _progress() as say:
-        say("Reading the snapshots")
         bridge = fit_study(study, say=say)
         with writing.output_folder(out, force=force) as folder:
             written = write_results(study, bridge, folder, seed=study.seed if seed is None else seed, say=say)

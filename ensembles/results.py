@@ -22,16 +22,18 @@ if TYPE_CHECKING:
 __all__ = ["fit_study", "intermediate_times", "write_results"]
 
 _LIBRARIES = ("numpy", "scipy", "pandas", "matplotlib", "numba")
+Say = Callable[[str, float], None]
+_SOLVING = 0.7  # share of the progress bar that the solver gets
 _LARGEST_CLOUD = 2000  # points of an intermediate cloud: enough for a picture and a table one can open
 
 
-def fit_study(study: Study, *, say: Callable[[str], None]) -> Bridge:
+def fit_study(study: Study, *, say: Say) -> Bridge:
     """Read the snapshots of a study and fit their bridge.
 
     Parameters
     ----------
     study : what `study.read_study` gave.
-    say : told what is being done, for a progress line.
+    say : told what is being done and the share of all work done by then, for a progress bar.
 
     Raises
     ------
@@ -44,11 +46,12 @@ def fit_study(study: Study, *, say: Callable[[str], None]) -> Bridge:
     from .schrodinger.solve import SWEEP_LIMIT
 
     writing.require_table_format(f".{study.output.format}")
-    say("Reading the snapshots")
+    say("Reading the snapshots", 0.0)
     series = study.read_series()
+    gaps = len(series) - 1
 
     def observe(gap: int, state: State) -> None:
-        say(f"Gap {gap + 1} of {len(series) - 1}: sweep {state.sweep}, L1 error {state.error:.2g}")
+        say(f"Gap {gap + 1} of {gaps}: sweep {state.sweep}, L1 error {state.error:.2g}", _SOLVING * gap / gaps)
 
     return fit_bridge(
         series,
@@ -77,7 +80,7 @@ def intermediate_times(times: np.ndarray, count: int) -> np.ndarray:
     return np.concatenate(inside)
 
 
-def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say: Callable[[str], None]) -> list[str]:
+def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say: Say) -> list[str]:
     """Write tables, pictures, the report page, a summary and a copy of the study file into `folder`.
 
     Parameters
@@ -85,7 +88,7 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
     study, bridge : the study and what was fitted to it.
     folder : an existing, empty folder.
     seed : of every random number here; the study's own unless the command line gave another.
-    say : told what is being done.
+    say : told what is being done, as in `fit_study`.
 
     Returns
     -------
@@ -97,12 +100,12 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
     # One stream each: more paths do not change the clouds, and more clouds do not change the paths.
     path_stream, cloud_stream, picture_stream = np.random.default_rng(seed).spawn(3)
     snapshots = bridge.series.times
-    say("Drawing paths")
+    say("Drawing paths", _SOLVING)
     times = np.union1d(np.linspace(snapshots[0], snapshots[-1], study.output.path_times), snapshots)
     paths = bridge.sample_paths(study.output.paths, times, rng=path_stream)
-    say("Writing tables")
+    say("Writing tables", 0.75)
     _write_tables(study, bridge, paths, folder, cloud_stream)
-    say("Drawing pictures")
+    say("Drawing pictures", 0.85)
     figures = save_figures(bridge, folder, paths=paths, rng=picture_stream)
     summary = _summary(study, bridge, seed)
     write_page(folder, summary, figures)
