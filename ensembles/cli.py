@@ -6,6 +6,7 @@ Exit status: 0 done, 1 the computation failed and says why, 2 wrong usage or inp
 from __future__ import annotations
 
 import functools
+import io
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -170,4 +171,8 @@ def solve(
 
 def main(arguments: list[str] | None = None) -> Any:
     """Run the command line; ends the process with its exit status."""
+    for stream in (sys.stdout, sys.stderr):
+        # A terminal that knows no µ shows a question mark; it must not stop the run.
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")
     app(args=arguments, prog_name="ensembles")

@@ -1,6 +1,7 @@
 """The command line from end to end: what it prints where, its exit status, and what it leaves behind."""
 
 import json
+import os
 import shutil
 import subprocess
 import sys
@@ -88,6 +89,14 @@ def test_an_error_goes_to_stderr_without_a_traceback(tmp_path):
     assert found.returncode == 2
     assert found.stdout == ""
     assert found.stderr == "input error: study file not found; 'none.toml'; check its path\n"
+
+
+def test_a_terminal_without_greek_letters_is_no_reason_to_stop(small):
+    environment = {**os.environ, "PYTHONIOENCODING": "ascii"}
+    program = [sys.executable, "-m", "ensembles", "look", str(small)]
+    found = subprocess.run(program, capture_output=True, text=True, env=environment)
+    assert (found.returncode, found.stderr) == (0, "")
+    assert "x (?m)" in found.stdout
 
 
 def test_there_is_help_for_every_command():

@@ -160,7 +160,7 @@ def test_cells_branch():
             3,
             r"key in the wrong table; 'tolerance' stands in \[study\]; move it under \[solve\]",
         ),
-        ("diffusion = 0.43", "diffusion = 0.43\nrate = 1", 13, r"key of another prior; 'rate' does not belong to kind 'bro"),
+        ("0.43", "0.43\nrate = 1", 13, r"key of another prior; 'rate' does not belong to kind 'brownian'; remove it"),
         ("[study]", "[studdy]", 1, r"unknown table; 'studdy' \(did you mean 'study'\?\)"),
         ("seed = 7", "seed = 7.5", 3, r"wrong value; study.seed = 7.5; it should be a whole number"),
         ("seed = 7", "seed = -7", 3, r"wrong value; study.seed = -7; it should be greater than or equal to 0"),
