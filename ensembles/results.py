@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from .bridges.paths import Paths
     from .schrodinger.solution import State
 
-__all__ = ["fit_study", "intermediate_times", "write_results"]
+__all__ = ["fit_study", "write_results"]
 
 _LIBRARIES = ("numpy", "scipy", "pandas", "matplotlib", "numba")
 Say = Callable[[str, float], None]
@@ -62,24 +62,6 @@ def fit_study(study: Study, *, say: Say) -> Bridge:
     )
 
 
-def intermediate_times(times: np.ndarray, count: int) -> np.ndarray:
-    """Share `count` times among the gaps by their durations, evenly inside each and never at a snapshot.
-
-    At a snapshot the bridge is a set of atoms, which has no density.
-
-    Examples
-    --------
-    >>> intermediate_times(np.array([0.0, 6.0, 12.0]), 5).tolist()
-    [1.5, 3.0, 4.5, 8.0, 10.0]
-    """
-    shares = count * np.diff(times) / (times[-1] - times[0])
-    counts = np.floor(shares).astype(int)
-    # Largest remainders; a stable sort gives ties to the earlier gap.
-    counts[np.argsort(counts - shares, kind="stable")[: count - counts.sum()]] += 1
-    inside = [np.linspace(start, end, n + 2)[1:-1] for start, end, n in zip(times, times[1:], counts)]
-    return np.concatenate(inside)
-
-
 def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say: Say) -> list[str]:
     """Write tables, pictures, the report page, a summary and a copy of the study file into `folder`.
 
@@ -117,6 +99,7 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
 
 def _write_tables(study: Study, bridge: Bridge, paths: Paths, folder: Path, rng: np.random.Generator) -> None:
     from .report import tables
+    from .report.wording import intermediate_times
 
     times = intermediate_times(bridge.series.times, study.output.intermediate)
     count = min(int(bridge.series.counts.max()), _LARGEST_CLOUD)
@@ -143,7 +126,7 @@ def _summary(study: Study, bridge: Bridge, seed: int) -> dict[str, Any]:
             "output": study.output.model_dump(),
         },
         **tables.summary(bridge),
-        "notes": [*bridge.series.notes(), *verdicts(bridge.series, bridge.prior)],
+        "noise": list(verdicts(bridge.series, bridge.prior)),
     }
 
 
