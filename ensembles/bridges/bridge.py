@@ -220,6 +220,7 @@ class Bridge:
         return int(found[0]) if found.size else None
 
     def _gap_inside(self, t: float, what: str) -> Gap:
+        t = self._time(t)
         if self._snapshot_at(t) is not None:
             raise checks.InputError(
                 f"{what} does not exist at a snapshot; t = {t:g} is one, where the fitted population is a sum of atoms; "
@@ -228,14 +229,16 @@ class Bridge:
         return self.gaps[int(np.searchsorted(self.series.times, t)) - 1]
 
     def _gap_from(self, t: float, what: str) -> Gap:
-        if self._time(t) == self.series.times[-1]:
+        t = self._time(t)
+        if t == self.series.times[-1]:
             raise checks.InputError(
                 f"{what} does not exist at the last snapshot; t = {t:g}, where it grows without bound; ask at an earlier time"
             )
         return self.gaps[int(np.searchsorted(self.series.times, t, side="right")) - 1]
 
     def _gap_until(self, t: float, what: str) -> Gap:
-        if self._time(t) == self.series.times[0]:
+        t = self._time(t)
+        if t == self.series.times[0]:
             raise checks.InputError(
                 f"{what} does not exist at the first snapshot; t = {t:g}, where it grows without bound; ask at a later time"
             )

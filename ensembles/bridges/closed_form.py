@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 
 from .. import checks
-from ..priors.base import LinearGaussianPrior, Transition
+from ..priors.base import LinearGaussianPrior, Transition, require_prior
 from ..priors.pinned import pin, pinned_steps, square_root
 from ..schrodinger.gaussian_start import gaussian_curvature
 from .paths import Paths
@@ -183,9 +183,12 @@ def gaussian_bridge(
     >>> bridge.cross_covariance.round(12).tolist(), bridge.moments(0.5)[1].round(12).tolist()
     ([[0.5]], [[1.125]])
     """
+    require_prior(prior)
     checked = []
     for name, value in (("mean_start", mean_start), ("mean_end", mean_end)):
         mean = np.atleast_1d(checks.as_float_array(value, name))
+        if mean.ndim > 1 or mean.size == 0:
+            raise checks.InputError(f"{name} must be a number or d numbers; its shape is {mean.shape}; reshape it")
         checks.require_finite(mean, name)
         checked.append(mean)
     covariances = []

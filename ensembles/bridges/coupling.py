@@ -69,18 +69,20 @@ class Coupling:
         -------
         DataFrame
             source, target : row numbers in the two snapshots; probability : of that target given the source, so a
-            source's probabilities sum to at most 1; mass : the entry π_ij. Sources of weight 0 have mass 0.
+            source's probabilities sum to at most 1; mass : the entry π_ij. Sources of weight 0 have mass 0; targets of
+            weight 0 are never listed.
         """
         import pandas
 
         count = checks.whole_number(count, "count")
         targets, probability = self.kernel.top_targets(self.log_q, count)
         log_rows = self.log_p + self.kernel.log_sum_targets(self.log_q)
+        kept = targets.ravel() >= 0
         return pandas.DataFrame({
-            "source": np.repeat(np.arange(self.shape[0]), targets.shape[1]),
-            "target": targets.ravel(),
-            "probability": probability.ravel(),
-            "mass": (probability * np.exp(log_rows)[:, None]).ravel(),
+            "source": np.repeat(np.arange(self.shape[0]), targets.shape[1])[kept],
+            "target": targets.ravel()[kept],
+            "probability": probability.ravel()[kept],
+            "mass": (probability * np.exp(log_rows)[:, None]).ravel()[kept],
         })  # fmt: skip
 
     def expectation(self, values: np.ndarray) -> np.ndarray:

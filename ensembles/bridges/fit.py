@@ -10,7 +10,7 @@ import numpy as np
 
 from .. import checks
 from ..kernels.choose import gaussian_kernel
-from ..priors.base import LinearGaussianPrior, Transition
+from ..priors.base import LinearGaussianPrior, Transition, require_prior
 from ..schrodinger.gaussian_start import gaussian_potentials
 from ..schrodinger.iteration import Start
 from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
@@ -70,10 +70,7 @@ def fit_bridge(
     >>> bridge.coupling(0).matrix().sum(axis=1).round(6).tolist()
     [0.5, 0.5]
     """
-    if not isinstance(prior, LinearGaussianPrior):
-        raise checks.InputError(
-            f"prior must be a prior of this package; it is {type(prior).__name__}; use Brownian or OrnsteinUhlenbeck"
-        )
+    require_prior(prior)
     solutions = []
     for k in range(len(series.times) - 1):
         solution = _solve_gap(series, prior, k, tolerance, sweep_limit, start, observe)

@@ -91,7 +91,7 @@ def load_bridge(path: str | Path) -> Bridge:
     if not path.is_file():
         raise checks.InputError(f"no such file; {str(path)!r}; give the .npz that Bridge.save wrote")
     try:
-        with np.load(path, allow_pickle=False) as archive:
+        with open(path, "rb") as stream, np.lib.npyio.NpzFile(stream, allow_pickle=False) as archive:
             arrays = {name: archive[name] for name in archive.files}
     except (zipfile.BadZipFile, ValueError, OSError, EOFError, KeyError) as cause:
         raise checks.InputError(

@@ -18,7 +18,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.sparse import csr_matrix
 
-__all__ = ["Kernel", "Sweep"]
+__all__ = ["Kernel", "Sweep", "lost_columns"]
 
 
 @dataclass(frozen=True)
@@ -35,6 +35,19 @@ class Sweep:
     log_f: np.ndarray
     row_excess: np.ndarray
     column_log_sums: np.ndarray
+
+
+def lost_columns(sums: np.ndarray, log_factors: np.ndarray) -> np.ndarray:
+    """Numbers of the column sums of a fused sweep that over- or underflowed and must be summed again on their own.
+
+    An exponential below exp(-700) counts as 0 before it is multiplied by its row's factor, so a sum is trusted only if
+    it is 1e17 times what all the rows together can have lost. `log_factors` (n,), `sums` (m,).
+    """
+    most = float(np.max(log_factors))
+    with np.errstate(divide="ignore"):
+        floor = max(most - 700.0 + 40.0 + np.log(log_factors.size), -460.0)
+        trusted = (np.log(sums) > floor) & (sums < 1e200) & (most <= 700.0)
+    return np.flatnonzero(~trusted)
 
 
 class Kernel(ABC):

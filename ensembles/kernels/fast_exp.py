@@ -33,7 +33,7 @@ if numba.config.DISABLE_JIT:  # pragma: no cover - run by a test in another proc
 
     def exponential(x: float) -> float:
         """exp(x), 0 below -700; interpreted."""
-        return math.exp(x) if x > -700.0 else 0.0
+        return math.exp(min(x, 709.0)) if x > -700.0 else 0.0
 
 else:
     from llvmlite import ir

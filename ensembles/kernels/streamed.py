@@ -6,7 +6,7 @@ import numpy as np
 from scipy.sparse import csr_matrix
 
 from . import compiled
-from .base import Kernel, Sweep
+from .base import Kernel, Sweep, lost_columns
 from .threads import block_bounds, run_blocks
 
 __all__ = ["StreamedKernel", "pick_targets"]
@@ -73,26 +73,24 @@ class StreamedKernel(Kernel):
         """One fused pass; see `Kernel.sweep`."""
         n, m = self.shape
         bounds, entries = self._blocks()
-        new_f, excess = np.empty(n), np.empty(n)
+        new_f, excess, log_factors = np.empty(n), np.empty(n), np.empty(n)
         partial = np.zeros((len(bounds), m))
 
         def task(block: int, start: int, stop: int) -> None:
             buffer = np.empty(m)
             compiled.sweep_rows(
                 self.sources, self._coordinates, q, log_f, log_a, relaxation,
-                start, stop, buffer, new_f, excess, partial[block],
+                start, stop, buffer, new_f, excess, log_factors, partial[block],
             )  # fmt: skip
 
         run_blocks(task, bounds, entries)
-        return Sweep(new_f, excess, self._column_logs(partial.sum(axis=0), q, log_a + new_f))
-
-    def _column_logs(self, sums: np.ndarray, q: np.ndarray, p: np.ndarray) -> np.ndarray:
-        lost = np.flatnonzero(~((sums > 1e-200) & (sums < 1e200)))
+        sums = partial.sum(axis=0)
+        lost = lost_columns(sums, log_factors)
         with np.errstate(divide="ignore"):
             logs = np.log(sums) - q
-        if lost.size:  # columns that underflowed are summed again with a maximum of their own
-            logs[lost] = StreamedKernel(self.targets[lost], self.sources).log_sum_targets(p)
-        return logs
+        if lost.size:  # with a maximum of their own
+            logs[lost] = StreamedKernel(self.targets[lost], self.sources).log_sum_targets(log_a + new_f)
+        return Sweep(new_f, excess, logs)
 
     def entries(self, p: np.ndarray, q: np.ndarray, cutoff: float, limit: int) -> csr_matrix | None:
         """Sparse exp(p_i + q_j) k_ij above `cutoff`, shape (n, m); None beyond `limit` entries."""
@@ -121,7 +119,10 @@ class StreamedKernel(Kernel):
         return csr_matrix((values, columns, row_starts), shape=(n, m))
 
     def top_targets(self, log_weights: np.ndarray, count: int) -> tuple[np.ndarray, np.ndarray]:
-        """The `count` most probable targets of every source and their probabilities given the source, (n, count)."""
+        """The `count` most probable targets of every source and their probabilities given the source, (n, count).
+
+        Row number -1 with probability 0 where fewer than `count` targets have a positive weight.
+        """
         count = min(count, self.shape[1])
         targets = np.empty((self.shape[0], count), dtype=np.int64)
         values = np.empty((self.shape[0], count))

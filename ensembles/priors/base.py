@@ -25,7 +25,7 @@ from scipy.linalg import solve_triangular
 from .. import checks
 from .van_loan import linear_transition
 
-__all__ = ["LinearGaussianPrior", "Transition"]
+__all__ = ["LinearGaussianPrior", "Transition", "require_prior"]
 
 
 @dataclass(frozen=True)
@@ -140,3 +140,11 @@ class LinearGaussianPrior(ABC):
                 "use a shorter gap or a drift that does not grow so fast"
             )
         return transition
+
+
+def require_prior(prior: Any) -> None:
+    """Refuse what is not a prior."""
+    if not isinstance(prior, LinearGaussianPrior):
+        raise checks.InputError(
+            f"prior must be a prior of this package; it is {type(prior).__name__}; use Brownian or OrnsteinUhlenbeck"
+        )

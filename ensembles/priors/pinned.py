@@ -1,10 +1,12 @@
 """The prior pinned at both ends: its law at any times in between, exact.
 
-With X_t | x ~ N(m, Q_t) and X_T | X_t = z ~ N(F z + c, R), the pinned law is Gaussian with gain G = Q_t Fᵀ (F Q_t Fᵀ + R)⁻¹:
+With X_t | x ~ N(m, Q_t), X_T | X_t = z ~ N(F z + c, R), Q_t = L Lᵀ, R = S Sᵀ and the singular values S⁻¹ F L = U s Vᵀ,
+the pinned law is Gaussian with
 
-    mean = (I - G F) m + G (y - c),   covariance = (I - G F) Q_t (I - G F)ᵀ + G R Gᵀ.
+    mean = H m + G (y - c),   H = L V (1 + s²)⁻¹ Vᵀ L⁻¹,   G = L V s (1 + s²)⁻¹ Uᵀ S⁻¹,   covariance = L V (1 + s²)⁻¹ Vᵀ Lᵀ.
 
-The last form (Joseph's) is a sum of squares, so it stays positive semi-definite at every duration.
+Nothing is subtracted, so the weights of both ends are accurate where they are tiny (an unstable drift over a long duration),
+and the covariance is a sum of squares.
 """
 
 from __future__ import annotations
@@ -12,6 +14,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.linalg import solve_triangular
 
 from .base import LinearGaussianPrior, Transition
 
@@ -45,16 +48,17 @@ def square_root(covariance: np.ndarray) -> np.ndarray:
 
 def pin(before: Transition, after: Transition) -> PinnedLaw:
     """Pin the path between `before` (from the start to t) and `after` (from t to the end)."""
-    step, noise = after.matrix, before.covariance
-    total = step @ noise @ step.T + after.covariance
-    gain = np.linalg.solve(total, step @ noise).T
-    keep = np.eye(before.dimension) - gain @ step
-    covariance = keep @ noise @ keep.T + gain @ after.covariance @ gain.T
+    root = before.cholesky
+    left, stretches, axes = np.linalg.svd(solve_triangular(after.cholesky, after.matrix @ root, lower=True))
+    narrowed = 1.0 / np.hypot(1.0, stretches)
+    half = root @ axes.T * narrowed
+    keep = half * narrowed @ solve_triangular(root, axes.T, lower=True, trans="T").T
+    gain = half * (stretches * narrowed) @ solve_triangular(after.cholesky, left, lower=True, trans="T").T
     return PinnedLaw(
         start_matrix=keep @ before.matrix,
         end_matrix=gain,
         shift=keep @ before.shift - gain @ after.shift,
-        covariance=0.5 * (covariance + covariance.T),
+        covariance=half @ half.T,
     )
 
 

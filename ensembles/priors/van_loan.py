@@ -35,19 +35,18 @@ def linear_transition(
     step = duration / 2.0**doublings
     scale = np.abs(noise).max()
     block = np.zeros((2 * dimension, 2 * dimension))
-    block[:dimension, :dimension] = -matrix
+    block[:dimension, :dimension] = -matrix * step
     block[:dimension, dimension:] = noise / scale
-    block[dimension:, dimension:] = matrix.T
-    # The off-diagonal block is scaled to step, so that expm does not subdivide for the noise's sake.
-    block *= step
+    block[dimension:, dimension:] = matrix.T * step
+    # The result is linear in the off-diagonal block, which is kept near 1 so that expm does not subdivide for its sake.
     exponential = expm(block)
     propagator = exponential[dimension:, dimension:].T
-    covariance = scale * propagator @ exponential[:dimension, dimension:]
+    covariance = scale * step * propagator @ exponential[:dimension, dimension:]
     affine = np.zeros((dimension + 1, dimension + 1))
     size = max(np.abs(constant).max(), 1e-300)
     affine[:dimension, :dimension] = matrix * step
-    affine[:dimension, dimension] = constant / size * step
-    shift = size * expm(affine)[:dimension, dimension]
+    affine[:dimension, dimension] = constant / size
+    shift = size * step * expm(affine)[:dimension, dimension]
     with np.errstate(over="ignore", invalid="ignore"):
         for _ in range(doublings):
             covariance = covariance + propagator @ covariance @ propagator.T

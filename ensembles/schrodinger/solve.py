@@ -59,6 +59,7 @@ def solve(
     'converged'
     """
     tolerance = checks.positive_number(tolerance, "tolerance", "give the L1 error allowed, such as 1e-6")
+    sweep_limit = checks.whole_number(sweep_limit, "sweep_limit")
     a = checks.weights(weights[0], kernel.shape[0], "source weights")
     b = checks.weights(weights[1], kernel.shape[1], "target weights")
     rows, columns = np.flatnonzero(a), np.flatnonzero(b)
@@ -77,6 +78,8 @@ def solve(
     for state in solver_states(reduced, pair, tolerance, begin, strategy or Strategy()):
         if run.ends(state):
             break
+    if state.scale != 1.0:  # ended on the ladder; potentials times noise variance are lengths², the same at every noise
+        state = replace(state, log_f=state.log_f * state.scale, log_g=state.log_g * state.scale)
     certificate = certify(
         reduced, (np.log(pair[0]), np.log(pair[1])), (state.log_f, state.log_g), run.contraction, tolerance
     )
@@ -103,8 +106,9 @@ class _Run:
         self.history.append((state.scale, state.row_error, state.column_error, state.hilbert_step))
         last, self._last = self._last, state
         if last and last.stage == state.stage == "sweep" and last.relaxation == state.relaxation == 1.0:
-            if last.scale == state.scale == 1.0 and last.hilbert_step > 1e-9:
-                self.contraction = state.hilbert_step / last.hilbert_step
+            rounding = 1e-9 * max(1.0, float(np.abs(state.log_g).max()))
+            if last.scale == state.scale == 1.0 and last.hilbert_step > rounding:
+                self.contraction = float(np.fmax(self.contraction, state.hilbert_step / last.hilbert_step))
         if self.observe is not None and self.observe(state):
             return True
         if state.scale == 1.0 and state.error <= self.tolerance:
