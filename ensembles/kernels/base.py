@@ -37,15 +37,18 @@ class Sweep:
     column_log_sums: np.ndarray
 
 
-def lost_columns(sums: np.ndarray, log_factors: np.ndarray) -> np.ndarray:
+def lost_columns(sums: np.ndarray, log_gains: np.ndarray, row_excess: np.ndarray) -> np.ndarray:
     """Numbers of the column sums of a fused sweep that over- or underflowed and must be summed again on their own.
 
-    An exponential below exp(-700) counts as 0 before it is multiplied by its row's factor, so a sum is trusted only if
-    it is 1e17 times what all the rows together can have lost. `log_factors` (n,), `sums` (m,).
+    A row's exponentials are multiplied by exp(log_gains), log_gains = log a + the update of f (n,); those of a row whose sum
+    left the range 1e-200 to 1e200 are taken relative to that sum, exp(row_excess), and multiplied by it as well. What lay
+    below exp(-700) counted as 0 before, so a sum is trusted only if it is 1e17 times what all the rows can have lost.
     """
-    most = float(np.max(log_factors))
+    rescaled = np.where(np.abs(row_excess) > 460.6, row_excess, 0.0)
+    rescaled[np.abs(np.abs(row_excess) - 460.5) <= 0.1] = 460.6  # either may have been done: the larger is safe
+    most = float(np.max(log_gains + rescaled))
     with np.errstate(divide="ignore"):
-        floor = max(most - 700.0 + 40.0 + np.log(log_factors.size), -460.0)
+        floor = max(most - 660.0 + np.log(row_excess.size), -460.0)
         trusted = (np.log(sums) > floor) & (sums < 1e200) & (most <= 700.0)
     return np.flatnonzero(~trusted)
 
@@ -54,6 +57,13 @@ class Kernel(ABC):
     """A positive n by m matrix k that need not exist in memory. See the module's docstring to add one."""
 
     shape: tuple[int, int]
+    floor: float = 0.0
+    """L1 error of the marginals below which this kernel's own rounding may show."""
+
+    @property
+    def exact(self) -> Kernel:
+        """The kernel in double precision, entry by entry: this one, unless it keeps a rounded copy."""
+        return self
 
     @abstractmethod
     def log_sum_targets(self, log_weights: np.ndarray) -> np.ndarray:

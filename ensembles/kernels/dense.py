@@ -6,7 +6,7 @@ import numpy as np
 from scipy.sparse import csr_matrix
 
 from .. import logspace
-from . import compiled
+from . import compiled_sweeps
 from .base import Kernel, Sweep, lost_columns
 from .threads import block_bounds, run_blocks
 
@@ -59,18 +59,17 @@ class DenseKernel(Kernel):
         """One fused pass; see `Kernel.sweep`."""
         n, m = self.shape
         bounds = block_bounds(n, _BLOCKS)
-        new_f, excess, log_factors = np.empty(n), np.empty(n), np.empty(n)
+        new_f, excess = np.empty(n), np.empty(n)
         partial = np.zeros((len(bounds), m))
 
         def task(block: int, start: int, stop: int) -> None:
             compiled.sweep_matrix(
-                self.log_kernel, q, log_f, log_a, relaxation,
-                start, stop, np.empty(m), new_f, excess, log_factors, partial[block],
-            )  # fmt: skip
+                self.log_kernel, q, log_f, log_a, relaxation, start, stop, np.empty(m), new_f, excess, partial[block]
+            )
 
         run_blocks(task, bounds, float(n) * m)
         sums = partial.sum(axis=0)
-        lost = lost_columns(sums, log_factors)
+        lost = lost_columns(sums, log_a + new_f - log_f, excess)
         with np.errstate(divide="ignore"):
             logs = np.log(sums) - q
         if lost.size:
