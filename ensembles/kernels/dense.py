@@ -6,7 +6,7 @@ import numpy as np
 from scipy.sparse import csr_matrix
 
 from .. import logspace
-from . import compiled_sweeps
+from . import compiled
 from .base import Kernel, Sweep, lost_columns
 from .threads import block_bounds, run_blocks
 
