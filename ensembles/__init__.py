@@ -23,18 +23,19 @@ _HOMES = {
     "ConvergenceError": "schrodinger.solution",
 }
 
-__all__ = [*_HOMES, "__version__"]  # noqa: PLE0604
+__all__ = [*_HOMES, "__version__"]
 
 if TYPE_CHECKING:
-    from .bridges.closed_form import gaussian_bridge
-    from .bridges.fit import fit_bridge
-    from .bridges.storage import load_bridge
-    from .checks import ComputationError, InputError
-    from .priors.brownian import Brownian
-    from .priors.ornstein_uhlenbeck import OrnsteinUhlenbeck
-    from .schrodinger.solution import ConvergenceError
-    from .snapshots.files import read_snapshots
-    from .snapshots.series import SnapshotSeries
+    from .bridges.closed_form import gaussian_bridge as gaussian_bridge
+    from .bridges.fit import fit_bridge as fit_bridge
+    from .bridges.storage import load_bridge as load_bridge
+    from .checks import ComputationError as ComputationError
+    from .checks import InputError as InputError
+    from .priors.brownian import Brownian as Brownian
+    from .priors.ornstein_uhlenbeck import OrnsteinUhlenbeck as OrnsteinUhlenbeck
+    from .schrodinger.solution import ConvergenceError as ConvergenceError
+    from .snapshots.files import read_snapshots as read_snapshots
+    from .snapshots.series import SnapshotSeries as SnapshotSeries
 
 
 def __getattr__(name: str) -> Any:

@@ -68,7 +68,8 @@ class Bridge:
         Raises
         ------
         InputError
-            At a snapshot time, where the fitted population is a sum of atoms and has no density, and outside the series.
+            At a snapshot time, where the fitted population is a sum of atoms and has no density, and outside the
+            series.
 
         Examples
         --------
@@ -95,8 +96,8 @@ class Bridge:
     def backward_drift(self, t: float, points: np.ndarray) -> np.ndarray:
         """Backward drift b - 2D ∇log φ̂_t at points (m, d), in length/time; result (m, d).
 
-        It is the velocity of the process run backwards, with its sign turned: E[X_t - X_(t-h) | X_t = x] / h as h → 0. At a
-        snapshot time it belongs to the gap that ends there.
+        It is the velocity of the process run backwards, with its sign turned: E[X_t - X_(t-h) | X_t = x] / h as h →
+        0. At a snapshot time it belongs to the gap that ends there.
         """
         points = self._points(points)
         gap = self._gap_until(t, "the backward drift")
@@ -134,14 +135,16 @@ class Bridge:
     def sample_paths(self, count: int, times: np.ndarray, rng: Any = 0) -> Paths:
         """Draw paths through all snapshots, seen at `times` (T,): exact in law, with no time-step error.
 
-        A start is drawn from the first snapshot, each next particle from the coupling given the one before, and the prior
-        pinned between them.
+        A start is drawn from the first snapshot, each next particle from the coupling given the one before, and the
+        prior pinned between them.
         """
         count = checks.whole_number(count, "count")
         generator = checks.generator(rng)
         first = self.series.weights[0]
         starts = generator.choice(first.size, size=count, p=first)
-        return self._continue_paths(self.series.clouds[0][starts], starts, 0, float(self.series.times[0]), times, generator)
+        return self._continue_paths(
+            self.series.clouds[0][starts], starts, 0, float(self.series.times[0]), times, generator
+        )
 
     def sample_paths_from(self, points: np.ndarray, start: float, times: np.ndarray, rng: Any = 0) -> Paths:
         """Draw one path from each new start point (m, d) at time `start`, seen at `times` ≥ start; exact in law.

@@ -2,9 +2,9 @@
 
 In whitened coordinates (unit noise over the whole duration; means m, n; covariances A, B) the coupling is Gaussian with
 E[v | u] = n + M (u - m), where M = B^½ r(B^½ A B^½) B^½ and r(z) = 2 / (1 + sqrt(1 + 4z)); the terminal potential is
-φ_T ∝ exp(-½ ỹᵀ P ỹ - ỹᵀ(m - n)) in ỹ = v - n, with P = B⁻¹ + N - I and N = A^½ r(A^½ B A^½) A^½. Sources: Mallasto, Gerolin
-and Minh 2022; Janati, Muzellec, Peyré and Cuturi 2020; Bunne, Hsieh, Cuturi and Krause 2023 (from memory, derived again
-in tests/test_gaussian.py).
+φ_T ∝ exp(-½ ỹᵀ P ỹ - ỹᵀ(m - n)) in ỹ = v - n, with P = B⁻¹ + N - I and N = A^½ r(A^½ B A^½) A^½. Sources: Mallasto,
+Gerolin and Minh 2022; Janati, Muzellec, Peyré and Cuturi 2020; Bunne, Hsieh, Cuturi and Krause 2023 (from memory,
+derived again in tests/test_gaussian.py).
 """
 
 from __future__ import annotations

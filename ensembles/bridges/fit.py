@@ -38,8 +38,8 @@ def fit_bridge(
 ) -> Bridge:
     """Fit the Schrödinger bridge through all snapshots of a series.
 
-    Over every gap, π_ij = a_i b_j exp(f_i + g_j) k_ij with the prior's transition density k and the two clouds' weights as
-    marginals; the bridge over K snapshots is the chain of the pairwise ones.
+    Over every gap, π_ij = a_i b_j exp(f_i + g_j) k_ij with the prior's transition density k and the two clouds'
+    weights as marginals; the bridge over K snapshots is the chain of the pairwise ones.
 
     Parameters
     ----------

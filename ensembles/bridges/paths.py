@@ -21,8 +21,8 @@ class Paths:
     ----------
     times : (T,) in the series' unit of time.
     positions : (count, T, d) in its unit of length.
-    members : (count, K) row numbers of the particles that a path runs through, one a snapshot; -1 where a path that began
-        later, or stopped earlier, does not pass.
+    members : (count, K) row numbers of the particles that a path runs through, one a snapshot; -1 where a path that
+        began later, or stopped earlier, does not pass.
     names : names of the coordinates.
     """
 

@@ -62,7 +62,11 @@ def save_bridge(bridge: Bridge, path: str | Path) -> None:
             for solution in bridge.solutions
         ],
     }
-    arrays: dict[str, np.ndarray] = {"header": np.array(json.dumps(header)), "times": series.times, "masses": series.masses}
+    arrays: dict[str, np.ndarray] = {
+        "header": np.array(json.dumps(header)),
+        "times": series.times,
+        "masses": series.masses,
+    }
     for k in range(len(series.times)):
         arrays |= {f"cloud_{k}": series.clouds[k], f"weights_{k}": series.weights[k], f"rows_{k}": series.rows[k]}
         if series.labels is not None:

@@ -16,7 +16,9 @@ def _heading(bridge: Bridge) -> str:
     counts = ", ".join(str(len(cloud)) for cloud in series.clouds)
     times = ", ".join(f"{t:g}" for t in series.times)
     unit = f" {series.time_unit}" if series.time_unit else ""
-    return f"Bridge through {len(series.times)} snapshots (t = {times}{unit}; {counts} particles) under {bridge.prior!r}"
+    return (
+        f"Bridge through {len(series.times)} snapshots (t = {times}{unit}; {counts} particles) under {bridge.prior!r}"
+    )
 
 
 def bridge_text(bridge: Bridge) -> str:
@@ -35,7 +37,8 @@ def bridge_text(bridge: Bridge) -> str:
 def bridge_html(bridge: Bridge) -> str:
     """The same as a small table."""
     head = "".join(
-        f"<th>{name}</th>" for name in ("gap", "outcome", "sweeps", "L1 error", "tolerance", "Hilbert step", "contraction")
+        f"<th>{name}</th>"
+        for name in ("gap", "outcome", "sweeps", "L1 error", "tolerance", "Hilbert step", "contraction")
     )
     rows = []
     for k, solution in enumerate(bridge.solutions):

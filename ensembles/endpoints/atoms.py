@@ -1,6 +1,7 @@
 """Potentials that sit on the particles themselves: φ = Σ_j w_j δ(y_j).
 
-Carried back over a transition N(F x + c, Q), with Q = L Lᵀ, u = L⁻¹(F x + c), v_j = L⁻¹ y_j and v̄ the soft mean of v_j,
+Carried back over a transition N(F x + c, Q), with Q = L Lᵀ, u = L⁻¹(F x + c), v_j = L⁻¹ y_j and v̄ the soft mean of
+v_j,
 
     log φ(x) = log_normaliser + log Σ_j w_j exp(-½|u - v_j|²),   ∇ log φ(x) = Fᵀ L⁻ᵀ (v̄ - u);
 

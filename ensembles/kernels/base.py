@@ -1,7 +1,8 @@
 """The contract of a kernel: what the solver and the bridge ask of k_ij > 0.
 
 With log-weights w, the one primitive is ``log_sum(w)_i = log Σ_j exp(w_j) k_ij``. The fused `sweep` gives the row sums
-and the column sums of a coupling while reading the kernel once. Nothing here knows weights, potentials' meaning or priors.
+and the column sums of a coupling while reading the kernel once. Nothing here knows weights, potentials' meaning or
+priors.
 
 To add a kernel, you must
 1. inherit `Kernel` and give every abstract method (a kernel between points gives `at_scale` too),
@@ -40,9 +41,10 @@ class Sweep:
 def lost_columns(sums: np.ndarray, log_gains: np.ndarray, row_excess: np.ndarray) -> np.ndarray:
     """Numbers of the column sums of a fused sweep that over- or underflowed and must be summed again on their own.
 
-    A row's exponentials are multiplied by exp(log_gains), log_gains = log a + the update of f (n,); those of a row whose sum
-    left the range 1e-200 to 1e200 are taken relative to that sum, exp(row_excess), and multiplied by it as well. What lay
-    below exp(-700) counted as 0 before, so a sum is trusted only if it is 1e17 times what all the rows can have lost.
+    A row's exponentials are multiplied by exp(log_gains), log_gains = log a + the update of f (n,); those of a row
+    whose sum left the range 1e-200 to 1e200 are taken relative to that sum, exp(row_excess), and multiplied by it as
+    well. What lay below exp(-700) counted as 0 before, so a sum is trusted only if it is 1e17 times what all the rows
+    can have lost.
     """
     rescaled = np.where(np.abs(row_excess) > 460.6, row_excess, 0.0)
     rescaled[np.abs(np.abs(row_excess) - 460.5) <= 0.1] = 460.6  # either may have been done: the larger is safe
@@ -88,6 +90,10 @@ class Kernel(ABC):
     @abstractmethod
     def nearest_costs(self) -> np.ndarray:
         """min_i -log k_ij for every target j, shape (m,)."""
+
+    @abstractmethod
+    def largest_cost(self) -> float:
+        """An upper bound on -log k_ij, cheap; infinite for a kernel with zeros."""
 
     @abstractmethod
     def mean_cost(self) -> float:

@@ -6,7 +6,7 @@ import numpy as np
 from scipy.sparse import csr_matrix
 
 from .. import logspace
-from . import compiled
+from . import compiled_sweeps
 from .base import Kernel, Sweep, lost_columns
 from .threads import block_bounds, run_blocks
 
@@ -63,8 +63,18 @@ class DenseKernel(Kernel):
         partial = np.zeros((len(bounds), m))
 
         def task(block: int, start: int, stop: int) -> None:
-            compiled.sweep_matrix(
-                self.log_kernel, q, log_f, log_a, relaxation, start, stop, np.empty(m), new_f, excess, partial[block]
+            compiled_sweeps.sweep_matrix(
+                self.log_kernel,
+                q,
+                log_f,
+                log_a,
+                relaxation,
+                start,
+                stop,
+                np.empty((1, m)),
+                new_f,
+                excess,
+                partial[block],
             )
 
         run_blocks(task, bounds, float(n) * m)
@@ -87,6 +97,10 @@ class DenseKernel(Kernel):
     def nearest_costs(self) -> np.ndarray:
         """min_i -log k_ij, infinite for a column of zeros."""
         return -self.log_kernel.max(axis=0)
+
+    def largest_cost(self) -> float:
+        """max -log k_ij."""
+        return -float(self.log_kernel.min())
 
     def mean_cost(self) -> float:
         """Mean of -log k_ij above its smallest value, over non-zero entries."""

@@ -2,7 +2,8 @@
 
 exp(x) = 2^n exp(r) with n = round(x / log 2) and |r| ≤ ½ log 2; exp(r) by its Taylor polynomial of degree 13, whose
 remainder is below 1e-17; the power of two is added to the exponent bits. Exactly 0 below x = -700, where the true value
-(1e-304) no longer matters to a sum that is kept near 1. The library's exp is a call per number and costs several times more.
+(1e-304) no longer matters to a sum that is kept near 1. The library's exp is a call per number and costs several
+times more.
 """
 
 from __future__ import annotations

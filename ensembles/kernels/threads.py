@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import threading
 from collections.abc import Callable
+from itertools import pairwise
 
 __all__ = ["block_bounds", "run_blocks", "thread_count"]
 
@@ -25,7 +26,7 @@ def block_bounds(rows: int, blocks: int) -> list[tuple[int, int]]:
     """Split rows into at most `blocks` ranges whose edges depend on `rows` alone, never on the thread count."""
     blocks = max(1, min(blocks, rows))
     edges = [rows * k // blocks for k in range(blocks + 1)]
-    return list(zip(edges[:-1], edges[1:], strict=True))
+    return list(pairwise(edges))
 
 
 def run_blocks(task: Callable[[int, int, int], None], bounds: list[tuple[int, int]], entries: float) -> None:

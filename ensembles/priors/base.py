@@ -7,8 +7,8 @@ Prior ``dX = (A X + a) dt + sqrt(2 D) dW`` with D in length²/time. Over a durat
 To add a prior, you must
 1. write a frozen dataclass that inherits `LinearGaussianPrior` and checks its parameters on construction,
 2. give `linear_drift(dimension) -> (A, a)` and `diffusion_matrix(dimension) -> D`,
-3. give `parameters() -> dict` of plain numbers and lists, such that ``type(prior)(**prior.parameters())`` is the same prior,
-4. set `kind` (the name in study files and saved bridges) and list it in `priors/registry.py`.
+3. give `parameters() -> dict` of plain numbers and lists, such that ``type(prior)(**prior.parameters())`` is the same
+prior, 4. set `kind` (the name in study files and saved bridges) and list it in `priors/registry.py`.
 Every law in tests/test_priors.py then runs on it by itself.
 """
 

@@ -3,10 +3,11 @@
 With X_t | x ~ N(m, Q_t), X_T | X_t = z ~ N(F z + c, R), Q_t = L Lᵀ, R = S Sᵀ and the singular values S⁻¹ F L = U s Vᵀ,
 the pinned law is Gaussian with
 
-    mean = H m + G (y - c),   H = L V (1 + s²)⁻¹ Vᵀ L⁻¹,   G = L V s (1 + s²)⁻¹ Uᵀ S⁻¹,   covariance = L V (1 + s²)⁻¹ Vᵀ Lᵀ.
+    mean = H m + G (y - c),   H = L V (1 + s²)⁻¹ Vᵀ L⁻¹,   G = L V s (1 + s²)⁻¹ Uᵀ S⁻¹,   covariance = L V (1 + s²)⁻¹
+    Vᵀ Lᵀ.
 
-Nothing is subtracted, so the weights of both ends are accurate where they are tiny (an unstable drift over a long duration),
-and the covariance is a sum of squares.
+Nothing is subtracted, so the weights of both ends are accurate where they are tiny (an unstable drift over a long
+duration), and the covariance is a sum of squares.
 """
 
 from __future__ import annotations
@@ -62,11 +63,13 @@ def pin(before: Transition, after: Transition) -> PinnedLaw:
     )
 
 
-def pinned_steps(prior: LinearGaussianPrior, start: float, end: float, times: np.ndarray, dimension: int) -> list[PinnedLaw]:
+def pinned_steps(
+    prior: LinearGaussianPrior, start: float, end: float, times: np.ndarray, dimension: int
+) -> list[PinnedLaw]:
     """Laws to draw a pinned path one time after another: law k takes X at the time before and the end y.
 
-    `times` increases strictly inside (start, end). Drawing X_1 from law 0 with (x, y), X_2 from law 1 with (X_1, y), ...
-    has the exact joint law of the pinned path at all these times, since the prior is Markov.
+    `times` increases strictly inside (start, end). Drawing X_1 from law 0 with (x, y), X_2 from law 1 with (X_1, y),
+    ... has the exact joint law of the pinned path at all these times, since the prior is Markov.
     """
     laws = []
     previous = start

@@ -1,7 +1,7 @@
 """Certificates: how far a pair of potentials is from solving the Schrödinger system, in exact float64 passes.
 
-Hilbert's metric d_H contracts under a plain sweep S by κ ≤ tanh(Δ/4)² (Birkhoff 1957; Franklin and Lorenz 1989), so from
-d_H(g, g*) ≤ d_H(g, S g) + κ d_H(g, g*) follows d_H(g, g*) ≤ d_H(g, S g) / (1 - κ).
+Hilbert's metric d_H contracts under a plain sweep S by κ ≤ tanh(Δ/4)² (Birkhoff 1957; Franklin and Lorenz 1989), so
+from d_H(g, g*) ≤ d_H(g, S g) + κ d_H(g, g*) follows d_H(g, g*) ≤ d_H(g, S g) / (1 - κ).
 """
 
 from __future__ import annotations
@@ -32,26 +32,30 @@ def marginal_errors(
 def certify(
     kernel: Kernel,
     log_weights: tuple[np.ndarray, np.ndarray],
-    potentials: tuple[np.ndarray, np.ndarray],
+    log_g: np.ndarray,
+    log_f: np.ndarray,
     contraction_seen: float,
     tolerance: float,
-) -> Certificate:
-    """Recompute everything a certificate states; three passes over the kernel. `contraction_seen` may be NaN."""
+) -> tuple[np.ndarray, Certificate]:
+    """The source potential that goes with log_g, and everything a certificate states about the pair.
+
+    One plain sweep of the exact kernel gives f and the Hilbert step, a second pass recomputes both marginals of the
+    pair; where the run has seen no plain sweeps (`contraction_seen` is NaN), a third one measures the contraction.
+    """
     log_a, log_b = log_weights
-    log_f, log_g = potentials
+    sweep = kernel.sweep(log_f, log_b + log_g, log_a, 1.0)
+    log_f, next_g = sweep.log_f, -sweep.column_log_sums
     row_error, column_error = marginal_errors(kernel, log_weights, log_f, log_g)
-    first_f, first_g = _plain_sweep(kernel, log_weights, log_f, log_g)
-    _, second_g = _plain_sweep(kernel, log_weights, first_f, first_g)
-    step = hilbert_distance(first_g, log_g)
-    next_step = hilbert_distance(second_g, first_g)
+    step = hilbert_distance(next_g, log_g)
     # Below rounding the ratio of two steps says nothing about the contraction.
     rounding = 64.0 * np.finfo(float).eps * max(1.0, float(np.abs(log_g).max()))
-    seen = [contraction_seen] if np.isfinite(contraction_seen) else []
-    if step > rounding:
-        seen.append(next_step / step)
-    observed = min(max(seen), 1.0) if seen else float("nan")
+    observed = contraction_seen
+    if not np.isfinite(observed) and step > rounding:
+        second = kernel.sweep(log_f, log_b + next_g, log_a, 1.0)
+        observed = hilbert_distance(-second.column_log_sums, next_g) / step
+    observed = min(observed, 1.0)
     bound = birkhoff_contraction(kernel.diameter_bound())
-    return Certificate(
+    return log_f, Certificate(
         row_error=row_error,
         column_error=column_error,
         marginal_error=max(row_error, column_error),
@@ -70,13 +74,6 @@ def _estimate(step: float, contraction: float, rounding: float) -> float:
     return step / (1.0 - contraction) if contraction < 1.0 else float("inf")
 
 
-def _plain_sweep(
-    kernel: Kernel, log_weights: tuple[np.ndarray, np.ndarray], log_f: np.ndarray, log_g: np.ndarray
-) -> tuple[np.ndarray, np.ndarray]:
-    sweep = kernel.sweep(log_f, log_weights[1] + log_g, log_weights[0], 1.0)
-    return sweep.log_f, -sweep.column_log_sums
-
-
 def scaling_exists(log_kernel: np.ndarray, a: np.ndarray, b: np.ndarray) -> bool:
     """Whether a coupling with row sums a and column sums b is positive exactly where the kernel is.
 
@@ -92,10 +89,15 @@ def scaling_exists(log_kernel: np.ndarray, a: np.ndarray, b: np.ndarray) -> bool
         coo_matrix((ones, (columns, entry)), shape=(m, count + 1)),
     ]).tocsr()  # fmt: skip
     floor = coo_matrix(
-        (np.concatenate([-ones, ones]), (np.concatenate([entry, entry]), np.concatenate([entry, np.full(count, count)]))),
+        (
+            np.concatenate([-ones, ones]),
+            (np.concatenate([entry, entry]), np.concatenate([entry, np.full(count, count)])),
+        ),
         shape=(count, count + 1),
     ).tocsr()
     objective = np.zeros(count + 1)
     objective[-1] = -1.0
-    result = linprog(objective, A_ub=floor, b_ub=np.zeros(count), A_eq=sums, b_eq=np.concatenate([a, b]), method="highs")
+    result = linprog(
+        objective, A_ub=floor, b_ub=np.zeros(count), A_eq=sums, b_eq=np.concatenate([a, b]), method="highs"
+    )
     return bool(result.status == 0 and -result.fun > 1e-12)

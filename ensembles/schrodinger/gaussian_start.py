@@ -1,12 +1,13 @@
 """Potentials of the bridge between two Gaussians with the moments of the clouds: a start, exact for Gaussian clouds.
 
-For whitened clouds with means m, n and covariances A, B the coupling's log-density against the product of its marginals is
+For whitened clouds with means m, n and covariances A, B the coupling's log-density against the product of its
+marginals is
 -½ x̃ᵀ M x̃ - ½ ỹᵀ N ỹ + x̃ᵀ ỹ + constant (centred x̃, ỹ), with
 
     N = A^½ r(A^½ B A^½) A^½,   M = B^½ r(B^½ A B^½) B^½,   r(z) = 2 / (1 + sqrt(1 + 4 z)),
 
-from the closed form in Janati, Muzellec, Peyré and Cuturi 2020 (from memory; derived again in tests/test_gaussian.py). No
-inverse occurs, so clouds with fewer points than coordinates are served as well.
+from the closed form in Janati, Muzellec, Peyré and Cuturi 2020 (from memory; derived again in
+tests/test_gaussian.py). No inverse occurs, so clouds with fewer points than coordinates are served as well.
 """
 
 from __future__ import annotations

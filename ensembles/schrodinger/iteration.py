@@ -5,7 +5,7 @@ One state follows every pass over the kernel, so a caller shows progress, stops 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Generator, Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -56,8 +56,8 @@ def sweep_states(
 ) -> Iterator[State]:
     """Sinkhorn sweeps without end from the potentials of `state`; one pass over the kernel each.
 
-    f ← f - ω log(row sum / a), then g ← g - ω log(column sum / b), each with the other's newest value; ω = 1 is the plain
-    Sinkhorn iteration. The state's errors belong to its own potentials: f after the update and g before it.
+    f ← f - ω log(row sum / a), then g ← g - ω log(column sum / b), each with the other's newest value; ω = 1 is the
+    plain Sinkhorn iteration. The state's errors belong to its own potentials: f after the update and g before it.
     """
     a, b = np.exp(log_a), np.exp(log_b)
     log_f, log_g, sweeps = state.log_f, state.log_g, state.sweep
@@ -96,8 +96,10 @@ def solver_states(
         scaled = kernel if scale == 1.0 else kernel.at_scale(scale)
         last = scale == 1.0
         goal = tolerance if last else max(strategy.level_error, tolerance)
-        for state in _level_states(scaled, (log_a, log_b), state, goal, strategy, last):
-            yield state
+        goal = max(goal, scaled.floor)
+        state = yield from _level_states(scaled, (log_a, log_b), state, goal, strategy, last)
+    if tolerance < kernel.floor:  # the rounded copy has given what it can
+        yield from _level_states(kernel.exact, (log_a, log_b), state, tolerance, strategy, True)
 
 
 def _level_states(
@@ -107,21 +109,23 @@ def _level_states(
     goal: float,
     strategy: Strategy,
     last: bool,
-) -> Iterator[State]:
+) -> Generator[State, None, State]:
     """States at one noise, until the goal is met or (above the last level) the sweeps of a level are used up."""
     begun = state.sweep
     second_order = strategy.newton
     while True:
         control = RelaxationControl()
-        for state in sweep_states(kernel, *log_weights, state, control, strategy.relaxation):
-            yield state
-            if state.error <= goal or (not last and state.sweep - begun >= strategy.level_sweeps):
-                return
-            if second_order and control.sweeps_to(state.error, goal) > strategy.newton_after and control.settled:
+        for swept in sweep_states(kernel, *log_weights, state, control, strategy.relaxation):
+            yield swept
+            if swept.error <= goal or (not last and swept.sweep - begun >= strategy.level_sweeps):
+                return swept
+            if second_order and control.settled and control.sweeps_to(swept.error, goal) > strategy.newton_after:
+                state = swept
                 break
-        for state in newton_states(kernel, *log_weights, state, strategy.entry_limit):
-            yield state
-            if state.error <= goal:
-                return
+        for stepped in newton_states(kernel, *log_weights, state, strategy.entry_limit):
+            yield stepped
+            if stepped.error <= goal:
+                return stepped
+            state = stepped
         # No second-order step helped, or the coupling is too dense for one: sweep on.
         second_order = False

@@ -2,8 +2,8 @@
 
 With the source potential eliminated, the dual F(g) = Σ b g + Σ a f(g) is concave with gradient b - c (c the column sums
 of the coupling whose row sums are exact) and Hessian -(diag c - πᵀ diag(1/a) π). The coupling is sparsified for the
-Hessian alone; the step is solved by conjugate gradients and the gradient comes from the exact kernel, so a coarse Hessian
-costs steps, never accuracy. Every trial point is one pass over the kernel.
+Hessian alone; the step is solved by conjugate gradients and the gradient comes from the exact kernel, so a coarse
+Hessian costs steps, never accuracy. Every trial point is one pass over the kernel.
 """
 
 from __future__ import annotations
@@ -67,7 +67,7 @@ def _column_error(b: np.ndarray, log_g: np.ndarray, column_log_sums: np.ndarray)
 def _direction(
     coupling: csr_matrix, b: np.ndarray, columns: np.ndarray, gradient: np.ndarray, error: float
 ) -> np.ndarray:
-    """Solve (diag c - πᵀ diag(1/r) π + small) d = gradient; r, c are the sums of the sparse coupling, so it is semi-definite."""
+    """Solve (diag c - πᵀ diag(1/r) π + small) d = gradient, with the sums r, c of the sparse coupling: semi-definite."""
     rows = np.asarray(coupling.sum(axis=1)).ravel()
     kept = np.asarray(coupling.sum(axis=0)).ravel()
     inverse_rows = 1.0 / np.maximum(rows, 1e-300)

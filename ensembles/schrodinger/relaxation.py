@@ -1,8 +1,9 @@
 """The factor of over-relaxed sweeps, learned while they run.
 
-Plain sweeps contract the error by θ each, asymptotically. With g ← (1 - ω) g + ω g_plain (likewise f) the best factor is
-ω = 2 / (1 + sqrt(1 - θ)), which contracts by ω - 1; away from it the observed rate λ gives θ back by Young's relation
-(λ + ω - 1)² = λ ω² θ (successive over-relaxation; Young 1954; for matrix scaling Thibault et al. 2021; from memory).
+Plain sweeps contract the error by θ each, asymptotically. With g ← (1 - ω) g + ω g_plain (likewise f) the best factor
+is ω = 2 / (1 + sqrt(1 - θ)), which contracts by ω - 1; away from it the observed rate λ gives θ back by Young's
+relation (λ + ω - 1)² = λ ω² θ (successive over-relaxation; Young 1954; for matrix scaling Thibault et al. 2021; from
+memory).
 """
 
 from __future__ import annotations

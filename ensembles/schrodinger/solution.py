@@ -47,7 +47,8 @@ class Certificate:
     marginal_error : the larger of the two, the number compared with the tolerance.
     hilbert_step : Hilbert distance between the target potentials before and after one further plain sweep.
     contraction_observed : largest ratio of successive Hilbert steps over plain sweeps at the final noise.
-    contraction_bound : Birkhoff's a-priori bound tanh(Δ/4)² on that ratio; 1.0 where floating point cannot tell it from 1.
+    contraction_bound : Birkhoff's a-priori bound tanh(Δ/4)² on that ratio; 1.0 where floating point cannot tell it
+        from 1.
     potential_error_bound : hilbert_step / (1 - contraction_bound), rigorous; infinite where the bound is 1.
     potential_error_estimate : the same with the observed contraction; an estimate, not a bound.
     """

@@ -80,9 +80,10 @@ def solve(
             break
     if state.scale != 1.0:  # ended on the ladder; potentials times noise variance are lengths², the same at every noise
         state = replace(state, log_f=state.log_f * state.scale, log_g=state.log_g * state.scale)
-    certificate = certify(
-        reduced, (np.log(pair[0]), np.log(pair[1])), (state.log_f, state.log_g), run.contraction, tolerance
+    final_f, certificate = certify(
+        reduced.exact, (np.log(pair[0]), np.log(pair[1])), state.log_g, state.log_f, run.contraction, tolerance
     )
+    state = replace(state, log_f=final_f)
     outcome = run.outcome
     if outcome is Outcome.CONVERGED and certificate.marginal_error > tolerance:
         outcome = Outcome.STALLED
@@ -124,10 +125,10 @@ class _Run:
 
 def _unreached(kernel: Kernel, weights: tuple[np.ndarray, np.ndarray]) -> np.ndarray | None:
     """Target rows that stop the solve: no source reaches them, or the zeros of the kernel admit no scaling at all."""
-    costs = kernel.nearest_costs()
-    far = np.flatnonzero(~(costs < _UNRESOLVED_COST))
-    if far.size:
-        return far
+    if not kernel.largest_cost() < _UNRESOLVED_COST:
+        far = np.flatnonzero(~(kernel.nearest_costs() < _UNRESOLVED_COST))
+        if far.size:
+            return far
     if isinstance(kernel, DenseKernel) and kernel.log_kernel.size <= _SUPPORT_ENTRIES:
         zeros = np.isneginf(kernel.log_kernel)
         if zeros.any() and not scaling_exists(kernel.log_kernel, *weights):
