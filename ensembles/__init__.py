@@ -13,9 +13,11 @@ __version__ = "0.1.0"
 _HOMES = {
     "SnapshotSeries": "snapshots.series",
     "read_snapshots": "snapshots.files",
+    "write_snapshots": "snapshots.files",
     "Brownian": "priors.brownian",
     "OrnsteinUhlenbeck": "priors.ornstein_uhlenbeck",
     "fit_bridge": "bridges.fit",
+    "SolverOptions": "bridges.fit",
     "load_bridge": "bridges.storage",
     "gaussian_bridge": "bridges.closed_form",
     "InputError": "checks",
@@ -27,6 +29,7 @@ __all__ = [*_HOMES, "__version__"]
 
 if TYPE_CHECKING:
     from .bridges.closed_form import gaussian_bridge as gaussian_bridge
+    from .bridges.fit import SolverOptions as SolverOptions
     from .bridges.fit import fit_bridge as fit_bridge
     from .bridges.storage import load_bridge as load_bridge
     from .checks import ComputationError as ComputationError
@@ -35,6 +38,7 @@ if TYPE_CHECKING:
     from .priors.ornstein_uhlenbeck import OrnsteinUhlenbeck as OrnsteinUhlenbeck
     from .schrodinger.solution import ConvergenceError as ConvergenceError
     from .snapshots.files import read_snapshots as read_snapshots
+    from .snapshots.files import write_snapshots as write_snapshots
     from .snapshots.series import SnapshotSeries as SnapshotSeries
 
 

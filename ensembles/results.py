@@ -42,7 +42,7 @@ def fit_study(study: Study, *, say: Say) -> Bridge:
     ComputationError
         If a gap does not reach the tolerance.
     """
-    from .bridges.fit import fit_bridge
+    from .bridges.fit import SolverOptions, fit_bridge
     from .schrodinger.solve import SWEEP_LIMIT
 
     writing.require_table_format(f".{study.output.format}")
@@ -57,8 +57,7 @@ def fit_study(study: Study, *, say: Say) -> Bridge:
         series,
         study.build_prior(),
         tolerance=study.solve.tolerance,
-        sweep_limit=study.solve.sweeps or SWEEP_LIMIT,
-        observe=observe,
+        options=SolverOptions(sweep_limit=study.solve.sweeps or SWEEP_LIMIT, observe=observe),
     )
 
 

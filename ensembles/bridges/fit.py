@@ -4,15 +4,16 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Callable
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from .. import checks
-from ..kernels.choose import gaussian_kernel
+from ..kernels.choose import MEMORY, gaussian_kernel
 from ..priors.base import LinearGaussianPrior, Transition, require_prior
 from ..schrodinger.gaussian_start import gaussian_potentials
-from ..schrodinger.iteration import Start
+from ..schrodinger.iteration import Start, Strategy
 from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
 from ..schrodinger.solve import SWEEP_LIMIT, solve
 from .bridge import Bridge
@@ -20,10 +21,30 @@ from .bridge import Bridge
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
 
-__all__ = ["fit_bridge"]
+__all__ = ["SolverOptions", "fit_bridge"]
 
 _LARGEST_RATIO = 1e6  # mean squared whitened distance; beyond it the noise ladder is not known to arrive
 _WARM_RATIO = 8.0  # change of noise variance up to which another fit's potentials beat the closed-form start
+
+
+@dataclass(frozen=True)
+class SolverOptions:
+    """How a fit is computed, apart from its tolerance.
+
+    Attributes
+    ----------
+    sweep_limit : passes over the kernel allowed a gap.
+    memory : bytes that a stored kernel may take; a larger problem is streamed.
+    strategy : what the iteration may use; see `ensembles.schrodinger.iteration.Strategy`.
+    allow_unconverged : return a bridge that misses its tolerance, with a warning, in place of an error.
+    observe : called as observe(gap, state) after every pass over the kernel; a true return stops that gap.
+    """
+
+    sweep_limit: int = SWEEP_LIMIT
+    memory: float = MEMORY
+    strategy: Strategy = field(default_factory=Strategy)
+    allow_unconverged: bool = False
+    observe: Callable[[int, State], bool | None] | None = None
 
 
 def fit_bridge(
@@ -31,25 +52,21 @@ def fit_bridge(
     prior: LinearGaussianPrior,
     *,
     tolerance: float = 1e-6,
-    sweep_limit: int = SWEEP_LIMIT,
     start: Bridge | None = None,
-    allow_unconverged: bool = False,
-    observe: Callable[[int, State], bool | None] | None = None,
+    options: SolverOptions | None = None,
 ) -> Bridge:
     """Fit the Schrödinger bridge through all snapshots of a series.
 
-    Over every gap, π_ij = a_i b_j exp(f_i + g_j) k_ij with the prior's transition density k and the two clouds'
-    weights as marginals; the bridge over K snapshots is the chain of the pairwise ones.
+    Over every gap, π_ij = a_i b_j exp(f_i + g_j) k_ij with the prior's transition density k and the two clouds' weights as
+    marginals; the bridge over K snapshots is the chain of the pairwise ones.
 
     Parameters
     ----------
     series : SnapshotSeries of K ≥ 2 snapshots.
     prior : Brownian or OrnsteinUhlenbeck, in the units of the series.
     tolerance : largest L1 error of either marginal of each coupling (weights sum to 1).
-    sweep_limit : passes over the kernel allowed a gap.
     start : another bridge through the same snapshots, whose potentials are a warm start.
-    allow_unconverged : return a bridge that misses its tolerance, with a warning, in place of an error.
-    observe : called as observe(gap, state) after every pass; a true return stops that gap.
+    options : `SolverOptions`: sweeps and memory allowed, progress, whether a bridge that missed its tolerance is returned.
 
     Returns
     -------
@@ -71,15 +88,16 @@ def fit_bridge(
     [0.5, 0.5]
     """
     require_prior(prior)
+    options = options or SolverOptions()
     solutions = []
     for k in range(len(series.times) - 1):
-        solution = _solve_gap(series, prior, k, tolerance, sweep_limit, start, observe)
+        solution = _solve_gap(series, prior, k, tolerance, start, options)
         if solution.outcome is not Outcome.CONVERGED:
             message = (
                 f"the bridge did not converge between t = {series.times[k]:g} and t = {series.times[k + 1]:g}; "
                 f"{solution.message}"
             )
-            if solution.outcome is Outcome.UNREACHABLE or not allow_unconverged:
+            if solution.outcome is Outcome.UNREACHABLE or not options.allow_unconverged:
                 raise ConvergenceError(message, solution)
             warnings.warn(message, RuntimeWarning, stacklevel=2)
         solutions.append(solution)
@@ -91,9 +109,8 @@ def _solve_gap(
     prior: LinearGaussianPrior,
     k: int,
     tolerance: float,
-    sweep_limit: int,
     start: Bridge | None,
-    observe: Callable[[int, State], bool | None] | None,
+    options: SolverOptions,
 ) -> Solution:
     transition = prior.transition(float(series.times[k + 1] - series.times[k]), series.dimension)
     u = transition.whiten_sources(series.clouds[k])
@@ -101,16 +118,17 @@ def _solve_gap(
     weights = (series.weights[k], series.weights[k + 1])
     _require_enough_noise(u, v, weights, prior, series, k)
 
-    def watch(state: State) -> bool | None:
-        return observe(k, state) if observe is not None else None
+    def observe(state: State) -> bool | None:
+        return options.observe(k, state) if options.observe is not None else None
 
     return solve(
-        gaussian_kernel(u, v),
+        gaussian_kernel(u, v, options.memory),
         weights,
         tolerance=tolerance,
-        sweep_limit=sweep_limit,
+        sweep_limit=options.sweep_limit,
         start=_start(u, v, weights, transition, start, series, k),
-        observe=watch,
+        strategy=options.strategy,
+        observe=observe,
     )
 
 
