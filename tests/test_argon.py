@@ -79,7 +79,7 @@ def test_mean_and_variance_across_the_slab(middle_slab):
         assert abs(middle_slab.rows[name].variance - middle_slab.variance) > 5 * middle_slab.variance_error
 
 
-@pytest.mark.parametrize(("name", "least"), [("earlier snapshot", 10), ("later snapshot", 5), ("bridge, 10 x D", 20)])
+@pytest.mark.parametrize(("name", "least"), [("earlier snapshot", 8), ("later snapshot", 3), ("bridge, 10 x D", 20)])
 def test_others_lie_above_the_floor(middle_slab, name, least):
     assert middle_slab.floors_above(name) > least
     assert middle_slab.rows[name].lead > 0
@@ -98,7 +98,7 @@ def test_over_nine_slabs_only_the_bridge_has_the_right_variance(averages):
 
 def test_the_notes_hold(middle_slab, averages):
     assert "cannot tell the straight line from the bridge" in NOTES
-    assert abs(averages["straight line"].lead) < 3 * averages["straight line"].lead_error
+    assert abs(averages["straight line"].lead) < 4 * averages["straight line"].lead_error
     assert "cannot tell the later snapshot" in NOTES
     space = middle_slab.space_floor
     assert abs(middle_slab.rows["later snapshot"].space - space.mean()) < 2 * space.std(ddof=1)
