@@ -15,7 +15,7 @@ from .newton import newton_states
 from .relaxation import RelaxationControl
 from .solution import State
 
-__all__ = ["Start", "Strategy", "solver_states", "sweep_states"]
+__all__ = ["Start", "Strategy", "level_states", "solver_states", "sweep_states"]
 
 Start = Callable[[float], tuple[np.ndarray, np.ndarray]]
 
@@ -97,12 +97,12 @@ def solver_states(
         last = scale == 1.0
         goal = tolerance if last else max(strategy.level_error, tolerance)
         goal = max(goal, scaled.floor)
-        state = yield from _level_states(scaled, (log_a, log_b), state, goal, strategy, last)
+        state = yield from level_states(scaled, (log_a, log_b), state, goal, strategy, last)
     if tolerance < kernel.floor:  # the rounded copy has given what it can
-        yield from _level_states(kernel.exact, (log_a, log_b), state, tolerance, strategy, True)
+        yield from level_states(kernel.exact, (log_a, log_b), state, tolerance, strategy, True)
 
 
-def _level_states(
+def level_states(
     kernel: Kernel,
     log_weights: tuple[np.ndarray, np.ndarray],
     state: State,

@@ -43,6 +43,7 @@ def newton_states(
         direction = _direction(coupling, b, columns, gradient, error)
         slope = float(gradient @ direction)
         value = float(b @ log_g + a @ log_f)
+        rounding = 1e-14 * max(1.0, float(b @ np.abs(log_g) + a @ np.abs(log_f)))
         length = min(1.0, 50.0 / max(float(np.abs(direction).max()), 1e-300))
         for _ in range(_HALVINGS):
             trial = log_g + length * direction
@@ -50,7 +51,10 @@ def newton_states(
             sweeps += 1
             gain = float(b @ trial + a @ sweep.log_f) - value
             trial_error = _column_error(b, trial, sweep.column_log_sums)
-            if trial_error < 0.5 * error or (gain >= 1e-4 * length * slope and trial_error < 4.0 * error):
+            # The dual never falls, by more than rounding: the error alone may be halved and restored in turn for ever.
+            if gain >= 1e-4 * length * slope and trial_error < 4.0 * error:
+                break
+            if gain >= -rounding and trial_error < 0.5 * error:
                 break
             length *= 0.4
         else:
