@@ -7,9 +7,10 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
 
+from ...schrodinger.solution import Certificate
 from ..wording import gap_title
 from .scene import Scene
-from .style import ACCENT, GREY, INK, SECOND, panel_grid, plain
+from .style import ACCENT, GREY, INK, SECOND, panel_grid, set_title
 
 __all__ = ["draw_convergence"]
 
@@ -30,7 +31,8 @@ def draw_convergence(figure: Figure, scene: Scene, rng: np.random.Generator) -> 
     # Errors at the level of rounding, of sweeps that meet one marginal exactly, would flatten everything else.
     axes[0].set_ylim(0.2 * max(min(smallest, lowest), 1e-3 * lowest), 3.0 * max(largest, lowest))
     axes[0].set_xlim(0.5, max(2, *(len(scene.bridge.solutions[gap].history) for gap in scene.gaps)) + 0.5)
-    figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper center", ncols=4, handlelength=2.6)
+    figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper center", ncols=4 if len(axes) > 1 else 2,
+                  handlelength=2.6)  # fmt: skip
     figure.supxlabel("iteration")
     figure.supylabel("error, Hilbert step")
     return _caption(scene, any(ladders))
@@ -62,11 +64,18 @@ def _draw_gap(ax: Axes, scene: Scene, gap: int) -> bool:
     ax.xaxis.set_major_locator(MaxNLocator(5, integer=True, min_n_ticks=1))
     certificate = solution.certificate
     title = (
-        f"{gap_title(scene.bridge.series, gap)}\n{solution.outcome.value}, L1 error {certificate.marginal_error:.1e}\n"
-        f"contraction {certificate.contraction_observed:.2g} (bound {certificate.contraction_bound:.4g})"
+        f"{gap_title(scene.bridge.series, gap)}\n{solution.outcome.value}, L1 error {certificate.marginal_error:.2g}\n"
+        f"contraction {_observed(certificate)} (bound {certificate.contraction_bound:.3g})"
     )
-    ax.set_title(plain(title), loc="left")
+    set_title(ax, title)
+    if not (shown[:, 1:] > 1e-3 * solution.certificate.tolerance).any():
+        ax.text(0.5, 0.5, "no error left after the start", transform=ax.transAxes, ha="center", va="center")
     return bool(changes.size)
+
+
+def _observed(certificate: Certificate) -> str:
+    contraction = certificate.contraction_observed
+    return f"{contraction:.2g}" if np.isfinite(contraction) else "not seen"
 
 
 def _caption(scene: Scene, ladder: bool) -> str:
@@ -77,7 +86,7 @@ def _caption(scene: Scene, ladder: bool) -> str:
         parts.append(
             f"{gap_title(scene.bridge.series, gap)}: {solution.outcome.value} after {solution.iterations} sweeps, "
             f"L1 error {certificate.marginal_error:.2g}, Hilbert step {certificate.hilbert_step:.2g}, contraction "
-            f"observed {certificate.contraction_observed:.3g} (a-priori bound {certificate.contraction_bound:.6g})"
+            f"observed: {_observed(certificate)} (a-priori bound {certificate.contraction_bound:.6g})"
         )
     steps = (
         " Vertical lines: steps of the noise ladder; ×s is the noise variance over the problem's own." if ladder else ""

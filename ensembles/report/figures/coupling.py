@@ -13,7 +13,7 @@ from matplotlib.ticker import MaxNLocator
 
 from ..wording import gap_title, time_axis_name
 from .scene import Scene
-from .style import ACCENT, GREY, INK, MARKERS, SECOND, TIME, WIDTH, _part, panel_grid, plain
+from .style import ACCENT, GREY, INK, MARKERS, SECOND, TIME, WIDTH, colour_part, panel_grid, plain, set_title
 
 if TYPE_CHECKING:
     from ...bridges.bridge import Bridge
@@ -24,7 +24,7 @@ __all__ = ["LabelFlow", "draw_coupling", "effective_targets", "label_flow"]
 _MOST_LABELS = 10
 _MOST_LINKS = 80
 _LONGEST = 16
-_FLOW = _part("Blues", 0.0, 0.9)
+_FLOW = colour_part("Blues", 0.0, 0.9)
 
 
 @dataclass(frozen=True, eq=False)
@@ -128,7 +128,7 @@ def _draw_flows(figure: Figure, scene: Scene) -> None:
         rows = [f"{name}\n({100 * share:.0f} %)" if share > 0 else name for name, share in zip(short, flow.shares)]
         ax.set_yticks(range(size), rows)
         ax.set_xticks(range(size), short, rotation=35, ha="right", rotation_mode="anchor")
-        ax.set_title(plain(gap_title(scene.bridge.series, gap)), loc="left")
+        set_title(ax, gap_title(scene.bridge.series, gap))
     figure.colorbar(image, ax=axes, fraction=0.04, pad=0.02, aspect=25).set_label("probability")
     figure.supxlabel("label later")
     figure.supylabel("label earlier")
@@ -138,12 +138,13 @@ def _draw_links(figure: Figure, scene: Scene, rng: np.random.Generator) -> list[
     """Draw links and histograms, a row a gap; the median effective number of targets of each."""
     series = scene.bridge.series
     ratio = 0.6 if series.dimension == 1 else min(max(scene.ratio, 0.3), 1.1)
-    figure.set_size_inches(WIDTH, len(scene.gaps) * (0.52 * WIDTH * ratio + 0.7))
+    row = min(0.52 * WIDTH * ratio + 0.7, max(9.0 / len(scene.gaps), 2.0))
+    figure.set_size_inches(WIDTH, len(scene.gaps) * row)
     grid = figure.subplots(len(scene.gaps), 2, squeeze=False, width_ratios=[1.6, 1])
     medians = []
     for (left, right), gap in zip(grid, scene.gaps):
         (_links_on_line if series.dimension == 1 else _links_in_plane)(left, scene, gap, rng)
-        left.set_title(plain(gap_title(series, gap)), loc="left")
+        set_title(left, gap_title(series, gap))
         medians.append(_draw_histogram(right, effective_targets(scene.bridge, gap), series.weights[gap]))
         right.set_xlabel(f"effective number of targets, of {len(series.clouds[gap + 1])}")
     return medians
@@ -171,9 +172,11 @@ def _draw_ends(ax: Axes, scene: Scene, gap: int, starts: np.ndarray, ends: np.nd
 def _links_in_plane(ax: Axes, scene: Scene, gap: int, rng: np.random.Generator) -> None:
     early, late = scene.bridge.series.clouds[gap], scene.bridge.series.clouds[gap + 1]
     sources, targets, others = _drawn_links(scene, gap, rng)
-    scene.frame(ax)
     project = scene.plane.project
     _draw_ends(ax, scene, gap, project(early[sources]), project(late[targets]), project(late[others]))
+    if scene.one_scale:
+        ax.set_aspect("equal", adjustable="datalim")
+    ax.autoscale_view()
     ax.set_xlabel(scene.plane.names[0])
     ax.set_ylabel(scene.plane.names[1])
 
@@ -197,7 +200,8 @@ def _draw_histogram(ax: Axes, numbers: np.ndarray, weights: np.ndarray) -> float
     median = float(numbers[order][np.searchsorted(np.cumsum(weights[order]), 0.5 * (1.0 - 1e-12))])
     low, high = float(numbers.min()), float(numbers.max())
     spread = high > 1.001 * low
-    bins = np.linspace(low, high, 21) if spread else np.array([low - 0.5, low + 0.5])
+    count = int(np.clip(np.sqrt(4.0 * numbers.size), 5, 20))
+    bins = np.linspace(low, high, count + 1) if spread else np.array([low - 0.5, low + 0.5])
     ax.hist(numbers, bins=bins, weights=weights, color=ACCENT, alpha=0.85, edgecolor="white", linewidth=0.4)
     ax.axvline(median, color=SECOND, lw=1.2, ls=(0, (4, 1.5)))
     ax.xaxis.set_major_locator(MaxNLocator(4))

@@ -8,7 +8,7 @@ from matplotlib.figure import Figure
 
 from ..wording import density_unit, time_text
 from .scene import Scene
-from .style import DENSITY, INK, MARKERS, TIME, WIDTH, panel_grid, plain
+from .style import DENSITY, INK, MARKERS, TIME, WIDTH, panel_grid, plain, set_title
 
 __all__ = ["density_on_grid", "draw_density"]
 
@@ -27,7 +27,10 @@ def draw_density(figure: Figure, scene: Scene, rng: np.random.Generator) -> str:
         how = "Curves: exact density; marks below: the snapshots."
     elif dimension == 2:
         _draw_contours(figure, scene)
-        how = f"Exact density, one colour scale for all panels, white below {100 * _LOWEST:g} % of the largest value."
+        how = (
+            f"Exact density, one colour scale for all panels, white below {100 * _LOWEST:g} % of the largest value."
+            f"{scene.projection_sentence}"
+        )
     else:
         _draw_bins(figure, scene, rng)
         how = f"Share of {_DRAWS} exact draws in each cell, over its area; one colour scale.{scene.projection_sentence}"
@@ -40,9 +43,13 @@ def density_on_grid(scene: Scene, t: float, finest: int = 120) -> tuple[np.ndarr
     particles = sum(len(cloud) for cloud in scene.bridge.series.clouds) / len(scene.bridge.series)
     steps = int(np.clip(np.sqrt(_WORK / (10.0 * particles)), 40, finest))
     cells = np.maximum(np.round(steps * scene.sides / scene.sides.max()), 25).astype(int)
-    x, y = (np.linspace(*scene.window[:, axis], cells[axis]) for axis in (0, 1))
+    x, y = (scene.ticks(axis, int(cells[axis])) for axis in (0, 1))
     points = np.stack(np.meshgrid(x, y), axis=-1).reshape(-1, 2)
     return x, y, np.exp(scene.bridge.log_density(t, points)).reshape(y.size, x.size)
+
+
+def _when(scene: Scene, t: float) -> str:
+    return time_text(scene.bridge.series, float(f"{t:.4g}"))
 
 
 def _label(scene: Scene, dimension: int) -> str:
@@ -54,13 +61,11 @@ def _draw_curves(figure: Figure, scene: Scene, rng: np.random.Generator) -> None
     series = scene.bridge.series
     figure.set_size_inches(WIDTH * 0.8, 3.4)
     ax, rug = figure.subplots(2, 1, sharex=True, height_ratios=[1, 0.06 + 0.05 * min(len(series), 8)])
-    x = np.linspace(*scene.window[:, 0], 500)
+    x = scene.ticks(0, 500)
     span = series.times[-1] - series.times[0]
     for t, dashes in zip(scene.times, _DASHES):
         density = np.exp(scene.bridge.log_density(t, x[:, None]))
-        ax.plot(
-            x, density, color=TIME((t - series.times[0]) / span), ls=dashes, lw=1.6, label=plain(time_text(series, t))
-        )
+        ax.plot(x, density, color=TIME((t - series.times[0]) / span), ls=dashes, lw=1.6, label=plain(_when(scene, t)))
     ax.set_ylim(bottom=0)
     ax.set_ylabel(_label(scene, 1))
     ax.legend()
@@ -83,7 +88,7 @@ def _draw_contours(figure: Figure, scene: Scene) -> None:
     for ax, t, (x, y, values) in zip(axes, scene.times, grids):
         filled = ax.contourf(x, y, values, levels=levels, cmap=DENSITY, norm=PowerNorm(0.5, 0.0, largest))
         ax.contour(x, y, values, levels=levels[[0]], colors=INK, linewidths=0.4)
-        ax.set_title(plain(time_text(scene.bridge.series, float(f"{t:.4g}"))), loc="left")
+        set_title(ax, _when(scene, t))
         scene.frame(ax)
     bar = figure.colorbar(filled, ax=axes, fraction=0.05, pad=0.02, aspect=30, format="%.2g")
     bar.set_label(_label(scene, 2))
@@ -98,15 +103,16 @@ def _draw_bins(figure: Figure, scene: Scene, rng: np.random.Generator) -> None:
     extent = tuple(scene.window.T.ravel())
     # Hexagons stand on two lattices of across x rows cells, so each covers half a lattice cell.
     area = 0.5 * scene.sides.prod() / (across * rows)
-    drawn = []
+    drawn, largest = [], 0.0
     for ax, t in zip(axes, scene.times):
         points = scene.plane.project(scene.bridge.sample(t, _DRAWS, rng))
         bins = ax.hexbin(*points.T, gridsize=(across, rows), extent=extent, mincnt=1, cmap=DENSITY, linewidths=0.1)
-        bins.set_array(bins.get_array() / (_DRAWS * area))
-        ax.set_title(plain(time_text(scene.bridge.series, float(f"{t:.4g}"))), loc="left")
+        shares = np.asarray(bins.get_array()) / (_DRAWS * area)
+        bins.set_array(shares)
+        largest = max(largest, float(shares.max()))
+        set_title(ax, _when(scene, t))
         scene.frame(ax)
         drawn.append(bins)
-    largest = max(float(bins.get_array().max()) for bins in drawn)
     for bins in drawn:
         bins.set_norm(PowerNorm(0.5, 0.0, largest))
     bar = figure.colorbar(drawn[-1], ax=axes, fraction=0.05, pad=0.02, aspect=30, format="%.2g")

@@ -9,7 +9,7 @@ from matplotlib.figure import Figure
 from ..wording import gap_title, speed_unit, time_text
 from .density import density_on_grid
 from .scene import Scene
-from .style import ACCENT, DENSITY, GREY, INK, SECOND, panel_grid, plain, quantity, round_number
+from .style import ACCENT, DENSITY, GREY, INK, SECOND, panel_grid, plain, quantity, round_number, set_title
 
 __all__ = ["draw_drift"]
 
@@ -42,7 +42,7 @@ def _middle(scene: Scene, gap: int) -> float:
 
 def _title(scene: Scene, gap: int) -> str:
     series = scene.bridge.series
-    return plain(f"{time_text(series, _middle(scene, gap))}  (gap {gap_title(series, gap).partition('= ')[2]})")
+    return f"{time_text(series, _middle(scene, gap))}  (gap {gap_title(series, gap).partition('= ')[2]})"
 
 
 def _added(scene: Scene, t: float, points: np.ndarray) -> np.ndarray:
@@ -51,7 +51,7 @@ def _added(scene: Scene, t: float, points: np.ndarray) -> np.ndarray:
 
 def _draw_curves(figure: Figure, scene: Scene) -> None:
     axes = panel_grid(figure, len(scene.gaps), 0.75, above=0.3)
-    grid = np.linspace(*scene.window[:, 0], 400)
+    grid = scene.ticks(0, 400)
     for ax, gap in zip(axes, scene.gaps):
         t = _middle(scene, gap)
         density = np.exp(scene.bridge.log_density(t, grid[:, None]))
@@ -64,7 +64,7 @@ def _draw_curves(figure: Figure, scene: Scene) -> None:
         back.fill_between(grid, density, color=GREY, alpha=0.25, lw=0)
         back.set_ylim(0, 3.0 * density.max())
         back.set_axis_off()
-        ax.set_title(_title(scene, gap), loc="left")
+        set_title(ax, _title(scene, gap))
     figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper center", ncols=2)
     unit = speed_unit(scene.bridge.series)
     figure.supxlabel(scene.plane.names[0])
@@ -73,40 +73,39 @@ def _draw_curves(figure: Figure, scene: Scene) -> None:
 
 def _draw_arrows(figure: Figure, scene: Scene, rng: np.random.Generator) -> str:
     axes = panel_grid(figure, len(scene.gaps), scene.ratio, most=3)
-    cell = scene.sides.max() / _ARROWS if scene.one_scale else scene.sides / _ARROWS
+    cell = (np.full(2, scene.sides.max()) if scene.one_scale else scene.sides) / _ARROWS
     exact = scene.bridge.series.dimension == 2
     field = _exact_field if exact else _mean_field
     fields = [field(ax, scene, gap, cell, rng) for ax, gap in zip(axes, scene.gaps)]
-    speeds = np.concatenate([np.linalg.norm(vectors, axis=1) for _, vectors in fields])
-    fast = float(np.quantile(speeds, 0.95)) if speeds.size else 0.0
+    rates = np.concatenate([np.linalg.norm(vectors / cell, axis=1) for _, vectors in fields])
+    # One scale in all panels: a fast arrow is 1.3 cells long.
+    fast = float(np.quantile(rates, 0.95)) if rates.size else 0.0
     for ax, gap, (points, vectors) in zip(axes, scene.gaps, fields):
         scene.frame(ax)
-        ax.set_title(_title(scene, gap), loc="left")
-        if fast > 1e-12:
-            # One scale in all panels: a fast arrow is 1.3 cells long.
-            arrows = ax.quiver(*points.T, *vectors.T, angles="xy", scale_units="xy", scale=fast / (1.3 * np.min(cell)),
+        set_title(ax, _title(scene, gap))
+        if fast > 0.0:
+            arrows = ax.quiver(*points.T, *vectors.T, angles="xy", scale_units="xy", scale=fast / 1.3,
                                color=INK, width=0.0045, headwidth=3.6, headlength=4.2, headaxislength=3.8,
                                minlength=0.5, pivot="tail", zorder=3)  # fmt: skip
-    if fast > 1e-12:
-        key = round_number(fast)
+    if fast > 0.0:
+        key = round_number(fast * float(cell[0]))
         text = plain(quantity(key, speed_unit(scene.bridge.series)))
         axes[-1].quiverkey(arrows, 0.95, 0.13 / figure.get_figheight(), key, text, labelpos="W", coordinates="figure",
                            color=INK, fontproperties={"size": 8})  # fmt: skip
     scene.name_axes(figure)
-    still = "" if fast > 1e-12 else " It is zero everywhere: the prior alone carries one snapshot into the next."
     if exact:
         return (
             f"Arrows: 2D ∇ log φ, to one scale; colour: density. Drawn where the density is at least "
-            f"{100 * _POPULATED:g} % of its largest value.{still}"
+            f"{100 * _POPULATED:g} % of its largest value."
         )
     return (
         f"Arrows: mean of 2D ∇ log φ in each cell over {_DRAWS} draws from the population, to one scale, where at "
-        f"least {_FEWEST} of them fell; dots: draws.{still}"
+        f"least {_FEWEST} of them fell; dots: draws."
     )
 
 
 def _exact_field(
-    ax: Axes, scene: Scene, gap: int, cell: float | np.ndarray, rng: np.random.Generator
+    ax: Axes, scene: Scene, gap: int, cell: np.ndarray, rng: np.random.Generator
 ) -> tuple[np.ndarray, np.ndarray]:
     """Points (n, 2) and added drift (n, 2) on a grid where there is population, over a background of its density."""
     t = _middle(scene, gap)
@@ -114,15 +113,14 @@ def _exact_field(
     largest = density.max()
     levels = largest * np.linspace(np.sqrt(_POPULATED), 1.0, 7) ** 2
     ax.contourf(x, y, density, levels=levels, cmap=DENSITY, alpha=0.45, extend="max")
-    steps = np.broadcast_to(cell, 2)
-    ticks = [np.arange(scene.window[0, k] + 0.5 * steps[k], scene.window[1, k], steps[k]) for k in (0, 1)]
+    ticks = [np.arange(scene.window[0, k] + 0.5 * cell[k], scene.window[1, k], cell[k]) for k in (0, 1)]
     points = np.stack(np.meshgrid(*ticks), axis=-1).reshape(-1, 2)
     points = points[np.exp(scene.bridge.log_density(t, points)) >= _POPULATED * largest]
     return points, _added(scene, t, points) if len(points) else points
 
 
 def _mean_field(
-    ax: Axes, scene: Scene, gap: int, cell: float | np.ndarray, rng: np.random.Generator
+    ax: Axes, scene: Scene, gap: int, cell: np.ndarray, rng: np.random.Generator
 ) -> tuple[np.ndarray, np.ndarray]:
     """Mean position and mean added drift, in the plane, of the draws in each cell."""
     t = _middle(scene, gap)

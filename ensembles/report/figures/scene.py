@@ -93,24 +93,27 @@ class Scene:
 
     @property
     def projection_sentence(self) -> str:
-        """Where the picture is a projection, what of."""
-        if self.bridge.series.dimension <= 2:
+        """Where the picture is a projection, what of; and whether its axes differ in scale."""
+        if self.bridge.series.dimension == 1:
             return ""
+        scales = "" if self.one_scale else " The two axes have different scales."
+        if self.bridge.series.dimension == 2:
+            return scales
         return (
             f" Positions in {self.bridge.series.dimension} coordinates are projected onto the first two principal axes "
-            "of all snapshots together."
+            f"of all snapshots together.{scales}"
         )
 
     @cached_property
     def window(self) -> np.ndarray:
-        """Lower and upper ends (2, 2), on a line (2, 1), of what is drawn: all snapshots, 2.5 spreads at mid-gap."""
+        """Lower and upper ends (2, 2), on a line (2, 1), of what is drawn: all snapshots, 3.1 spreads at mid-gap."""
         series = self.bridge.series
         corners = [self.plane.project(cloud) for cloud in series.clouds]
         for start, end in zip(series.times, series.times[1:]):
             mean, covariance = self.bridge.moments(0.5 * (start + end))
             spread = np.sqrt(np.diag(self.plane.axes.T @ covariance @ self.plane.axes))
             middle = self.plane.project(mean[None])
-            corners += [middle - 2.5 * spread, middle + 2.5 * spread]
+            corners += [middle - 3.1 * spread, middle + 3.1 * spread]
         points = np.concatenate(corners)
         low, high = points.min(axis=0), points.max(axis=0)
         margin = 0.04 * (high - low)
@@ -130,6 +133,10 @@ class Scene:
     def ratio(self) -> float:
         """Height over width of a panel that shows the window."""
         return float(self.sides[1] / self.sides[0]) if self.one_scale else 0.5
+
+    def ticks(self, axis: int, count: int) -> np.ndarray:
+        """`count` even positions across the window along one axis."""
+        return np.linspace(self.window[0, axis], self.window[1, axis], count)
 
     def frame(self, ax: Axes) -> None:
         """Set the window of a panel in space."""

@@ -20,11 +20,13 @@ __all__ = [
     "SECOND",
     "TIME",
     "WIDTH",
+    "colour_part",
     "panel_grid",
     "plain",
     "polish",
     "quantity",
     "round_number",
+    "set_title",
 ]
 
 WIDTH = 7.0
@@ -37,14 +39,14 @@ MARKERS = ("o", "^", "s", "D", "v", "P", "X", "*")
 """One a snapshot, so that colour is not needed to tell them apart."""
 
 
-def _part(name: str, low: float, high: float) -> Colormap:
+def colour_part(name: str, low: float, high: float) -> Colormap:
     return LinearSegmentedColormap.from_list(f"{name} part", colormaps[name](np.linspace(low, high, 256)))
 
 
-TIME: Colormap = _part("viridis", 0.0, 0.88)
+TIME: Colormap = colour_part("viridis", 0.0, 0.88)
 """Early is dark, late is light; the palest end is left out because it is lost on white."""
 
-DENSITY: Colormap = _part("YlGnBu", 0.12, 1.0)
+DENSITY: Colormap = colour_part("YlGnBu", 0.12, 1.0)
 """Little is light, much is dark."""
 
 _SIZES = {"label": 9.0, "tick": 8.0, "title": 9.0, "legend": 8.0, "note": 7.5}
@@ -53,6 +55,11 @@ _SIZES = {"label": 9.0, "tick": 8.0, "title": 9.0, "legend": 8.0, "note": 7.5}
 def plain(text: str) -> str:
     """Text from outside, in which a dollar sign is a dollar sign and not the beginning of a formula."""
     return text.replace("$", r"\$")
+
+
+def set_title(ax: Axes, text: str) -> None:
+    """Say what a panel shows, above it on the left."""
+    ax.set_title(plain(text), loc="left", fontsize=_SIZES["title"], color=INK)
 
 
 def panel_grid(
@@ -96,13 +103,11 @@ def panel_grid(
 def polish(figure: Figure) -> None:
     """Set sizes and lines of everything drawn so far: open axes, small outward ticks, sizes legible at column width."""
     for ax in figure.axes:
-        if getattr(ax, "_colorbar", None) is None:
-            ax.spines[["top", "right"]].set_visible(False)
+        ax.spines[["top", "right"]].set_visible(False)
         ax.tick_params(labelsize=_SIZES["tick"], colors=INK, length=3, width=0.6)
         for spine in ax.spines.values():
             spine.set_linewidth(0.6)
         _size([ax.xaxis.label, ax.yaxis.label], _SIZES["label"])
-        _size([ax.title, ax._left_title], _SIZES["title"])
         _size(ax.texts, _SIZES["note"], only_larger=True)
     legends = [legend for legend in (*figure.legends, *(ax.get_legend() for ax in figure.axes)) if legend]
     for legend in legends:
@@ -114,7 +119,7 @@ def polish(figure: Figure) -> None:
 def _size(texts: Sequence[Text], size: float, only_larger: bool = False) -> None:
     for text in texts:
         text.set_color(text.get_color() if only_larger else INK)
-        if not only_larger or text.get_fontsize() > size:
+        if not only_larger or float(text.get_fontsize()) > size:
             text.set_fontsize(size)
 
 
