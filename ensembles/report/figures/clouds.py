@@ -61,8 +61,8 @@ def _draw_line(figure: Figure, scene: Scene, rng: np.random.Generator, shown: in
 def _draw_plane(figure: Figure, scene: Scene, rng: np.random.Generator, shown: int) -> None:
     series = scene.bridge.series
     colours = _time_colours(scene)
-    height = min(max(0.8 * WIDTH * scene.ratio, 2.2), 5.4)
-    figure.set_size_inches(min(WIDTH, max(height / scene.ratio + 1.6, 4.5)), height + 0.8)
+    height = min(max(0.8 * WIDTH * scene.ratio, 2.2), 4.8)
+    figure.set_size_inches(WIDTH, height + 0.8)
     ax = figure.subplots()
     many = max(len(cloud) for cloud in series.clouds) > 100
     for k, (t, cloud, weights) in enumerate(zip(series.times, series.clouds, series.weights)):

@@ -90,7 +90,7 @@ def _draw_arrows(figure: Figure, scene: Scene, rng: np.random.Generator) -> str:
     if fast > 0.0:
         key = round_number(fast * float(cell[0]))
         text = plain(quantity(key, speed_unit(scene.bridge.series)))
-        axes[-1].quiverkey(arrows, 0.95, 0.13 / figure.get_figheight(), key, text, labelpos="W", coordinates="figure",
+        axes[-1].quiverkey(arrows, 0.91, 0.13 / figure.get_figheight(), key, text, labelpos="W", coordinates="figure",
                            color=INK, fontproperties={"size": 8})  # fmt: skip
     scene.name_axes(figure)
     if exact:

@@ -85,7 +85,7 @@ def panel_grid(
         return columns * (width + 0.1) + 0.65 + beside, height
 
     def cost(columns: int) -> float:
-        return abs(size(columns)[1] - 0.6 * WIDTH) + 0.5 * (-count % columns)
+        return abs(size(columns)[1] - 0.6 * WIDTH) + 0.8 * (-count % columns)
 
     columns = min(range(1, min(count, most) + 1), key=cost)
     rows = -(-count // columns)
