@@ -97,7 +97,7 @@ def load_bridge(path: str | Path) -> Bridge:
     try:
         with open(path, "rb") as stream, np.lib.npyio.NpzFile(stream, allow_pickle=False) as archive:
             arrays = {name: archive[name] for name in archive.files}
-    except (zipfile.BadZipFile, ValueError, OSError, EOFError, KeyError) as cause:
+    except (zipfile.BadZipFile, ValueError, OSError, EOFError, KeyError, RuntimeError) as cause:
         raise checks.InputError(
             f"the file cannot be read as a bridge; {str(path)!r} is truncated, damaged or of another kind ({cause}); "
             "save the bridge again"
