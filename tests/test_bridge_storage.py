@@ -11,7 +11,7 @@ from numpy.testing import assert_array_equal
 
 import ensembles
 from ensembles.bridges.fit import SolverOptions
-from ensembles.bridges.storage import load_bridge
+from ensembles.bridges.storage import _digest, load_bridge
 
 
 @pytest.fixture(scope="module")
@@ -97,8 +97,6 @@ def test_a_bridge_that_missed_its_tolerance_is_known_as_such(tmp_path):
 
 def rewritten(path, change):
     """The file again with its header changed, checksum included."""
-    from ensembles.bridges.storage import _digest
-
     with np.load(path) as archive:
         arrays = {name: archive[name] for name in archive.files if name != "digest"}
     header = json.loads(str(arrays["header"]))
