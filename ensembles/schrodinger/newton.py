@@ -19,7 +19,8 @@ from .solution import State
 
 __all__ = ["newton_states"]
 
-_DROPPED = 1e-7  # mass of a row that the Hessian may lose, in units of 1/n, entry by entry
+_DROPPED = (1e-14, 1e-7)  # mass of a row that the Hessian may lose, in units of 1/n, entry by entry: least and most
+_DAMPING = (1e-13, 1e-9)  # added to the Hessian's diagonal, in units of b: least and most
 _HALVINGS = 12
 
 
@@ -35,11 +36,13 @@ def newton_states(
     log_f = sweep.log_f
     while True:
         columns = b * np.exp(np.minimum(log_g + sweep.column_log_sums, 50.0))
-        coupling = kernel.entries(log_a + log_f, log_b + log_g, _DROPPED / max(kernel.shape), entry_limit)
-        if coupling is None:
-            return
         gradient = b - columns
         error = float(np.abs(gradient).sum())
+        # Where particles nearly pair off, the last error lies in links as weak as itself: they must not be dropped.
+        dropped = float(np.clip(0.1 * error, *_DROPPED)) / max(kernel.shape)
+        coupling = kernel.entries(log_a + log_f, log_b + log_g, dropped, entry_limit)
+        if coupling is None:
+            return
         direction = _direction(coupling, b, columns, gradient, error)
         slope = float(gradient @ direction)
         value = float(b @ log_g + a @ log_f)
@@ -76,8 +79,8 @@ def _direction(
     kept = np.asarray(coupling.sum(axis=0)).ravel()
     inverse_rows = 1.0 / np.maximum(rows, 1e-300)
     squares = coupling.multiply(coupling)
-    damping = np.maximum(1e-9 * b, 0.0) + np.maximum(b - kept, 0.0) * (kept < 0.5 * b)
-    diagonal = np.maximum(kept - squares.T @ inverse_rows, 0.0) + damping + 1e-12 * b
+    damping = np.clip(1e-3 * error, *_DAMPING) * b + np.maximum(b - kept, 0.0) * (kept < 0.5 * b)
+    diagonal = np.maximum(kept - squares.T @ inverse_rows, 0.0) + damping
     transposed = coupling.T.tocsr()
 
     def apply(vector: np.ndarray) -> np.ndarray:

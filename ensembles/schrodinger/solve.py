@@ -44,7 +44,8 @@ def solve(
         them at the top of the ladder; zeros by default.
     sweep_limit : passes over the kernel.
     strategy : what the iteration may use.
-    observe : called with every `State`; a true return stops the run, which then counts as having met its limit.
+    observe : called with every `State`; a true return stops the run, which counts as having met its limit unless
+        its potentials meet the tolerance.
 
     Returns
     -------
@@ -87,7 +88,12 @@ def solve(
             state = replace(state, log_f=state.log_f * state.scale, log_g=state.log_g * state.scale, scale=1.0)
         final_f, certificate = certify(reduced.exact, log_weights, state.log_g, state.log_f, run.contraction, tolerance)
         state = replace(state, log_f=final_f)
-        if run.outcome is not Outcome.CONVERGED or certificate.marginal_error <= tolerance:
+        if (
+            certificate.marginal_error <= tolerance
+        ):  # also where the run had given up or was stopped: this is what counts
+            run.outcome = Outcome.CONVERGED
+            break
+        if run.outcome is not Outcome.CONVERGED:
             break
         # The run was content with a rounded kernel, or with an f on its way between two sweeps: go on with the exact one.
         run.outcome = Outcome.ITERATION_LIMIT
