@@ -125,7 +125,7 @@ def test_a_change_of_units_changes_nothing(problem, length, time):
     assert_allclose(densities, one.log_density(0.4, x), rtol=1e-7, atol=1e-6)
 
 
-@given(problems())
+@given(problems(lowest=-2.0))  # below, particles may pair off, and rounding decides the drift between the pairs
 def test_time_reversal_swaps_everything(problem):
     one = brownian(problem)
     two = brownian(Clouds(problem.y, problem.x, problem.b, problem.a, problem.epsilon))
@@ -167,7 +167,7 @@ def test_a_duplicated_particle_is_a_doubled_weight(problem):
     assert_allclose(twice[1:-1], once[1:], atol=1e-9)
 
 
-@given(problems(lowest=-3.0))
+@given(problems(lowest=-1.5))  # below, sweeps alone may contract by less than 1 % in a thousand
 def test_every_way_to_iterate_gives_the_same_coupling(problem):
     expected = solved(problem)
     for options in (
