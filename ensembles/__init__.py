@@ -20,6 +20,9 @@ _HOMES = {
     "SolverOptions": "bridges.fit",
     "load_bridge": "bridges.storage",
     "gaussian_bridge": "bridges.closed_form",
+    "MixtureEnds": "bridges.smooth",
+    "KernelEnds": "bridges.smooth",
+    "BridgeModel": "estimator",
     "Box": "priors.box",
     "link_particles": "links.link",
     "LinkOptions": "links.candidates",
@@ -58,9 +61,12 @@ if TYPE_CHECKING:
     from .bridges.closed_form import gaussian_bridge as gaussian_bridge
     from .bridges.fit import SolverOptions as SolverOptions
     from .bridges.fit import fit_bridge as fit_bridge
+    from .bridges.smooth import KernelEnds as KernelEnds
+    from .bridges.smooth import MixtureEnds as MixtureEnds
     from .bridges.storage import load_bridge as load_bridge
     from .checks import ComputationError as ComputationError
     from .checks import InputError as InputError
+    from .estimator import BridgeModel as BridgeModel
     from .links.candidates import LinkOptions as LinkOptions
     from .links.link import link_particles as link_particles
     from .priors.box import Box as Box

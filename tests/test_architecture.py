@@ -25,6 +25,7 @@ MAY_IMPORT = {
     "assessment": FOUNDATION | {"bridges", "snapshots", "priors", "kernels", "schrodinger"},
     "sweep": FOUNDATION,
     "report": FOUNDATION | {"assessment", "lineage", "bridges", "snapshots", "priors", "kernels", "schrodinger"},
+    "estimator": FOUNDATION | {"bridges", "snapshots", "priors"},
     "study_problems": {"checks"},
     "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems"},
     "overview": FOUNDATION | {"snapshots", "priors", "report"},

@@ -10,14 +10,15 @@ import numpy as np
 from ..endpoints.ascent import Ascent, ascend
 from ..endpoints.covariance import parametrisation
 from ..endpoints.likelihood import Likelihood, WhitenedClouds
-from .mixture_starts import cluster_labels, coupled_starts, gaussian_component, start_from_clusters
+from .mixture_starts import cluster_labels, coupled_starts, gaussian_component, start_by_splitting, start_from_clusters
 from .smooth import MixtureEnds
 
-__all__ = ["MixtureFit", "choose_count", "fit_mixture", "split_folds", "stated_floor"]
+__all__ = ["MixtureFit", "candidates", "choose_count", "distinct_rows", "fit_mixture", "split_folds", "stated_floor"]
 
 _WHOLE = 4_000  # points up to which the choice is by 4 folds; beyond it one held-out part
 _PART = 15_000  # points of the training and of the held-out part, at most
 _COLLAPSE = 1e-3  # standard deviation² that the stated prior holds a component at, beside the whole cloud's
+_LARGE = 2e6  # parameters times points beyond which the last ascent, too, stops at what the data can tell
 _FINE = 0.02  # an ascent stops below this share of the log-likelihood's own optimism, parameters / 2n
 
 
@@ -44,79 +45,84 @@ def fit_mixture(
     clouds: WhitenedClouds, components: int | None, ends: MixtureEnds, warm: Callable[[Likelihood], np.ndarray] | None
 ) -> MixtureFit:
     """Fit the terminal potential; `warm` gives parameters to begin with, from another fit."""
-    floor = stated_floor(clouds)
+    walk = _Walk(clouds, ends)
+    tried = np.empty((0, 3))
+    notes: tuple[str, ...] = ()
+    count = components
+    if count is None:
+        count, tried = choose_count(walk.contributions, walk.most)
+        listed = ", ".join(f"{k:.0f}" for k in tried[:, 0])
+        notes = (f"{count} component(s) chosen by held-out likelihood among {listed}",)
+    model = walk.likelihood(clouds, count)
+    theta = walk.beginning(model) if warm is None else warm(model)
     size = min(len(clouds.u), len(clouds.v))
+    resolution = _FINE * model.size / (2.0 * size) if model.size * size > _LARGE else 0.0
+    final = ascend(model.value_and_gradient, theta, model.scale(theta), resolution=resolution)
+    return MixtureFit(model, final, tried, notes + _collapsed(model, final))
 
-    def likelihood(part: WhitenedClouds, count: int) -> Likelihood:
-        kind = parametrisation(ends.covariance, count, part.u.shape[1], ends.rank)
+
+class _Walk:
+    """Fits with a rising number of components on parts of the data; each begins at the one before among others."""
+
+    def __init__(self, clouds: WhitenedClouds, ends: MixtureEnds) -> None:
+        self.clouds, self.ends, self.floor = clouds, ends, stated_floor(clouds)
+        folds = split_folds(len(clouds.u), len(clouds.v), ends.rng)
+        self.parts = [(clouds.subset(*train), clouds.subset(*rest)) for train, rest in folds]
+        self.most = min(ends.most, *(distinct_rows(train.v, ends.most) for train, _ in self.parts))
+        coupled = ends.begin != "clusters"
+        self.plans = [coupled_starts(train, ends.rng) if coupled else None for train, _ in self.parts]
+        self.fits: dict[tuple[int, int], Ascent] = {}
+
+    def likelihood(self, part: WhitenedClouds, count: int) -> Likelihood:
+        kind = parametrisation(self.ends.covariance, count, part.u.shape[1], self.ends.rank)
         strength = 0.0 if count == 1 else 1.0 / min(len(part.u), len(part.v))
-        return Likelihood(part, kind, floor, strength)
+        return Likelihood(part, kind, self.floor, strength)
 
-    folds = split_folds(len(clouds.u), len(clouds.v), ends.rng)
-    parts = [(clouds.subset(*train), clouds.subset(*rest)) for train, rest in folds]
-    coupled = [coupled_starts(train, ends.rng) if ends.begin != "clusters" else None for train, _ in parts]
-
-    def fitted(train: WhitenedClouds, rest: WhitenedClouds, plan: Plan, count: int, thorough: bool) -> Ascent:
-        best = None
-        for theta, model in _beginnings(likelihood(train, count), plan, ends, thorough):
-            ascent = ascend(
-                model.value_and_gradient,
-                theta,
-                model.scale(theta),
-                resolution=_FINE * model.size / (2.0 * len(rest.v)),
-                held_out=likelihood(rest, count).value,
-            )
-            if best is None or ascent.value > best.value:
-                best = ascent
-        assert best is not None
-        return best
-
-    def contributions(count: int) -> list[np.ndarray]:
+    def contributions(self, count: int) -> list[np.ndarray]:
         """Held-out terms, each times its weight, whose sum is J (averaged over folds)."""
         out = []
-        for (train, rest), plan in zip(parts, coupled):
-            ahead, behind = likelihood(rest, count).terms(fitted(train, rest, plan, count, False).theta)
-            out += [rest.b * ahead / len(parts), -rest.a * behind / len(parts)]
+        for fold, (_, rest) in enumerate(self.parts):
+            ahead, behind = self.likelihood(rest, count).terms(self.fit(fold, count).theta)
+            out += [rest.b * ahead / len(self.parts), -rest.a * behind / len(self.parts)]
         return out
 
-    notes: list[str] = []
-    tried = np.empty((0, 3))
-    count = components
-    if warm is None and count is None:
-        count, tried = choose_count(contributions, min(ends.most, _distinct(clouds.v)))
-        notes.append(
-            f"{count} component(s) chosen by held-out likelihood among {', '.join(f'{k:.0f}' for k in tried[:, 0])}"
-        )
-    if warm is not None:
-        count = components
-    assert count is not None
-    model = likelihood(clouds, count)
-    if warm is not None:
-        theta = warm(model)
-    elif count == 1:
-        theta = start_from_clusters(model, np.zeros(len(clouds.v), dtype=np.int64))
-    else:
-        train, rest = parts[0]
-        theta = fitted(train, rest, coupled[0], count, True).theta
-    work = model.size * size
-    resolution = _FINE * model.size / (2.0 * size) if work > 2e6 else 0.0
-    final = ascend(model.value_and_gradient, theta, model.scale(theta), resolution=resolution)
-    return MixtureFit(model, final, tried, tuple(notes) + _collapsed(model, final))
+    def fit(self, fold: int, count: int) -> Ascent:
+        """The best of all beginnings on the fold's training part, stopped by its held-out part."""
+        if (fold, count) not in self.fits:
+            train, rest = self.parts[fold]
+            model, judge = self.likelihood(train, count), self.likelihood(rest, count)
+            resolution = _FINE * model.size / (2.0 * len(rest.v))
+            runs = [
+                ascend(model.value_and_gradient, theta, model.scale(theta), resolution=resolution, held_out=judge.value)
+                for theta in self._beginnings(model, fold)
+            ]
+            self.fits[fold, count] = max(runs, key=lambda run: run.value)
+        return self.fits[fold, count]
 
+    def beginning(self, model: Likelihood) -> np.ndarray:
+        """Where the fit to all the data begins: the fit to a part, if that is large enough for so many components."""
+        count = model.kind.count
+        if count == 1:
+            return start_from_clusters(model, np.zeros(len(model.clouds.v), dtype=np.int64))
+        if count > self.most:
+            return start_from_clusters(model, cluster_labels(model.clouds.v, model.clouds.b, count, self.ends.rng))
+        if (0, count) not in self.fits:  # the number was given: walk up to it
+            for fewer in candidates(count - 1):
+                self.fit(0, fewer)
+        return self.fit(0, count).theta
 
-Plan = tuple[np.ndarray, np.ndarray, np.ndarray] | None
-
-
-def _beginnings(
-    model: Likelihood, plan: Plan, ends: MixtureEnds, thorough: bool
-) -> Iterator[tuple[np.ndarray, Likelihood]]:
-    """Starting parameters, one after the other; the coupling first."""
-    for repeat in range(ends.repeats + 1 if thorough and model.kind.count > 1 else 1):
-        labels = cluster_labels(model.clouds.v, model.clouds.b, model.kind.count, ends.rng + repeat)
-        if plan is not None:
-            yield start_from_clusters(model, labels, plan), model
-        if ends.begin == "clusters" or (ends.begin == "both" and (thorough or len(model.clouds.v) <= _WHOLE)):
-            yield start_from_clusters(model, labels), model
+    def _beginnings(self, model: Likelihood, fold: int) -> Iterator[np.ndarray]:
+        count, ends = model.kind.count, self.ends
+        fewer = max((k for f, k in self.fits if f == fold and k < count), default=0)
+        if fewer:
+            before = self.fits[fold, fewer]
+            yield start_by_splitting(model, self.likelihood(model.clouds, fewer).unpack(before.theta))
+        for repeat in range(ends.repeats if count > 1 else 1):
+            labels = cluster_labels(model.clouds.v, model.clouds.b, count, ends.rng + repeat)
+            if self.plans[fold] is not None:
+                yield start_from_clusters(model, labels, self.plans[fold])
+            if ends.begin != "coupling" and (ends.begin == "clusters" or len(model.clouds.v) <= _WHOLE):
+                yield start_from_clusters(model, labels)
 
 
 def split_folds(n: int, m: int, seed: int) -> list[tuple[tuple[np.ndarray, np.ndarray], tuple[np.ndarray, np.ndarray]]]:
@@ -144,7 +150,7 @@ def choose_count(contributions: Callable[[int], list[np.ndarray]], most: int) ->
     """
     values: dict[int, list[np.ndarray]] = {}
     best, worse = 1, 0
-    for count in _candidates(most):
+    for count in candidates(most):
         values[count] = contributions(count)
         if count == 1:
             continue
@@ -162,7 +168,8 @@ def choose_count(contributions: Callable[[int], list[np.ndarray]], most: int) ->
     return int(table[within, 0].min()), table
 
 
-def _candidates(most: int) -> Iterator[int]:
+def candidates(most: int) -> Iterator[int]:
+    """1, 2, ..., 6, 8, 11, 15, ... up to `most`."""
     count = 1
     while count <= most:
         yield count
@@ -178,8 +185,10 @@ def _variance(terms: np.ndarray) -> float:
     return float(terms.size * terms.var())
 
 
-def _distinct(points: np.ndarray) -> int:
-    return len(np.unique(points, axis=0)) if len(points) < 100 else len(points)
+def distinct_rows(points: np.ndarray, enough: int) -> int:
+    """The number of different rows; counting stops where there are `enough`."""
+    few = len(np.unique(points[: 10 * enough], axis=0))
+    return few if few >= enough or len(points) <= 10 * enough else len(np.unique(points, axis=0))
 
 
 def _collapsed(model: Likelihood, final: Ascent) -> tuple[str, ...]:

@@ -3,6 +3,9 @@
 Between a Gaussian share N(m, A) of the start and a Gaussian cluster N(n, B) of the end, both whitened, the bridge is in
 closed form: C = B^½ r(B^½ A B^½) B^½ and r_k = n - C m (see closed_form.py). A cluster's share of the start is the whole
 cloud, or what a coupling of a subsample sends to it. With one component this is already the exact fit.
+
+A fit with fewer components is another beginning: what their own covariances leave unexplained says which of them to split,
+and along which direction.
 """
 
 from __future__ import annotations
@@ -10,12 +13,13 @@ from __future__ import annotations
 import numpy as np
 
 from ..endpoints.likelihood import Likelihood, Tilted, WhitenedClouds
+from ..endpoints.quadratic import as_full
 from ..kernels.dense import DenseKernel
 from ..schrodinger.gaussian_start import gaussian_curvature
 from ..schrodinger.iteration import Strategy
 from ..schrodinger.solve import solve
 
-__all__ = ["cluster_labels", "coupled_starts", "gaussian_component", "start_from_clusters"]
+__all__ = ["cluster_labels", "coupled_starts", "gaussian_component", "start_by_splitting", "start_from_clusters"]
 
 _CLUSTERED = 10_000  # points that a clustering looks at
 _COUPLED = 600  # points of either cloud that a coupling is solved for
@@ -94,7 +98,47 @@ def start_from_clusters(
         m = share[0]
         pull = component[1] * m if diagonal else component[1] @ m
         log_alpha.append(np.log(max(masses[k], 1e-12)) - m @ component[0] - 0.5 * m @ pull)
-    theta = likelihood.pack(Tilted(np.array(log_alpha), np.array(r), np.array(c)))
+    return _balanced(likelihood, likelihood.pack(Tilted(np.array(log_alpha), np.array(r), np.array(c))))
+
+
+def start_by_splitting(likelihood: Likelihood, fewer: Tilted) -> np.ndarray:
+    """Parameters to begin with, from a fit with fewer components, of which those least like one Gaussian are split.
+
+    Component k predicts the covariance P = C + C Cov(u | k) C of its ends. The largest eigenvalue g of the excess of
+    Cov(v | k) over P, in units of the diagonal of P, times the component's mass says how much a split may explain; its
+    eigenvector says where the two halves go.
+    """
+    clouds = likelihood.clouds
+    rows, columns = slice(0, _CLUSTERED), slice(0, _CLUSTERED)
+    part = WhitenedClouds(clouds.u[rows], clouds.a[rows], clouds.v[columns], clouds.b[columns])
+    ends, starts = Likelihood(part, likelihood.kind, likelihood.floor, 0.0).responsibilities(fewer)
+    found = []
+    for k, c in enumerate(as_full(fewer.c)):
+        mass = float(ends[:, k].sum())
+        middle, spread_u = _moments(part.u, starts[:, k] + 1e-300, False)
+        _, spread_v = _moments(part.v, ends[:, k], False)
+        predicted = c + c @ spread_u @ c
+        unit = np.sqrt(np.diag(predicted))
+        values, vectors = np.linalg.eigh((spread_v - predicted) / np.outer(unit, unit))
+        excess = max(values[-1], 0.05)
+        few = mass * len(part.v) < 4.0 * part.b.sum()  # too few points to say how they lie
+        found.append((mass * (0.0 if few else excess), k, unit * vectors[:, -1] * np.sqrt(excess), middle))
+    found.sort(key=lambda item: -item[0])
+    log_alpha, r, c = list(fewer.log_alpha), list(fewer.r), list(fewer.c)
+    for i in range(likelihood.kind.count - fewer.count):
+        _, k, step, middle = found[i % len(found)]
+        step = step / (1 + i // len(found))
+        log_alpha.append(log_alpha[k] - np.log(2.0) + middle @ step)
+        log_alpha[k] += -np.log(2.0) - middle @ step
+        r.append(r[k] - step)
+        r[k] = r[k] + step
+        c.append(c[k])
+    return _balanced(likelihood, likelihood.pack(Tilted(np.array(log_alpha), np.array(r), np.array(c))))
+
+
+def _balanced(likelihood: Likelihood, theta: np.ndarray) -> np.ndarray:
+    """Component weights moved until start and end cloud agree on them, roughly."""
+    count = likelihood.kind.count
     for _ in range(_BALANCING if count > 1 else 0):
         wanted, given = likelihood.masses(theta)
         theta[:count] += np.clip(np.log(np.maximum(wanted, 1e-12)) - np.log(np.maximum(given, 1e-12)), -5.0, 5.0)

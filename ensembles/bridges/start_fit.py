@@ -14,7 +14,7 @@ from ..endpoints.quadratic import QuadraticMixture
 from ..endpoints.start_density import StartLikelihood
 from ..logspace import log_sum_exp
 from ..priors.base import Transition
-from .mixture_fit import choose_count, split_folds
+from .mixture_fit import choose_count, distinct_rows, split_folds
 from .mixture_starts import cluster_labels
 from .smooth import MixtureEnds
 
@@ -72,7 +72,8 @@ def mixture_start(
             out.append(judge.weights * judge.terms(theta) / len(folds))
         return out
 
-    count, tried = choose_count(contributions, min(ends.most, len(np.unique(points[:100], axis=0))))
+    most = min(ends.most, *(distinct_rows(points[rows], ends.most) for rows, _ in folds))
+    count, tried = choose_count(contributions, most)
     whole = model(np.arange(len(points)), count)
     theta = fitted(whole, _begin(whole, ends.rng), None)
     initial = MixturePotential(centre, basis, whole.potential(theta))

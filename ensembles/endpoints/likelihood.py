@@ -104,6 +104,15 @@ class Likelihood:
             statistics(self.clouds.u, self.clouds.a, start)[1][0],
         )
 
+    def responsibilities(self, tilted: Tilted) -> tuple[np.ndarray, np.ndarray]:
+        """Shares of the components in every end (m, K) and in every start (n, K), times the points' weights."""
+        end, start = coefficients(tilted)
+        out = []
+        for points, weights, part in ((self.clouds.v, self.clouds.b, end), (self.clouds.u, self.clouds.a, start)):
+            logits = _logits(points, None, part)
+            out.append(np.exp(logits - log_sum_exp(logits, axis=1)[:, None]) * weights[:, None])
+        return out[0], out[1]
+
     def value_and_gradient(self, theta: np.ndarray) -> tuple[float, np.ndarray]:
         """J with the stated prior, and its gradient."""
         tilted, clouds = self.unpack(theta), self.clouds
