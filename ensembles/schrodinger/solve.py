@@ -74,7 +74,7 @@ def solve(
     run = _Run(tolerance, sweep_limit, observe)
     begin = _restricted_start(start, kernel.shape, rows, columns)
     if isinstance(start, tuple):
-        strategy = _without_ladder(strategy or Strategy())
+        strategy = (strategy or Strategy()).without_ladder()
     for state in solver_states(reduced, pair, tolerance, begin, strategy or Strategy()):
         if run.ends(state):
             break
@@ -148,10 +148,6 @@ def _refused(kernel: Kernel, tolerance: float, unreached: tuple[int, ...]) -> So
         np.empty((0, 4)),
         unreached,
     )
-
-
-def _without_ladder(strategy: Strategy) -> Strategy:
-    return replace(strategy, ladder_top=np.inf)
 
 
 def _restricted_start(
