@@ -20,6 +20,21 @@ _HOMES = {
     "SolverOptions": "bridges.fit",
     "load_bridge": "bridges.storage",
     "gaussian_bridge": "bridges.closed_form",
+    "Box": "priors.box",
+    "link_particles": "links.link",
+    "LinkOptions": "links.candidates",
+    "hold_out": "assessment.hold_out",
+    "choose_noise": "assessment.noise",
+    "bootstrap": "assessment.uncertainty",
+    "influence": "assessment.uncertainty",
+    "Moments": "assessment.quantities",
+    "DensityAt": "assessment.quantities",
+    "DriftAt": "assessment.quantities",
+    "LinkProbabilities": "assessment.quantities",
+    "PathQuantiles": "assessment.quantities",
+    "prior_check": "assessment.surprise",
+    "relative_entropy": "assessment.relative_entropy",
+    "effective_sizes": "assessment.effective_sizes",
     "InputError": "checks",
     "ComputationError": "checks",
     "ConvergenceError": "schrodinger.solution",
@@ -28,12 +43,27 @@ _HOMES = {
 __all__ = [*_HOMES, "__version__"]
 
 if TYPE_CHECKING:
+    from .assessment.effective_sizes import effective_sizes as effective_sizes
+    from .assessment.hold_out import hold_out as hold_out
+    from .assessment.noise import choose_noise as choose_noise
+    from .assessment.quantities import DensityAt as DensityAt
+    from .assessment.quantities import DriftAt as DriftAt
+    from .assessment.quantities import LinkProbabilities as LinkProbabilities
+    from .assessment.quantities import Moments as Moments
+    from .assessment.quantities import PathQuantiles as PathQuantiles
+    from .assessment.surprise import prior_check as prior_check
+    from .assessment.relative_entropy import relative_entropy as relative_entropy
+    from .assessment.uncertainty import bootstrap as bootstrap
+    from .assessment.uncertainty import influence as influence
     from .bridges.closed_form import gaussian_bridge as gaussian_bridge
     from .bridges.fit import SolverOptions as SolverOptions
     from .bridges.fit import fit_bridge as fit_bridge
     from .bridges.storage import load_bridge as load_bridge
     from .checks import ComputationError as ComputationError
     from .checks import InputError as InputError
+    from .links.candidates import LinkOptions as LinkOptions
+    from .links.link import link_particles as link_particles
+    from .priors.box import Box as Box
     from .priors.brownian import Brownian as Brownian
     from .priors.ornstein_uhlenbeck import OrnsteinUhlenbeck as OrnsteinUhlenbeck
     from .schrodinger.solution import ConvergenceError as ConvergenceError

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from .priors.base import LinearGaussianPrior
+from .report.wording import axis_name, gap_title, time_axis_name, time_text
 from .snapshots.series import SnapshotSeries
 from .snapshots.summary import describe_snapshots, displacement
 
@@ -18,10 +19,6 @@ __all__ = ["gap_table", "position_table", "snapshot_table", "verdicts"]
 
 _FAR = 10.0
 """Ratio of squared displacement to squared spread from which the noise is of another order."""
-
-
-def _with_unit(name: str, unit: str) -> str:
-    return f"{name} ({unit})" if unit else name
 
 
 def _diffusion_unit(series: SnapshotSeries) -> str:
@@ -43,7 +40,7 @@ def snapshot_table(series: SnapshotSeries) -> pd.DataFrame:
 
     rows = [
         {
-            _with_unit(series.time_name, series.time_unit): found.time,
+            time_axis_name(series): found.time,
             "particles": found.count,
             "effective sample size": found.effective_sample_size,
             "duplicates": found.duplicates,
@@ -67,9 +64,9 @@ def position_table(series: SnapshotSeries) -> pd.DataFrame:
     described = describe_snapshots(series)
     rows = []
     for axis, name in enumerate(series.position_names):
-        row = {"coordinate": _with_unit(name, series.length_unit)}
+        row = {"coordinate": axis_name(name, series.length_unit)}
         for found in described:
-            row[f"{series.time_name} = {found.time:g}"] = f"{found.mean[axis]:.3g} ± {found.spread[axis]:.3g}"
+            row[time_text(series, found.time)] = f"{found.mean[axis]:.3g} ± {found.spread[axis]:.3g}"
         rows.append(row)
     return pandas.DataFrame(rows)
 
@@ -99,7 +96,7 @@ def gap_table(series: SnapshotSeries, prior: LinearGaussianPrior) -> pd.DataFram
     >>> from ensembles import Brownian
     >>> series = SnapshotSeries.from_arrays([0, 2], [[-1.0, 1.0], [1.0, 5.0]])
     >>> gap_table(series, Brownian(0.5)).round(3).iloc[0].tolist()
-    [1.0, 0.0, 2.0, 2.0, 3.162, 1.414, 0.5, 2.5]
+    [0.0, 0.0, 2.0, 2.0, 3.162, 1.414, 0.5, 2.5]
     """
     import pandas
 
@@ -110,14 +107,14 @@ def gap_table(series: SnapshotSeries, prior: LinearGaussianPrior) -> pd.DataFram
         moved = displacement(series, gap)
         rows.append(
             {
-                "gap": gap + 1,
-                _with_unit("from", series.time_unit): moved.start,
-                _with_unit("to", series.time_unit): moved.end,
-                _with_unit("duration", series.time_unit): moved.duration,
-                _with_unit("displacement", series.length_unit): np.sqrt(moved.squared_displacement),
-                _with_unit("prior's spread", series.length_unit): np.sqrt(_squared_spread(series, prior, gap)),
-                _with_unit("diffusion", _diffusion_unit(series)): diffusion,
-                _with_unit("equal at", _diffusion_unit(series)): diffusion * ratio,
+                "gap": gap,
+                axis_name("from", series.time_unit): moved.start,
+                axis_name("to", series.time_unit): moved.end,
+                axis_name("duration", series.time_unit): moved.duration,
+                axis_name("displacement", series.length_unit): np.sqrt(moved.squared_displacement),
+                axis_name("prior's spread", series.length_unit): np.sqrt(_squared_spread(series, prior, gap)),
+                axis_name("diffusion", _diffusion_unit(series)): diffusion,
+                axis_name("equal at", _diffusion_unit(series)): diffusion * ratio,
             }
         )
     return pandas.DataFrame(rows)
@@ -131,11 +128,11 @@ def verdicts(series: SnapshotSeries, prior: LinearGaussianPrior) -> Sequence[str
     >>> from ensembles import Brownian
     >>> series = SnapshotSeries.from_arrays([0, 2], [[-1.0, 1.0], [1.0, 5.0]])
     >>> print(*verdicts(series, Brownian(0.001)))
-    gap 1: the diffusion is much too small for what the data moved: 2.5e+03 times as much would make the prior's
+    time = 0 → 2: the diffusion is much too small for what the data moved: 2.5e+03 times as much would make the prior's
     spread equal to the displacement; the bridge would be close to a matching along straight lines
     """
     sentences = []
-    for gap, ratio in enumerate(_ratios(series, prior), start=1):
+    for gap, ratio in enumerate(_ratios(series, prior)):
         if ratio > _FAR:
             text = (
                 f"the diffusion is much too small for what the data moved: {ratio:.3g} times as much would make the "
@@ -149,5 +146,5 @@ def verdicts(series: SnapshotSeries, prior: LinearGaussianPrior) -> Sequence[str
             )
         else:
             text = f"the diffusion is of the right order (spread equals displacement at {ratio:.3g} times as much)"
-        sentences.append(f"gap {gap}: {text}")
+        sentences.append(f"{gap_title(series, gap)}: {text}")
     return sentences

@@ -62,7 +62,7 @@ def fit_study(study: Study, *, say: Say) -> Bridge:
 
 
 def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say: Say) -> list[str]:
-    """Write tables, pictures, the report page, a summary and a copy of the study file into `folder`.
+    """Write tables, pictures, the report page, the bridge itself, a summary and a copy of the study file into `folder`.
 
     Parameters
     ----------
@@ -86,6 +86,7 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
     paths = bridge.sample_paths(study.output.paths, times, rng=path_stream)
     say("Writing tables", 0.75)
     _write_tables(study, bridge, paths, folder, cloud_stream)
+    bridge.save(folder / "bridge.npz")
     say("Drawing pictures", 0.85)
     figures = save_figures(bridge, folder, paths=paths, rng=picture_stream)
     summary = _summary(study, bridge, seed)
@@ -108,6 +109,7 @@ def _write_tables(study: Study, bridge: Bridge, paths: Paths, folder: Path, rng:
     writing.write_table(folder / "clouds.csv", tables.clouds_table(bridge, times, clouds))
     writing.write_table(folder / "drift.csv", tables.drift_table(bridge, times, clouds))
     writing.write_table(folder / "moments.csv", tables.moments_table(bridge, paths.times))
+    writing.write_table(folder / "certificate.csv", tables.certificate_table(bridge))
 
 
 def _summary(study: Study, bridge: Bridge, seed: int) -> dict[str, Any]:

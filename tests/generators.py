@@ -109,7 +109,12 @@ def occupational_table(epsilon: int) -> tuple[np.ndarray, np.ndarray, np.ndarray
     counts = np.loadtxt(DATA / "ipf_occupational_counts.csv", delimiter=",")
     plan = np.loadtxt(DATA / f"ipf_plan_eps{epsilon}.csv", delimiter=",")
     i = np.arange(8)
-    return -((i[:, None] - i) ** 2) / epsilon, counts.sum(axis=1) / counts.sum(), counts.sum(axis=0) / counts.sum(), plan
+    return (
+        -((i[:, None] - i) ** 2) / epsilon,
+        counts.sum(axis=1) / counts.sum(),
+        counts.sum(axis=0) / counts.sum(),
+        plan,
+    )
 
 
 @dataclass(frozen=True)

@@ -27,7 +27,7 @@ MAY_IMPORT = {
     "report": FOUNDATION | {"assessment", "lineage", "bridges", "snapshots", "priors", "kernels", "schrodinger"},
     "study_problems": {"checks"},
     "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems"},
-    "overview": FOUNDATION | {"snapshots", "priors"},
+    "overview": FOUNDATION | {"snapshots", "priors", "report"},
     "results": FOUNDATION | {"study", "overview", "report", "bridges", "schrodinger"},
     "cli": FOUNDATION | {"study", "overview", "results", "report", "bridges", "snapshots", "priors"},
     "__main__": {"cli"},

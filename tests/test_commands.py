@@ -305,7 +305,7 @@ def test_bad_weights_are_refused(small, values, expected):
 
 # path_times = 5 between 0 and 5, and the snapshots themselves
 SMALL_TIMES = {0.0, 1.25, 2.0, 2.5, 3.75, 5.0}
-TABLES = {"links.csv", "paths.csv", "clouds.csv", "drift.csv", "moments.csv"}
+TABLES = {"links.csv", "paths.csv", "clouds.csv", "drift.csv", "moments.csv", "certificate.csv"}
 
 
 @pytest.fixture(scope="module")
@@ -323,7 +323,7 @@ def solved(tmp_path_factory):
 def test_solve_writes_everything_and_nothing_else(solved):
     assert {path.name for path in solved.iterdir()} == {"points.csv", "study.toml", "out"}
     names = {path.name for path in (solved / "out").iterdir()}
-    assert names >= TABLES | {"summary.json", "study.toml", "report.html"}
+    assert names >= TABLES | {"summary.json", "study.toml", "report.html", "bridge.npz"}
     assert len([name for name in names if name.endswith(".png")]) >= 5
     assert (solved / "out" / "study.toml").read_text(encoding="utf-8") == SMALL
 
@@ -335,7 +335,7 @@ def test_the_summary_says_what_was_done(solved):
     assert summary["study"]["seed"] == 0 and summary["study"]["title"] == "small"
     series = ensembles.read_snapshots(solved / "points.csv", time="t", position=["x", "y"])
     assert summary["study"]["data"]["fingerprint"] == series.fingerprint()
-    assert [text.split(":")[0] for text in summary["noise"]] == ["gap 1", "gap 2"]
+    assert [text.split(":")[0] for text in summary["noise"]] == ["t = 0 → 2 s", "t = 2 → 5 s"]
 
 
 def test_the_tables_hold_what_the_study_asks_for(solved):
@@ -350,6 +350,7 @@ def test_the_tables_hold_what_the_study_asks_for(solved):
     assert len(links) == 2 * 3 + 2 * 2  # two links for each source of the two gaps
     expected = pd.concat([bridge.coupling(gap).top_links(2) for gap in range(2)])
     assert_allclose(links["probability"], expected["probability"], rtol=1e-9)
+    assert_allclose(ensembles.load_bridge(out / "bridge.npz").solutions[1].log_g, bridge.solutions[1].log_g, rtol=1e-12)
     moments = pd.read_csv(out / "moments.csv")
     assert len(moments) == len(SMALL_TIMES)
 

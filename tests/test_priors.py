@@ -83,7 +83,9 @@ def test_samples_have_the_exact_moments(prior, dimension):
         by_mean = (samples.mean(axis=0) - mean) / (spread / np.sqrt(count))
         # Var of a sample covariance of Gaussians: (C_ii C_jj + C_ij²) / N.
         error = np.sqrt((np.outer(spread**2, spread**2) + covariance**2) / count)
-        return max(np.abs(by_mean).max(), np.abs((np.cov(samples.T).reshape(covariance.shape) - covariance) / error).max())
+        return max(
+            np.abs(by_mean).max(), np.abs((np.cov(samples.T).reshape(covariance.shape) - covariance) / error).max()
+        )
 
     exact = step.mean(start)[0]
     assert worst(exact, step.covariance) < 5.0

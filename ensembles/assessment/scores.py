@@ -8,7 +8,8 @@ To add a score, you must
 1. write one function with that contract, whose docstring gives the equation and the unit,
 2. list it in `SCORES`,
 3. keep its memory bounded by tiles where it looks at pairs of particles.
-tests/test_scores.py runs the laws of a score on every listed one.
+tests/test_scores.py runs the laws of a score on every listed one. The log-density of held-out particles is no function of
+two clouds; hold_out.py adds it.
 """
 
 from __future__ import annotations
@@ -21,13 +22,18 @@ from scipy.spatial.distance import cdist
 
 from .. import checks
 from ..checks import InputError
+from .transport import wasserstein
 
 __all__ = [
     "SCORES",
     "Score",
     "covariance_error",
     "energy_distance",
+    "kernel_discrepancy",
     "mean_error",
+    "pooled_bandwidth",
+    "wasserstein_1",
+    "wasserstein_2",
 ]
 
 Score = Callable[..., float]
@@ -106,8 +112,104 @@ def covariance_error(predicted: np.ndarray, observed: np.ndarray, *, weights: We
     return float(np.linalg.norm(_covariance(x, a) - _covariance(y, b)))
 
 
+def pooled_bandwidth(predicted: np.ndarray, observed: np.ndarray, *, weights: Weights = (None, None)) -> float:
+    """The rule for the bandwidth: h² = ½ (tr Cov x + tr Cov y), in units of length.
+
+    Half the mean squared distance within a cloud is the trace of its covariance, so that two points of one cloud have
+    a kernel of about exp(-1), in any dimension and unit.
+
+    Examples
+    --------
+    >>> from ensembles.assessment.scores import pooled_bandwidth
+    >>> pooled_bandwidth([0.0, 2.0], [5.0, 7.0])
+    1.0
+    """
+    (x, a), (y, b) = two_clouds(predicted, observed, weights)
+    spread = 0.5 * (a @ ((x - a @ x) ** 2).sum(axis=1) + b @ ((y - b @ y) ** 2).sum(axis=1))
+    if spread <= 0.0:
+        raise InputError(
+            "the kernel discrepancy needs a bandwidth; each cloud is a single place, whose spread is 0; "
+            "give bandwidth=..., in units of length"
+        )
+    return float(np.sqrt(spread))
+
+
+def kernel_discrepancy(
+    predicted: np.ndarray,
+    observed: np.ndarray,
+    *,
+    weights: Weights = (None, None),
+    bandwidth: float | None = None,
+    unbiased: bool = False,
+) -> float:
+    """Squared maximum mean discrepancy E k(X, X') + E k(Y, Y') - 2 E k(X, Y), k = exp(-½|x - y|²/h²); dimensionless.
+
+    Streamed over all pairs, as `energy_distance`, whose remarks on `unbiased` hold here too.
+
+    Parameters
+    ----------
+    predicted, observed, weights : as for `energy_distance`.
+    bandwidth : h in length; that of `pooled_bandwidth` if None. To compare predictions give all of them the same.
+    unbiased : leave out the pairs of a particle with itself.
+
+    Notes
+    -----
+    A. Gretton et al., Journal of Machine Learning Research 13, 723 (2012).
+
+    Examples
+    --------
+    >>> from ensembles.assessment.scores import kernel_discrepancy
+    >>> round(kernel_discrepancy([0.0], [2.0], bandwidth=1.0), 6)  # 2 - 2 exp(-2)
+    1.729329
+    """
+    (x, a), (y, b) = two_clouds(predicted, observed, weights)
+    if bandwidth is None:
+        bandwidth = pooled_bandwidth(x, y, weights=(a, b))
+    h = checks.positive_number(bandwidth, "bandwidth", "give it in units of length")
+
+    def mean_kernel(one: np.ndarray, other: np.ndarray, w: np.ndarray, v: np.ndarray) -> float:
+        return _mean_over_pairs(
+            one, other, w, v, lambda rows, columns: np.exp(-0.5 * cdist(rows, columns, "sqeuclidean") / h**2)
+        )
+
+    within_x, within_y = mean_kernel(x, x, a, a), mean_kernel(y, y, b, b)
+    if unbiased:
+        within_x = (within_x - float(a @ a)) / _share_of_other_pairs(a, "predicted")
+        within_y = (within_y - float(b @ b)) / _share_of_other_pairs(b, "observed")
+    return within_x + within_y - 2.0 * mean_kernel(x, y, a, b)
+
+
+def wasserstein_1(predicted: np.ndarray, observed: np.ndarray, *, weights: Weights = (None, None)) -> float:
+    """Wasserstein-1 distance min E|X - Y| over couplings, in units of length; see `transport.wasserstein`.
+
+    Examples
+    --------
+    >>> from ensembles.assessment.scores import wasserstein_1
+    >>> wasserstein_1([0.0, 1.0], [5.0, 8.0])
+    6.0
+    """
+    (x, a), (y, b) = two_clouds(predicted, observed, weights)
+    return wasserstein(x, y, a, b, order=1).value
+
+
+def wasserstein_2(predicted: np.ndarray, observed: np.ndarray, *, weights: Weights = (None, None)) -> float:
+    """Wasserstein-2 distance (min E|X - Y|²)^½ over couplings, in units of length; see `transport.wasserstein`.
+
+    Examples
+    --------
+    >>> from ensembles.assessment.scores import wasserstein_2
+    >>> wasserstein_2([0.0, 1.0], [5.0, 6.0])
+    5.0
+    """
+    (x, a), (y, b) = two_clouds(predicted, observed, weights)
+    return wasserstein(x, y, a, b, order=2).value
+
+
 SCORES: dict[str, Score] = {
     "energy_distance": energy_distance,
+    "kernel_discrepancy": kernel_discrepancy,
+    "wasserstein_1": wasserstein_1,
+    "wasserstein_2": wasserstein_2,
     "mean_error": mean_error,
     "covariance_error": covariance_error,
 }
@@ -135,13 +237,20 @@ def shares(weights: Any, count: int, name: str) -> np.ndarray:
 
 
 def _mean_distance(x: np.ndarray, y: np.ndarray, a: np.ndarray, b: np.ndarray) -> float:
-    """Σ a_i b_j |x_i - y_j|, in tiles of fixed size so that memory does not grow with the clouds."""
+    """Σ a_i b_j |x_i - y_j|."""
+    return _mean_over_pairs(x, y, a, b, cdist)
+
+
+def _mean_over_pairs(
+    x: np.ndarray, y: np.ndarray, a: np.ndarray, b: np.ndarray, pairs: Callable[[np.ndarray, np.ndarray], np.ndarray]
+) -> float:
+    """Σ a_i b_j pairs(x, y)_ij, in tiles of fixed size so that memory does not grow with the clouds."""
     total = 0.0
     for i in range(0, len(x), _TILE_ROWS):
         rows = slice(i, i + _TILE_ROWS)
         for j in range(0, len(y), _TILE_COLUMNS):
             columns = slice(j, j + _TILE_COLUMNS)
-            total += float(a[rows] @ (cdist(x[rows], y[columns]) @ b[columns]))
+            total += float(a[rows] @ (pairs(x[rows], y[columns]) @ b[columns]))
     return total
 
 

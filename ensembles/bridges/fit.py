@@ -17,6 +17,9 @@ from ..schrodinger.iteration import Start, Strategy
 from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
 from ..schrodinger.solve import SWEEP_LIMIT, solve
 from .bridge import Bridge
+from .choose_ends import chosen_ends
+from .smooth import KernelEnds, MixtureEnds, SmoothSolution
+from .smooth_fit import fit_smooth_gap
 
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
@@ -52,6 +55,8 @@ def fit_bridge(
     prior: LinearGaussianPrior,
     *,
     tolerance: float = 1e-6,
+    ends: str | MixtureEnds | KernelEnds = "atoms",
+    components: int | None = None,
     start: Bridge | None = None,
     options: SolverOptions | None = None,
 ) -> Bridge:
@@ -64,7 +69,12 @@ def fit_bridge(
     ----------
     series : SnapshotSeries of K ≥ 2 snapshots.
     prior : Brownian or OrnsteinUhlenbeck, in the units of the series.
-    tolerance : largest L1 error of either marginal of each coupling (weights sum to 1).
+    tolerance : largest L1 error of either marginal of each coupling (weights sum to 1); of atoms.
+    ends : "atoms", the particles themselves; "mixture" or "kernel", smooth potentials fitted by maximum likelihood (give a
+        `MixtureEnds` or `KernelEnds` for their options); "auto", by dimension, numbers of particles and noise, with the
+        reason in the bridge's notes.
+    components : of smooth ends, Gaussian components or kernel centres; by default chosen by held-out likelihood, and 300
+        centres. One full-covariance component is the bridge between two Gaussians.
     start : another bridge through the same snapshots, whose potentials are a warm start.
     options : `SolverOptions`: sweeps and memory allowed, progress, whether a bridge that missed its tolerance is returned.
 
@@ -75,7 +85,8 @@ def fit_bridge(
     Raises
     ------
     InputError
-        If the noise is below 1e-6 of the squared distances in a gap, or a parameter is out of range.
+        If the noise is below 1e-6 of the squared distances in a gap, a parameter is out of range, or smooth ends cannot be
+        fitted: more components than particles, a constant column, all particles at one place.
     ConvergenceError
         If a gap misses its tolerance; its `solution` is what was reached.
 
@@ -89,6 +100,9 @@ def fit_bridge(
     """
     require_prior(prior)
     options = options or SolverOptions()
+    chosen, reason = chosen_ends(series, prior, ends, components)
+    if not isinstance(chosen, str):
+        return _fit_smooth(series, prior, chosen, components, start, reason)
     solutions = []
     for k in range(len(series.times) - 1):
         solution = _solve_gap(series, prior, k, tolerance, start, options)
@@ -101,7 +115,37 @@ def fit_bridge(
                 raise ConvergenceError(message, solution)
             warnings.warn(message, RuntimeWarning, stacklevel=2)
         solutions.append(solution)
-    return Bridge(series, prior, tuple(solutions), float(tolerance))
+    return Bridge(series, prior, tuple(solutions), float(tolerance), notes=reason)
+
+
+def _fit_smooth(
+    series: SnapshotSeries,
+    prior: LinearGaussianPrior,
+    ends: MixtureEnds | KernelEnds,
+    components: int | None,
+    start: Bridge | None,
+    reason: tuple[str, ...],
+) -> Bridge:
+    kind = "mixture" if isinstance(ends, MixtureEnds) else "kernel"
+    count = len(series.times) - 1
+    if start is not None and (
+        start.ends != kind or len(start.solutions) != count or start.series.dimension != series.dimension
+    ):
+        raise checks.InputError(
+            f"start does not fit; it has {start.ends} ends and {len(start.solutions)} gap(s) in {start.series.dimension} "
+            f"coordinate(s) where {kind} ends, {count} gap(s) and {series.dimension} are fitted; start from a like fit"
+        )
+    solutions = []
+    notes = list(reason)
+    for k in range(count):
+        warm = start.solutions[k] if start is not None else None
+        solution = fit_smooth_gap(
+            series, prior, k, ends, components, warm if isinstance(warm, SmoothSolution) else None
+        )
+        place = f"gap {k}: " if count > 1 else ""
+        notes += [place + note for note in solution.notes]
+        solutions.append(solution)
+    return Bridge(series, prior, tuple(solutions), float("nan"), kind, tuple(notes))
 
 
 def _solve_gap(
@@ -155,7 +199,7 @@ def _start(
         ratio = float(np.exp(2.0 * (transition.log_normaliser - old.log_normaliser) / series.dimension))
         if 1.0 / _WARM_RATIO <= ratio <= _WARM_RATIO:
             # Potentials times noise variance are lengths², nearly the same at neighbouring noise levels.
-            solution = warm.solutions[k]
+            solution = warm.gaps[k].coupled
             return (solution.log_f * ratio, solution.log_g * ratio), options.strategy
     if 4.0 * clouds[0].shape[0] * clouds[1].shape[0] <= options.memory:
         return gaussian_start(clouds, weights), options.strategy

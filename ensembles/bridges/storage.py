@@ -2,7 +2,8 @@
 
 Arrays: `header` (JSON text: format, version, prior, tolerance, names, units, certificates), `times`, `masses`, and per
 snapshot k `cloud_k`, `weights_k`, `rows_k`, optionally `labels_k` and `feature_i_k`; per gap `log_f_k`, `log_g_k`,
-`history_k`. `digest` is the SHA-256 of all of them, so that a damaged file is known as such.
+`history_k`, and with smooth ends (version 2) both potentials as in smooth_storage.py. `digest` is the SHA-256 of all of
+them, so that a damaged file is known as such.
 """
 
 from __future__ import annotations
@@ -22,11 +23,13 @@ from ..schrodinger.solution import Certificate, Outcome, Solution
 from ..snapshots.series import SnapshotSeries
 from ..writing import atomic_path
 from .bridge import Bridge
+from .smooth import SmoothSolution
+from .smooth_storage import pack_solution, unpack_solution
 
 __all__ = ["load_bridge", "save_bridge"]
 
 _FORMAT = "ensembles-bridge"
-_VERSION = 1
+_VERSION = 2  # 2: smooth ends; a bridge of atoms is still written as 1, for earlier readers
 
 
 def _digest(arrays: dict[str, np.ndarray]) -> str:
@@ -42,25 +45,23 @@ def save_bridge(bridge: Bridge, path: str | Path) -> None:
     """Write `bridge` to `path` (.npz), under a temporary name until it is whole."""
     series = bridge.series
     features = list(series.features)
+    packed = [
+        pack_solution(solution, k) if isinstance(solution, SmoothSolution) else _pack_coupling(solution, k)
+        for k, solution in enumerate(bridge.solutions)
+    ]
     header = {
         "format": _FORMAT,
-        "version": _VERSION,
+        "version": 1 if bridge.ends == "atoms" else _VERSION,
+        "ends": bridge.ends,
+        "notes": list(bridge.notes),
         "prior": {"kind": bridge.prior.kind, "parameters": bridge.prior.parameters()},
-        "tolerance": bridge.tolerance,
+        "tolerance": bridge.tolerance if np.isfinite(bridge.tolerance) else None,
         "position_names": list(series.position_names),
         "time_name": series.time_name,
         "time_unit": series.time_unit,
         "length_unit": series.length_unit,
         "features": features,
-        "solutions": [
-            {
-                "iterations": solution.iterations,
-                "outcome": solution.outcome.value,
-                "certificate": asdict(solution.certificate),
-                "unreachable": list(solution.unreachable),
-            }
-            for solution in bridge.solutions
-        ],
+        "solutions": [entry for entry, _ in packed],
     }
     arrays: dict[str, np.ndarray] = {
         "header": np.array(json.dumps(header)),
@@ -74,13 +75,23 @@ def save_bridge(bridge: Bridge, path: str | Path) -> None:
         for i, name in enumerate(features):
             column = np.asarray(series.features[name][k])
             arrays[f"feature_{i}_{k}"] = column.astype(str) if column.dtype == object else column
-    for k, solution in enumerate(bridge.solutions):
-        arrays |= {f"log_f_{k}": solution.log_f, f"log_g_{k}": solution.log_g, f"history_{k}": solution.history}
+    for _, parts in packed:
+        arrays |= parts
     path = Path(path)
     if path.suffix != ".npz":
         raise checks.InputError(f"a bridge is saved as .npz; the name is {path.name!r}; end it in .npz")
     with atomic_path(path) as temporary, open(temporary, "wb") as stream:
         np.savez(stream, **{**arrays, "digest": np.array(_digest(arrays))})  # type: ignore[arg-type]
+
+
+def _pack_coupling(solution: Solution, k: int) -> tuple[dict[str, Any], dict[str, np.ndarray]]:
+    entry = {
+        "iterations": solution.iterations,
+        "outcome": solution.outcome.value,
+        "certificate": asdict(solution.certificate),
+        "unreachable": list(solution.unreachable),
+    }
+    return entry, {f"log_f_{k}": solution.log_f, f"log_g_{k}": solution.log_g, f"history_{k}": solution.history}
 
 
 def load_bridge(path: str | Path) -> Bridge:
@@ -97,7 +108,7 @@ def load_bridge(path: str | Path) -> Bridge:
     try:
         with open(path, "rb") as stream, np.lib.npyio.NpzFile(stream, allow_pickle=False) as archive:
             arrays = {name: archive[name] for name in archive.files}
-    except (zipfile.BadZipFile, ValueError, OSError, EOFError, KeyError) as cause:
+    except (zipfile.BadZipFile, ValueError, OSError, EOFError, KeyError, RuntimeError) as cause:
         raise checks.InputError(
             f"the file cannot be read as a bridge; {str(path)!r} is truncated, damaged or of another kind ({cause}); "
             "save the bridge again"
@@ -149,7 +160,9 @@ def _rebuild(header: dict[str, Any], arrays: dict[str, np.ndarray]) -> Bridge:
         length_unit=header["length_unit"],
     )
     solutions = tuple(
-        Solution(
+        unpack_solution(entry, arrays, k)
+        if "kind" in entry
+        else Solution(
             arrays[f"log_f_{k}"],
             arrays[f"log_g_{k}"],
             entry["iterations"],
@@ -161,4 +174,5 @@ def _rebuild(header: dict[str, Any], arrays: dict[str, np.ndarray]) -> Bridge:
         for k, entry in enumerate(header["solutions"])
     )
     prior = build_prior(header["prior"]["kind"], header["prior"]["parameters"])
-    return Bridge(series, prior, solutions, header["tolerance"])
+    tolerance = float("nan") if header["tolerance"] is None else header["tolerance"]
+    return Bridge(series, prior, solutions, tolerance, header.get("ends", "atoms"), tuple(header.get("notes", ())))

@@ -13,36 +13,21 @@ carried forward (atoms at the start), with u_i = L⁻¹(F x_i + c), v = L⁻¹ y
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Protocol
+from typing import ClassVar
 
 import numpy as np
 from scipy.linalg import solve_triangular
 
+from ..checks import InputError
 from ..kernels.streamed import StreamedKernel, pick_targets
+from ..logspace import log_sum_exp
+from .base import GaussianTransition
+from .conditional import ConditionalEnd
+from .quadratic import Posterior
 
-__all__ = ["AtomPotential", "GaussianTransition"]
+__all__ = ["AtomPotential"]
 
-
-class GaussianTransition(Protocol):
-    """What an endpoint needs of a transition N(F x + c, Q)."""
-
-    @property
-    def matrix(self) -> np.ndarray:
-        """F (d, d)."""
-
-    @property
-    def cholesky(self) -> np.ndarray:
-        """L (d, d) with Q = L Lᵀ."""
-
-    @property
-    def log_normaliser(self) -> float:
-        """-½ log det(2π Q)."""
-
-    def whiten_sources(self, points: np.ndarray) -> np.ndarray:
-        """L⁻¹(F x + c)."""
-
-    def whiten_targets(self, points: np.ndarray) -> np.ndarray:
-        """L⁻¹ y."""
+_LARGEST = 200_000_000  # numbers in a table of points by particles, 1.6 GB
 
 
 @dataclass(frozen=True)
@@ -51,6 +36,14 @@ class AtomPotential:
 
     points: np.ndarray
     log_weights: np.ndarray
+    smooth: ClassVar[bool] = False
+
+    def log_value(self, points: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Refused: atoms have no density at the end itself."""
+        raise InputError(
+            f"atoms have no density at a snapshot; {len(points)} point(s) were asked for at the end of a gap; "
+            "ask at a time strictly between two snapshots, or fit with ends='mixture'"
+        )
 
     def carried_back(self, transition: GaussianTransition, x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """log φ (m,) and its gradient (m, d) in 1/length, at x (m, d) one transition before the atoms."""
@@ -74,3 +67,25 @@ class AtomPotential:
         return pick_targets(
             transition.whiten_sources(x), transition.whiten_targets(self.points), self.log_weights, counts, uniforms
         )
+
+    def draw(
+        self, transition: GaussianTransition, x: np.ndarray, rng: np.random.Generator
+    ) -> tuple[np.ndarray, np.ndarray]:
+        """One atom for each row of x: positions (m, d) and row numbers (m,)."""
+        rows = self.pick(transition, x, np.ones(len(x), dtype=np.int64), rng)
+        return self.points[rows], rows
+
+    def given(self, transition: GaussianTransition, x: np.ndarray) -> ConditionalEnd:
+        """The law of the end given x (m, d): a mixture of components of covariance 0, one an atom."""
+        n, d = self.points.shape
+        if len(x) * n > _LARGEST:
+            raise InputError(
+                f"the conditional law is too large; {len(x)} points by {n} atoms; ask for fewer points at a time"
+            )
+        u, v = transition.whiten_sources(x), transition.whiten_targets(self.points)
+        centre = v.mean(axis=0)
+        logs = (u - centre) @ (v - centre).T - 0.5 * ((v - centre) ** 2).sum(axis=1) + self.log_weights
+        nothing = np.zeros((1, d))
+        components = Posterior(nothing, self.points, nothing)
+        weights = np.exp(logs - log_sum_exp(logs, axis=1)[:, None])
+        return ConditionalEnd(weights, x, components, np.zeros(d), np.eye(d))

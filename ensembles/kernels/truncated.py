@@ -177,10 +177,10 @@ class _Side:
 
     def kernel(self, weights: np.ndarray) -> StreamedKernel:
         """The streamed kernel over the tiles that matter for these log-weights (tile order)."""
-        if self._weights is None or self._layout is None or np.abs(weights - self._weights).max() > _DRIFT:
+        if self._weights is None or self._layout is None or _drift(weights, self._weights) > _DRIFT:
             lower = self._lower
             if lower is not None and self._weights is not None:
-                lower = lower - float(np.abs(weights - self._weights).max())
+                lower = lower - _drift(weights, self._weights)
             self._layout = _choose_tiles(self._row_tiles, self._column_tiles, weights, lower)
             self._weights = weights.copy()
         kernel = self._whole
@@ -188,9 +188,14 @@ class _Side:
         return kernel
 
 
+def _drift(weights: np.ndarray, before: np.ndarray) -> float:
+    return float(np.abs(weights - before).max()) if np.isfinite(weights).all() else float("inf")
+
+
 def _geometric_scale(start: np.ndarray, end: np.ndarray) -> np.ndarray:
     """S, symmetric positive definite, with S A S = S⁻¹ B S⁻¹: the square root of the geometric mean A⁻¹ # B."""
-    size = 1e-12 * (np.trace(start) + np.trace(end)) * np.eye(start.shape[0])
+    # Directions in which a cloud has hardly any extent are left as they are, near enough.
+    size = (1e-6 * (np.trace(start) + np.trace(end)) + 1e-6) * np.eye(start.shape[0])
     values, vectors = np.linalg.eigh(start + size)
     root, inverse = (vectors * np.sqrt(values)) @ vectors.T, (vectors / np.sqrt(values)) @ vectors.T
     middle_values, middle = np.linalg.eigh(root @ (end + size) @ root)
@@ -203,8 +208,10 @@ def _choose_tiles(rows: Tiles, columns: Tiles, weights: np.ndarray, lower: np.nd
     """For each tile of rows the ranges of columns that may carry more than their share."""
     starts = columns.bounds[:, 0]
     top = np.maximum.reduceat(weights, starts)
-    repeated = np.repeat(top, np.diff(np.append(starts, weights.size)))
-    mass = top + np.log(np.add.reduceat(np.exp(weights - repeated), starts))
+    safe = np.where(np.isfinite(top), top, 0.0)
+    repeated = np.repeat(safe, np.diff(np.append(starts, weights.size)))
+    with np.errstate(divide="ignore"):
+        mass = safe + np.log(np.add.reduceat(np.exp(weights - repeated), starts))
     n_tiles, m_tiles = len(rows.bounds), len(columns.bounds)
     # The weights may drift by _DRIFT either way before the choice is made again.
     allowed = np.log(_SHARE / m_tiles) - 2.0 * _DRIFT

@@ -15,9 +15,8 @@ from .newton import newton_states
 from .relaxation import RelaxationControl
 from .solution import State
 
-__all__ = ["Start", "Strategy", "solver_states", "sweep_states"]
+__all__ = ["Start", "Strategy", "level_states", "solver_states", "sweep_states"]
 
-_NEWTON_SWEEPS = 25.0  # passes over the kernel that some four second-order steps take
 _NEWTON_ENTRY = 50.0  # nanoseconds that they take for an entry of the sparse coupling
 _RETRY = 60  # sweeps between two questions whether second-order steps pay
 
@@ -36,6 +35,7 @@ class Strategy:
     relaxation : whether sweeps are over-relaxed.
     first_factor : relaxation factor of the first sweeps at the problem's own noise, where one is known.
     newton : whether second-order steps are taken.
+    newton_after : predicted further sweeps from which they may be: some four steps cost this many passes themselves.
     entry_limit : entries the sparsified coupling of a second-order step may have.
     """
 
@@ -46,6 +46,7 @@ class Strategy:
     relaxation: bool = True
     first_factor: float = 1.0
     newton: bool = True
+    newton_after: float = 25.0
     entry_limit: int = 12_000_000
 
     def without_ladder(self) -> Strategy:
@@ -105,12 +106,12 @@ def solver_states(
         last = scale == 1.0
         goal = tolerance if last else max(strategy.level_error, tolerance)
         goal = max(goal, scaled.floor)
-        state = yield from _level_states(scaled, (log_a, log_b), state, goal, strategy, last)
+        state = yield from level_states(scaled, (log_a, log_b), state, goal, strategy, last)
     if tolerance < kernel.floor:  # the rounded copy has given what it can
-        yield from _level_states(kernel.exact, (log_a, log_b), state, tolerance, strategy, True)
+        yield from level_states(kernel.exact, (log_a, log_b), state, tolerance, strategy, True)
 
 
-def _level_states(
+def level_states(
     kernel: Kernel,
     log_weights: tuple[np.ndarray, np.ndarray],
     state: State,
@@ -149,7 +150,7 @@ def _entries_worth(kernel: Kernel, sweeps: float, strategy: Strategy) -> int:
     Counted in nanoseconds: some four steps, each of a few sweeps and, an entry of the sparse coupling, of building it and
     of some thirty products.
     """
-    if not strategy.newton or sweeps <= _NEWTON_SWEEPS:
+    if not strategy.newton or sweeps <= strategy.newton_after:
         return 0
-    saved = (sweeps - _NEWTON_SWEEPS) * kernel.entry_time * kernel.shape[0] * kernel.shape[1]
+    saved = (sweeps - strategy.newton_after) * kernel.entry_time * kernel.shape[0] * kernel.shape[1]
     return int(min(saved / _NEWTON_ENTRY, strategy.entry_limit))

@@ -19,7 +19,8 @@ from .solution import State
 
 __all__ = ["newton_states"]
 
-_DROPPED = 1e-7  # mass of a row that the Hessian may lose, in units of 1/n, entry by entry
+_DROPPED = (1e-14, 1e-7)  # mass of a row that the Hessian may lose, in units of 1/n, entry by entry: least and most
+_DAMPING = (1e-13, 1e-9)  # added to the Hessian's diagonal, in units of b: least and most
 _HALVINGS = 12
 
 
@@ -35,14 +36,17 @@ def newton_states(
     log_f = sweep.log_f
     while True:
         columns = b * np.exp(np.minimum(log_g + sweep.column_log_sums, 50.0))
-        coupling = kernel.entries(log_a + log_f, log_b + log_g, _DROPPED / max(kernel.shape), entry_limit)
-        if coupling is None:
-            return
         gradient = b - columns
         error = float(np.abs(gradient).sum())
+        # Where particles nearly pair off, the last error lies in links as weak as itself: they must not be dropped.
+        dropped = float(np.clip(0.1 * error, *_DROPPED)) / max(kernel.shape)
+        coupling = kernel.entries(log_a + log_f, log_b + log_g, dropped, entry_limit)
+        if coupling is None:
+            return
         direction = _direction(SchurOperator(coupling), b, gradient, error)
         slope = float(gradient @ direction)
         value = float(b @ log_g + a @ log_f)
+        rounding = 1e-14 * max(1.0, float(b @ np.abs(log_g) + a @ np.abs(log_f)))
         length = min(1.0, 50.0 / max(float(np.abs(direction).max()), 1e-300))
         for _ in range(_HALVINGS):
             trial = log_g + length * direction
@@ -50,7 +54,10 @@ def newton_states(
             sweeps += 1
             gain = float(b @ trial + a @ sweep.log_f) - value
             trial_error = _column_error(b, trial, sweep.column_log_sums)
-            if trial_error < 0.5 * error or (gain >= 1e-4 * length * slope and trial_error < 4.0 * error):
+            # The dual never falls, by more than rounding: the error alone may be halved and restored in turn for ever.
+            if gain >= 1e-4 * length * slope and trial_error < 4.0 * error:
+                break
+            if gain >= -rounding and trial_error < 0.5 * error:
                 break
             length *= 0.4
         else:
@@ -68,7 +75,7 @@ def _direction(operator: SchurOperator, b: np.ndarray, gradient: np.ndarray, err
     """Solve (diag c - πᵀ diag(1/r) π + small) d = gradient by conjugate gradients, scaled by the diagonal."""
     # A column that the sparse coupling hardly reaches gets the diagonal of a plain sweep's step.
     starved = np.maximum(b - operator.columns, 0.0) * (operator.columns < 0.5 * b)
-    damping = 1e-9 * b + starved
+    damping = np.clip(1e-3 * error, *_DAMPING) * b + starved
     diagonal = operator.diagonal() + damping
 
     def apply(vector: np.ndarray) -> np.ndarray:

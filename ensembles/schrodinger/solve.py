@@ -11,13 +11,14 @@ from .. import checks
 from ..kernels.base import Kernel
 from ..kernels.dense import DenseKernel
 from .certificate import certify, scaling_exists
-from .iteration import Start, Strategy, solver_states
+from .iteration import Start, Strategy, level_states, solver_states
 from .solution import Certificate, Outcome, Solution, State
 
 __all__ = ["SWEEP_LIMIT", "solve"]
 
 SWEEP_LIMIT = 20_000
 _UNRESOLVED_COST = 1e12  # at this cost the exponent is rounded to 2e-4: the kernel itself is no longer known
+_ATTEMPTS = 3  # times that a run is resumed when its certificate does not bear it out
 _PATIENCE = 1_000  # sweeps without a new best error by 1 % before the run counts as stalled
 _SUPPORT_ENTRIES = 200_000  # entries up to which the existence of a scaling is decided by linear programming
 
@@ -43,7 +44,8 @@ def solve(
         them at the top of the ladder; zeros by default.
     sweep_limit : passes over the kernel.
     strategy : what the iteration may use.
-    observe : called with every `State`; a true return stops the run, which then counts as having met its limit.
+    observe : called with every `State`; a true return stops the run, which counts as having met its limit unless
+        its potentials meet the tolerance.
 
     Returns
     -------
@@ -73,23 +75,31 @@ def solve(
 
     run = _Run(tolerance, sweep_limit, observe)
     begin = _restricted_start(start, kernel.shape, rows, columns)
+    strategy = strategy or Strategy()
     if isinstance(start, tuple):
-        strategy = (strategy or Strategy()).without_ladder()
-    for state in solver_states(reduced, pair, tolerance, begin, strategy or Strategy()):
-        if run.ends(state):
+        strategy = strategy.without_ladder()
+    log_weights = (np.log(pair[0]), np.log(pair[1]))
+    states = solver_states(reduced, pair, tolerance, begin, strategy)
+    for _ in range(_ATTEMPTS):
+        state = next(state for state in states if run.ends(state))
+        if state.scale != 1.0:
+            # Ended on the ladder: potentials times noise variance are lengths², alike at every noise.
+            state = replace(state, log_f=state.log_f * state.scale, log_g=state.log_g * state.scale, scale=1.0)
+        final_f, certificate = certify(reduced.exact, log_weights, state.log_g, state.log_f, run.contraction, tolerance)
+        state = replace(state, log_f=final_f)
+        if certificate.marginal_error <= tolerance:
+            run.outcome = Outcome.CONVERGED  # also where the run had given up or was stopped: this is what counts
             break
-    if state.scale != 1.0:  # ended on the ladder; potentials times noise variance are lengths², the same at every noise
-        state = replace(state, log_f=state.log_f * state.scale, log_g=state.log_g * state.scale)
-    final_f, certificate = certify(
-        reduced.exact, (np.log(pair[0]), np.log(pair[1])), state.log_g, state.log_f, run.contraction, tolerance
-    )
-    state = replace(state, log_f=final_f)
-    outcome = run.outcome
-    if outcome is Outcome.CONVERGED and certificate.marginal_error > tolerance:
-        outcome = Outcome.STALLED
+        if run.outcome is not Outcome.CONVERGED:
+            break
+        # The run was content with a rounded kernel, or with an f on its way between two sweeps: go on with the exact one.
+        run.outcome = Outcome.ITERATION_LIMIT
+        states = level_states(reduced.exact, log_weights, state, tolerance, strategy, True)
+    else:
+        run.outcome = Outcome.STALLED
     log_f, log_g = _extended(kernel, (a, b), rows, columns, state)
     shift = 0.5 * (pair[1] @ log_g[columns] - pair[0] @ log_f[rows])
-    return Solution(log_f + shift, log_g - shift, state.sweep, outcome, certificate, np.array(run.history))
+    return Solution(log_f + shift, log_g - shift, state.sweep, run.outcome, certificate, np.array(run.history))
 
 
 class _Run:

@@ -1,0 +1,1 @@
+"""Tables, pictures and the report page: what a fitted bridge says, in forms that people read."""
