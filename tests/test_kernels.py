@@ -13,6 +13,7 @@ from ensembles.kernels.cached import CachedKernel
 from ensembles.kernels.choose import gaussian_kernel
 from ensembles.kernels.dense import DenseKernel
 from ensembles.kernels.streamed import StreamedKernel
+from ensembles.kernels.truncated import TruncatedKernel
 from ensembles.logspace import birkhoff_diameter
 
 # Kernel class -> how to make it between two clouds, and the error its sums may have.
@@ -20,6 +21,7 @@ KERNELS = {
     DenseKernel: (DenseKernel.between, 1e-12),
     StreamedKernel: (StreamedKernel, 1e-12),
     CachedKernel: (lambda u, v: CachedKernel(StreamedKernel(u, v)), 5e-7),
+    TruncatedKernel: (TruncatedKernel, 2e-9),
 }
 every_kernel = pytest.mark.parametrize("kind", KERNELS, ids=lambda kind: kind.__name__)
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -12,7 +12,7 @@ import numpy as np
 from .. import checks
 from ..kernels.choose import MEMORY, gaussian_kernel
 from ..priors.base import LinearGaussianPrior, Transition, require_prior
-from ..schrodinger.gaussian_start import gaussian_potentials
+from ..schrodinger.coarse import coarse_potentials, gaussian_start
 from ..schrodinger.iteration import Start, Strategy
 from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
 from ..schrodinger.solve import SWEEP_LIMIT, solve
@@ -165,26 +165,29 @@ def _solve_gap(
     def observe(state: State) -> bool | None:
         return options.observe(k, state) if options.observe is not None else None
 
+    start_values, strategy = _start((u, v), weights, transition, start, series, k, tolerance, options)
     return solve(
         gaussian_kernel(u, v, options.memory),
         weights,
         tolerance=tolerance,
         sweep_limit=options.sweep_limit,
-        start=_start(u, v, weights, transition, start, series, k),
-        strategy=options.strategy,
+        start=start_values,
+        strategy=strategy,
         observe=observe,
     )
 
 
 def _start(
-    u: np.ndarray,
-    v: np.ndarray,
+    clouds: tuple[np.ndarray, np.ndarray],
     weights: tuple[np.ndarray, np.ndarray],
     transition: Transition,
     warm: Bridge | None,
     series: SnapshotSeries,
     k: int,
-) -> Start | tuple[np.ndarray, np.ndarray]:
+    tolerance: float,
+    options: SolverOptions,
+) -> tuple[Start | tuple[np.ndarray, np.ndarray], Strategy]:
+    """Where gap k starts: another bridge's potentials, those of coarser clouds, or the closed form for Gaussians."""
     if warm is not None:
         counts = [len(cloud) for cloud in warm.series.clouds]
         if counts != [len(cloud) for cloud in series.clouds] or warm.series.dimension != series.dimension:
@@ -197,13 +200,21 @@ def _start(
         if 1.0 / _WARM_RATIO <= ratio <= _WARM_RATIO:
             # Potentials times noise variance are lengths², nearly the same at neighbouring noise levels.
             solution = warm.gaps[k].coupled
-            return solution.log_f * ratio, solution.log_g * ratio
-
-    def closed_form(scale: float) -> tuple[np.ndarray, np.ndarray]:
-        root = np.sqrt(scale)
-        return gaussian_potentials(u / root, v / root, *weights)
-
-    return closed_form
+            return (solution.log_f * ratio, solution.log_g * ratio), options.strategy
+    if 4.0 * clouds[0].shape[0] * clouds[1].shape[0] <= options.memory:
+        return gaussian_start(clouds, weights), options.strategy
+    chosen = [np.flatnonzero(weight) for weight in weights]
+    potentials, factor = coarse_potentials(
+        (clouds[0][chosen[0]], clouds[1][chosen[1]]),
+        (weights[0][chosen[0]], weights[1][chosen[1]]),
+        tolerance,
+        gaussian_kernel,
+        options.strategy,
+    )
+    full = (np.zeros(weights[0].size), np.zeros(weights[1].size))
+    for values, rows, found in zip(full, chosen, potentials, strict=True):
+        values[rows] = found
+    return full, replace(options.strategy, first_factor=factor)
 
 
 def _require_enough_noise(

@@ -18,7 +18,9 @@ from ..endpoints.base import Potential
 from ..endpoints.conditional import ConditionalEnd
 from ..endpoints.mixture import MixturePotential
 from ..endpoints.pair import PairLaw
+from ..kernels.choose import evaluation_kernel
 from ..kernels.streamed import StreamedKernel
+from ..kernels.truncated import TruncatedKernel
 from ..priors.base import LinearGaussianPrior, Transition
 from ..priors.pinned import PinnedLaw, pin, pinned_steps
 from ..schrodinger.solution import Solution
@@ -73,10 +75,10 @@ class Gap:
             return np.log(self.weights[1]) + self.coupled.log_g
 
     @cached_property
-    def kernel(self) -> StreamedKernel:
+    def kernel(self) -> StreamedKernel | TruncatedKernel:
         """The unit Gaussian kernel between the whitened clouds."""
         transition = self.transition
-        return StreamedKernel(transition.whiten_sources(self.clouds[0]), transition.whiten_targets(self.clouds[1]))
+        return evaluation_kernel(transition.whiten_sources(self.clouds[0]), transition.whiten_targets(self.clouds[1]))
 
     @cached_property
     def initial(self) -> Potential:

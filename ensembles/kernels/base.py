@@ -62,6 +62,9 @@ class Kernel(ABC):
     floor: float = 0.0
     """L1 error of the marginals below which this kernel's own rounding may show."""
 
+    entry_time: float = 1.0
+    """Nanoseconds that a sweep takes an entry, roughly: to weigh sweeps against other steps."""
+
     @property
     def exact(self) -> Kernel:
         """The kernel in double precision, entry by entry: this one, unless it keeps a rounded copy."""

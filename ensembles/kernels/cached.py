@@ -29,6 +29,7 @@ class CachedKernel(Kernel):
     """exp(-½|u_i - v_j|²), stored as float32 at the first sweep; n m * 4 bytes."""
 
     floor = _FLOOR
+    entry_time = 0.15
 
     def __init__(self, exact: StreamedKernel) -> None:
         self._exact = exact

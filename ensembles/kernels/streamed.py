@@ -29,6 +29,7 @@ class StreamedKernel(Kernel):
         self.targets = np.ascontiguousarray(targets, dtype=float)
         self.shape = (self.sources.shape[0], self.targets.shape[0])
         self.layout = full_layout(*self.shape) if layout is None else layout
+        self.entry_time = 0.5 + 0.035 * self.sources.shape[1]
         self._coordinates = np.ascontiguousarray(self.targets.T)
 
     @property

@@ -6,7 +6,7 @@ One state follows every pass over the kernel, so a caller shows progress, stops 
 from __future__ import annotations
 
 from collections.abc import Callable, Generator, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -16,6 +16,9 @@ from .relaxation import RelaxationControl
 from .solution import State
 
 __all__ = ["Start", "Strategy", "level_states", "solver_states", "sweep_states"]
+
+_NEWTON_ENTRY = 50.0  # nanoseconds that they take for an entry of the sparse coupling
+_RETRY = 60  # sweeps between two questions whether second-order steps pay
 
 Start = Callable[[float], tuple[np.ndarray, np.ndarray]]
 
@@ -30,8 +33,9 @@ class Strategy:
     ladder_top : mean cost at the top of the ladder; above it the kernel is too sharp to start on.
     level_sweeps, level_error : a level above the last ends after that many sweeps, or at that error.
     relaxation : whether sweeps are over-relaxed.
+    first_factor : relaxation factor of the first sweeps at the problem's own noise, where one is known.
     newton : whether second-order steps are taken.
-    newton_after : predicted further sweeps beyond which they are taken.
+    newton_after : predicted further sweeps from which they may be: some four steps cost this many passes themselves.
     entry_limit : entries the sparsified coupling of a second-order step may have.
     """
 
@@ -40,9 +44,14 @@ class Strategy:
     level_sweeps: int = 12
     level_error: float = 0.02
     relaxation: bool = True
+    first_factor: float = 1.0
     newton: bool = True
-    newton_after: float = 60.0
-    entry_limit: int = 60_000_000
+    newton_after: float = 25.0
+    entry_limit: int = 12_000_000
+
+    def without_ladder(self) -> Strategy:
+        """The same, starting at the problem's own noise."""
+        return replace(self, ladder_top=np.inf)
 
 
 def ladder(mean_cost: float, strategy: Strategy) -> list[float]:
@@ -112,20 +121,36 @@ def level_states(
 ) -> Generator[State, None, State]:
     """States at one noise, until the goal is met or (above the last level) the sweeps of a level are used up."""
     begun = state.sweep
-    second_order = strategy.newton
+    control = RelaxationControl(strategy.first_factor if last else 1.0)
+    next_try = 0
     while True:
-        control = RelaxationControl()
         for swept in sweep_states(kernel, *log_weights, state, control, strategy.relaxation):
             yield swept
             if swept.error <= goal or (not last and swept.sweep - begun >= strategy.level_sweeps):
                 return swept
-            if second_order and control.settled and control.sweeps_to(swept.error, goal) > strategy.newton_after:
+            limit = _entries_worth(kernel, control.sweeps_to(swept.error, goal), strategy)
+            if limit and control.settled and swept.sweep >= next_try:
                 state = swept
                 break
-        for stepped in newton_states(kernel, *log_weights, state, strategy.entry_limit):
+        tried = state
+        for stepped in newton_states(kernel, *log_weights, state, limit):
             yield stepped
             if stepped.error <= goal:
                 return stepped
             state = stepped
-        # No second-order step helped, or the coupling is too dense for one: sweep on.
-        second_order = False
+        if state is tried:  # too dense, or no step helped: sweep on as before, and ask again later
+            next_try = state.sweep + _RETRY
+        else:
+            control = RelaxationControl()
+
+
+def _entries_worth(kernel: Kernel, sweeps: float, strategy: Strategy) -> int:
+    """Entries up to which second-order steps cost less than `sweeps` more sweeps; 0 where they are not used.
+
+    Counted in nanoseconds: some four steps, each of a few sweeps and, an entry of the sparse coupling, of building it and
+    of some thirty products.
+    """
+    if not strategy.newton or sweeps <= strategy.newton_after:
+        return 0
+    saved = (sweeps - strategy.newton_after) * kernel.entry_time * kernel.shape[0] * kernel.shape[1]
+    return int(min(saved / _NEWTON_ENTRY, strategy.entry_limit))

@@ -11,10 +11,10 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 import numpy as np
-from scipy.sparse import csr_matrix
 from scipy.sparse.linalg import LinearOperator, cg
 
 from ..kernels.base import Kernel
+from ..kernels.sparse import SchurOperator
 from .solution import State
 
 __all__ = ["newton_states"]
@@ -43,7 +43,7 @@ def newton_states(
         coupling = kernel.entries(log_a + log_f, log_b + log_g, dropped, entry_limit)
         if coupling is None:
             return
-        direction = _direction(coupling, b, columns, gradient, error)
+        direction = _direction(SchurOperator(coupling), b, gradient, error)
         slope = float(gradient @ direction)
         value = float(b @ log_g + a @ log_f)
         rounding = 1e-14 * max(1.0, float(b @ np.abs(log_g) + a @ np.abs(log_f)))
@@ -71,25 +71,20 @@ def _column_error(b: np.ndarray, log_g: np.ndarray, column_log_sums: np.ndarray)
     return float(np.abs(b * np.expm1(np.minimum(log_g + column_log_sums, 50.0))).sum())
 
 
-def _direction(
-    coupling: csr_matrix, b: np.ndarray, columns: np.ndarray, gradient: np.ndarray, error: float
-) -> np.ndarray:
-    """Solve (diag c - πᵀ diag(1/r) π + small) d = gradient, with the sums r, c of the sparse coupling: semi-definite."""
-    rows = np.asarray(coupling.sum(axis=1)).ravel()
-    kept = np.asarray(coupling.sum(axis=0)).ravel()
-    inverse_rows = 1.0 / np.maximum(rows, 1e-300)
-    squares = coupling.multiply(coupling)
-    damping = np.clip(1e-3 * error, *_DAMPING) * b + np.maximum(b - kept, 0.0) * (kept < 0.5 * b)
-    diagonal = np.maximum(kept - squares.T @ inverse_rows, 0.0) + damping
-    transposed = coupling.T.tocsr()
+def _direction(operator: SchurOperator, b: np.ndarray, gradient: np.ndarray, error: float) -> np.ndarray:
+    """Solve (diag c - πᵀ diag(1/r) π + small) d = gradient by conjugate gradients, scaled by the diagonal."""
+    # A column that the sparse coupling hardly reaches gets the diagonal of a plain sweep's step.
+    starved = np.maximum(b - operator.columns, 0.0) * (operator.columns < 0.5 * b)
+    damping = np.clip(1e-3 * error, *_DAMPING) * b + starved
+    diagonal = operator.diagonal() + damping
 
     def apply(vector: np.ndarray) -> np.ndarray:
         vector = vector.ravel()
-        return (kept + damping) * vector - transposed @ (inverse_rows * (coupling @ vector))
+        return operator.apply(vector) + damping * vector
 
     size = b.size
-    operator = LinearOperator((size, size), matvec=apply, dtype=float)
+    system = LinearOperator((size, size), matvec=apply, dtype=float)
     preconditioner = LinearOperator((size, size), matvec=lambda vector: vector.ravel() / diagonal, dtype=float)
     accuracy = min(0.1, max(error, 1e-4))
-    direction, _ = cg(operator, gradient, rtol=accuracy, maxiter=2000, M=preconditioner)
+    direction, _ = cg(system, gradient, rtol=accuracy, maxiter=2000, M=preconditioner)
     return direction - float(b @ direction)

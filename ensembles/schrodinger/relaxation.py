@@ -10,23 +10,37 @@ from __future__ import annotations
 
 import numpy as np
 
-__all__ = ["RelaxationControl"]
+__all__ = ["RelaxationControl", "best_factor"]
 
 _PLAIN = 6
+_FEW = 3
 _BLOCK = 12
 _LARGEST = 1.97
+
+
+def best_factor(contraction: float) -> float:
+    """2 / (1 + sqrt(1 - θ)) for plain sweeps that contract by θ < 1.
+
+    Examples
+    --------
+    >>> round(best_factor(0.75), 6)
+    1.333333
+    """
+    return float(2.0 / (1.0 + np.sqrt(1.0 - contraction)))
 
 
 class RelaxationControl:
     """Watches the errors of successive sweeps and proposes the next factor; falls back to 1 when they grow."""
 
-    def __init__(self) -> None:
+    def __init__(self, first_factor: float = 1.0) -> None:
+        # A known factor waits for a few plain sweeps, which take off what contracts quickly.
         self.factor = 1.0
+        self._known = min(first_factor, _LARGEST)
         self.rate = 1.0  # contraction a sweep at the present factor
         self.settled = False  # whether a first block of sweeps has been seen
         self._errors: list[float] = []
         self._ceiling = _LARGEST
-        self._wait = _PLAIN
+        self._wait = _PLAIN if first_factor == 1.0 else _FEW
 
     def observe(self, error: float) -> None:
         """Take the error after a sweep made with `factor`, and renew `rate` and `factor` at the end of a block."""
@@ -36,6 +50,10 @@ class RelaxationControl:
             self._restart(1.0, _PLAIN)
             return
         if len(self._errors) < self._wait:
+            return
+        if self._known > 1.0:
+            known, self._known = self._known, 1.0
+            self._restart(known, 2 * _BLOCK)
             return
         self.settled = True
         half = len(self._errors) // 2
@@ -48,8 +66,7 @@ class RelaxationControl:
         else:
             self._restart(self.factor, _BLOCK)
             return
-        best = 2.0 / (1.0 + np.sqrt(1.0 - theta))
-        self._restart(float(min(best, self._ceiling)), _BLOCK)
+        self._restart(min(best_factor(theta), self._ceiling), _BLOCK)
 
     def sweeps_to(self, error: float, tolerance: float) -> float:
         """Predicted sweeps from `error` down to `tolerance` at the observed rate."""

@@ -77,21 +77,18 @@ def solve(
     begin = _restricted_start(start, kernel.shape, rows, columns)
     strategy = strategy or Strategy()
     if isinstance(start, tuple):
-        strategy = _without_ladder(strategy)
+        strategy = strategy.without_ladder()
     log_weights = (np.log(pair[0]), np.log(pair[1]))
     states = solver_states(reduced, pair, tolerance, begin, strategy)
     for _ in range(_ATTEMPTS):
         state = next(state for state in states if run.ends(state))
-        if (
-            state.scale != 1.0
-        ):  # ended on the ladder; potentials times noise variance are lengths², alike at every noise
+        if state.scale != 1.0:
+            # Ended on the ladder: potentials times noise variance are lengths², alike at every noise.
             state = replace(state, log_f=state.log_f * state.scale, log_g=state.log_g * state.scale, scale=1.0)
         final_f, certificate = certify(reduced.exact, log_weights, state.log_g, state.log_f, run.contraction, tolerance)
         state = replace(state, log_f=final_f)
-        if (
-            certificate.marginal_error <= tolerance
-        ):  # also where the run had given up or was stopped: this is what counts
-            run.outcome = Outcome.CONVERGED
+        if certificate.marginal_error <= tolerance:
+            run.outcome = Outcome.CONVERGED  # also where the run had given up or was stopped: this is what counts
             break
         if run.outcome is not Outcome.CONVERGED:
             break
@@ -161,10 +158,6 @@ def _refused(kernel: Kernel, tolerance: float, unreached: tuple[int, ...]) -> So
         np.empty((0, 4)),
         unreached,
     )
-
-
-def _without_ladder(strategy: Strategy) -> Strategy:
-    return replace(strategy, ladder_top=np.inf)
 
 
 def _restricted_start(
