@@ -189,8 +189,8 @@ class Bridge:
         for k in range(index, len(self.gaps)):
             gap = self.gaps[k]
             end, rows = gap.draw_on(start, begin, rows, rng)
-            inside = (times > start) & (times < gap.times[1])
-            positions[:, inside] = gap.fill_path(start, begin, end, times[inside], rng)
+            inside = slice(*np.searchsorted(times, [np.nextafter(start, np.inf), gap.times[1]]))
+            gap.fill_path(start, begin, end, times[inside], rng, positions[:, inside])
             positions[:, times == gap.times[1]] = end[:, None]
             members[:, k + 1] = rows
             begin, start = end, gap.times[1]

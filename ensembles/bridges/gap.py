@@ -19,10 +19,11 @@ from ..endpoints.conditional import ConditionalEnd
 from ..endpoints.mixture import MixturePotential
 from ..endpoints.pair import PairLaw
 from ..kernels.choose import evaluation_kernel
+from ..kernels.compiled_paths import walk
 from ..kernels.streamed import StreamedKernel
 from ..kernels.truncated import TruncatedKernel
 from ..priors.base import LinearGaussianPrior, Transition
-from ..priors.pinned import PinnedLaw, pin, pinned_steps
+from ..priors.pinned import PinnedLaw, pin, pinned_steps, square_root
 from ..schrodinger.solution import Solution
 from .smooth import SmoothSolution
 
@@ -212,12 +213,16 @@ class Gap:
         return ends
 
     def fill_path(
-        self, start: float, begin: np.ndarray, end: np.ndarray, times: np.ndarray, rng: np.random.Generator
-    ) -> np.ndarray:
-        """Positions (count, T, d) of pinned paths from `begin` at `start` to `end`, at times strictly in between."""
-        positions = np.empty((begin.shape[0], times.size, self.dimension))
-        current = begin
-        for k, law in enumerate(pinned_steps(self.prior, start, self.times[1], times, self.dimension)):
-            current = law.sample(current, end, rng)
-            positions[:, k] = current
-        return positions
+        self, start: float, begin: np.ndarray, end: np.ndarray, times: np.ndarray, rng: np.random.Generator, out: np.ndarray
+    ) -> None:
+        """Write pinned paths from `begin` at `start` to `end` into out (count, T, d), at times strictly in between."""
+        laws = pinned_steps(self.prior, start, self.times[1], times, self.dimension)
+        if not laws:
+            return
+        steps = (
+            np.array([law.start_matrix for law in laws]),
+            np.array([law.end_matrix for law in laws]),
+            np.array([law.shift for law in laws]),
+            np.array([square_root(law.covariance) for law in laws]),
+        )
+        walk(steps, begin, end, rng, out)
