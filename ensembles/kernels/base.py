@@ -62,6 +62,8 @@ class Kernel(ABC):
     floor: float = 0.0
     """L1 error of the marginals below which this kernel's own rounding may show."""
 
+    left_out: float = 0.0
+    """Bound on the mass of a coupling with normalised rows that this kernel does not see."""
     entry_time: float = 1.0
     """Nanoseconds that a sweep takes an entry, roughly: to weigh sweeps against other steps."""
 

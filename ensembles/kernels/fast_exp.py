@@ -8,26 +8,45 @@ times more.
 
 from __future__ import annotations
 
+import logging
 import math
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any
 
 import numba
 from numba import types
 from numba.extending import intrinsic
 
-__all__ = ["FAST", "compiled", "exponential"]
+__all__ = ["FAST", "announce_compilation", "compiled", "exponential"]
 
 # Sums may be reordered into vector lanes and products fused; infinities keep their meaning.
 FAST = {"contract", "reassoc", "nsz", "arcp"}
 
 
+_dispatchers: list[Any] = []
+_log = logging.getLogger("ensembles")
+
+
 def compiled(function: Callable[..., Any]) -> Callable[..., Any]:
     """Compile without the interpreter lock, cached on disk where a cache folder can be written, else in memory."""
     try:
-        return numba.njit(nogil=True, fastmath=FAST, cache=True)(function)
-    except RuntimeError:  # numba found no folder for its cache
-        return numba.njit(nogil=True, fastmath=FAST)(function)
+        dispatcher = numba.njit(nogil=True, fastmath=FAST, cache=True)(function)
+    except (RuntimeError, OSError):  # numba found no folder for its cache
+        dispatcher = numba.njit(nogil=True, fastmath=FAST)(function)
+    _dispatchers.append(dispatcher)
+    return dispatcher
+
+
+def announce_compilation() -> None:
+    """Say, once a process, that the loops are being compiled, unless an earlier process left them on disk."""
+    if not _dispatchers:
+        return
+    caches = [getattr(dispatcher, "_cache", None) for dispatcher in _dispatchers]
+    _dispatchers.clear()
+    folders = {cache.cache_path for cache in caches if getattr(cache, "cache_path", None)}
+    if not any(next(Path(folder).glob("*.nbi"), None) for folder in folders):
+        _log.warning("compiling the loops for this machine: once after installation, some seconds")
 
 
 if numba.config.DISABLE_JIT:  # pragma: no cover - run by a test in another process

@@ -7,6 +7,8 @@ import threading
 from collections.abc import Callable
 from itertools import pairwise
 
+from .fast_exp import announce_compilation
+
 __all__ = ["block_bounds", "run_blocks", "thread_count"]
 
 _SMALL = 200_000  # kernel entries below which a second thread costs more than it saves
@@ -34,6 +36,7 @@ def run_blocks(task: Callable[[int, int, int], None], bounds: list[tuple[int, in
 
     Which thread runs which block is left open, so a task writes only to places that belong to its block.
     """
+    announce_compilation()
     workers = min(thread_count(), len(bounds)) if entries > _SMALL else 1
     lock = threading.Lock()
     pending = list(enumerate(bounds))[::-1]

@@ -34,13 +34,14 @@ _DRIFT = 1.0  # change of any log-weight after which the tiles are chosen anew
 class TruncatedKernel(Kernel):
     """k_ij = exp(-½|u_i - v_j|²) without the pairs of tiles that carry less than 1e-9 of a row; exact otherwise."""
 
+    left_out = _SHARE
+
     def __init__(self, sources: np.ndarray, targets: np.ndarray) -> None:
         self.sources, self.targets = sources, targets
         self.shape = (sources.shape[0], targets.shape[0])
         self.entry_time = 0.5 + 0.035 * sources.shape[1]
         self._forward = _Side.balanced(sources, targets)
         self._row_sums: np.ndarray | None = None
-        self.left_out = _SHARE
 
     @property
     def reversed(self) -> TruncatedKernel:
