@@ -23,6 +23,7 @@ import numpy as np
 from scipy.linalg import solve_triangular
 
 from .. import checks
+from .box import Box
 from .van_loan import linear_transition
 
 __all__ = ["LinearGaussianPrior", "Transition", "require_prior"]
@@ -95,6 +96,8 @@ class LinearGaussianPrior(ABC):
     """dX = (A X + a) dt + sqrt(2 D) dW: what every prior offers. See the module's docstring to add one."""
 
     kind: ClassVar[str]
+    box: Box | None = None
+    """Boundaries that the dynamics live in; `transition` is that of unbounded space, folded by those who ask."""
 
     @abstractmethod
     def linear_drift(self, dimension: int) -> tuple[np.ndarray, np.ndarray]:

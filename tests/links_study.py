@@ -1,0 +1,234 @@
+"""Argon atoms with hidden labels, and particles in a trap: what links and estimates from unlabelled frames are worth.
+
+Run it to print the tables (scripts/links); tests/test_links_argon.py holds small versions of them.
+"""
+
+from __future__ import annotations
+
+import sys
+import time
+import warnings
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+from scipy.spatial import cKDTree
+
+import ensembles
+
+DATA = Path(__file__).resolve().parents[1] / "data" / "argon_diffusion.npz"
+FRAME = 10.0  # ps between frames
+START_STEP = 8  # frames between the starts of two draws, so that draws of all atoms differ too
+UNITS = {"time": "ps", "length": "Å"}
+FLOOR = 1e-4  # probability below which a log score counts no further
+
+
+@dataclass(frozen=True)
+class Draw:
+    """One draw of tagged atoms and one gap: what was estimated without labels, and what the labels say.
+
+    Attributes
+    ----------
+    true, estimated, error : D in Å²/ps from the labels (mean squared displacement), from unlabelled frames, and its
+        standard error; identified is false where the frames do not tell D.
+    right : share of right links by method: most probable (least squares), most expected, nearest neighbour.
+    probability, linked : of pooled links: what was said, and whether it is so, for links, propagation, coupling.
+    log_score : mean log probability of the true link by method.
+    """
+
+    count: int
+    gap: float
+    true: float
+    estimated: float
+    error: float
+    identified: bool
+    entropy: float
+    right: dict[str, float]
+    pooled: dict[str, tuple[np.ndarray, np.ndarray]]
+    log_score: dict[str, float]
+
+
+def read_positions() -> tuple[np.ndarray, np.ndarray]:
+    """Unwrapped positions (101, 1000, 3) and mean box edges (3,) in Å."""
+    with np.load(DATA, allow_pickle=False) as archive:
+        return archive["unwrapped_A"].astype(float), archive["box_A"].mean(axis=0)
+
+
+def study(count: int, steps: int, seed: int, *, wrapped: bool = False) -> Draw:
+    """Tag `count` atoms, forget which is which, and compare `steps` frames later; `wrapped` keeps only the place in the box."""
+    positions, edges = read_positions()
+    rng = np.random.default_rng(seed)
+    tagged = rng.choice(positions.shape[1], count, replace=False)
+    first = START_STEP * seed
+    start, end = positions[first, tagged], positions[first + steps, tagged]
+    gap = FRAME * steps
+    true = float(((end - start) ** 2).mean() / (2.0 * gap))
+    box = None
+    if wrapped:
+        box = ensembles.Box(np.zeros(3), edges)
+        start, end = box.fold(start), box.fold(end)
+    order = rng.permutation(count)
+    own = np.argsort(order)  # the row of each atom in the shuffled frame
+    series = ensembles.SnapshotSeries.from_arrays([0.0, gap], [start, end[order]], units=UNITS)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", RuntimeWarning)
+        estimate = ensembles.estimate_prior(series, "brownian", box=box)
+        links = ensembles.link_particles(series, estimate.prior)[0]
+    coupling = ensembles.fit_bridge(series, estimate.prior, tolerance=1e-4).coupling(0).matrix() * count
+    return _compare(links, coupling, series, own, box, (gap, true, estimate))
+
+
+def _compare(links, coupling, series, own, box, known) -> Draw:
+    gap, true, estimate = known
+    count = own.size
+    rows = np.arange(count)
+    said = {"links": links.matrix(), "coupling": coupling}
+    said["propagation"] = np.zeros_like(coupling)
+    said["propagation"][links.graph.rows, links.graph.columns] = links.propagated
+    tree = cKDTree(series.clouds[1], boxsize=None if box is None else box.lengths)
+    nearest = tree.query(series.clouds[0])[1]
+    right = {
+        "most probable": float((links.assignment == own).mean()),
+        "most expected": float((links.expected_assignment == own).mean()),
+        "nearest": float((nearest == own).mean()),
+    }
+    # The kindest use of nearest neighbours: its own share of right links as the probability, the rest shared by all.
+    share = min(max(right["nearest"], FLOOR), 1.0 - FLOOR)
+    chance = np.where(nearest == own, share, (1.0 - share) / (count - 1))
+    scores = {name: float(np.log(np.maximum(table[rows, own], FLOOR)).mean()) for name, table in said.items()}
+    scores["nearest"] = float(np.log(np.maximum(chance, FLOOR)).mean())
+    pooled = {}
+    for name, table in said.items():
+        shown = table > 1e-3
+        pooled[name] = (table[shown], (own[:, None] == np.arange(count))[shown])
+    return Draw(
+        count, gap, true, float(estimate.prior.diffusion), estimate.standard_errors["diffusion"], estimate.identified,
+        float(links.entropy.mean()), right, pooled, scores,
+    )  # fmt: skip
+
+
+def reliability(draws: list[Draw], name: str, bins: int = 10) -> np.ndarray:
+    """Pooled links by what was said of them: (bins, 3) count, mean probability said, share that is so; NaN where empty."""
+    said = np.concatenate([draw.pooled[name][0] for draw in draws])
+    so = np.concatenate([draw.pooled[name][1] for draw in draws])
+    which = np.minimum((said * bins).astype(int), bins - 1)
+    counts = np.bincount(which, minlength=bins)
+    with np.errstate(invalid="ignore"):
+        means = [np.bincount(which, weights=values, minlength=bins) / counts for values in (said, so)]
+    return np.column_stack([counts, *means])
+
+
+def estimate_table(groups: dict[str, list[Draw]]) -> str:
+    """Estimated against true diffusion coefficients, and accuracy, one line a group of draws."""
+    lines = [
+        f"{'group':<22}{'D true':>9}{'D est.':>9}{'median |ratio-1|':>18}{'within 95 %':>13}{'told':>6}{'entropy/log n':>15}"
+        f"{'most probable':>15}{'most expected':>15}{'nearest':>9}{'log score links':>17}{'propag.':>9}{'n pi':>9}{'nearest':>9}"
+    ]
+    for name, draws in groups.items():
+        ratio = np.array([draw.estimated / draw.true for draw in draws])
+        spread = np.array([1.96 * draw.error / draw.estimated for draw in draws])
+        right = {key: np.mean([draw.right[key] for draw in draws]) for key in draws[0].right}
+        scores = {key: np.mean([draw.log_score[key] for draw in draws]) for key in draws[0].log_score}
+        lines.append(
+            f"{name:<22}{np.median([d.true for d in draws]):>9.4f}{np.median([d.estimated for d in draws]):>9.4f}"
+            f"{100 * np.median(np.abs(ratio - 1)):>16.1f} %{np.mean(np.abs(np.log(ratio)) < spread):>13.0%}"
+            f"{sum(d.identified for d in draws):>3}/{len(draws):<2}"
+            f"{np.mean([d.entropy / np.log(d.count) for d in draws]):>15.2f}"
+            f"{right['most probable']:>15.3f}{right['most expected']:>15.3f}{right['nearest']:>9.3f}"
+            f"{scores['links']:>17.3f}{scores['propagation']:>9.3f}{scores['coupling']:>9.3f}{scores['nearest']:>9.3f}"
+        )
+    return "\n".join(lines)
+
+
+def reliability_table(draws: list[Draw]) -> str:
+    """Reliability of links, of propagation alone and of the Schrödinger coupling, pooled."""
+    lines = [f"{'said':<12}" + "".join(f"{name + ': links':>20}{'said':>8}{'so':>8}" for name in draws[0].pooled)]
+    tables = {name: reliability(draws, name) for name in draws[0].pooled}
+    for k in range(10):
+        cells = "".join(f"{int(t[k, 0]):>20}{t[k, 1]:>8.3f}{t[k, 2]:>8.3f}" for t in tables.values())
+        lines.append(f"{k / 10:.1f} to {(k + 1) / 10:.1f}  " + cells)
+    return "\n".join(lines)
+
+
+def trap_recovery(repeats: int, count: int = 300, seed: int = 0) -> dict[str, list[bool]]:
+    """Share of 95 % intervals that hold the true rate and D of an Ornstein-Uhlenbeck process, from unlabelled frames."""
+    rate, diffusion = 0.5, 1.0
+    prior = ensembles.OrnsteinUhlenbeck(rate=rate, centre=[1.0, -2.0], diffusion=diffusion)
+    inside: dict[str, list[bool]] = {"rate": [], "diffusion": []}
+    for repeat in range(repeats):
+        rng = np.random.default_rng([seed, repeat])
+        # Released from a wider cloud than the stationary one, so that one gap shows the rate.
+        clouds = [rng.normal(size=(count, 2)) * 12.0 + [1.0, -2.0]]
+        clouds += [prior.transition(0.4, 2).sample(clouds[0], rng)]
+        series = ensembles.SnapshotSeries.from_arrays([0.0, 0.4], [clouds[0], rng.permutation(clouds[1])])
+        estimate = ensembles.estimate_prior(series, "ornstein-uhlenbeck")
+        for name, truth in (("rate", rate), ("diffusion", diffusion)):
+            low, high = estimate.interval(name)
+            inside[name].append(bool(low <= truth <= high))
+    return inside
+
+
+def timing(count: int) -> str:
+    """Link `count` simulated particles at a spacing of 3 noise lengths in two dimensions."""
+    import resource
+
+    rng = np.random.default_rng(0)
+    start = rng.random((count, 2)) * 3.0 * np.sqrt(count)
+    end = start + rng.standard_normal((count, 2))
+    order = rng.permutation(count)
+    series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [start, end[order]])
+    began = time.perf_counter()
+    links = ensembles.link_particles(series, ensembles.Brownian(diffusion=0.5))[0]
+    took = time.perf_counter() - began
+    right = int((links.expected_assignment == np.argsort(order)).sum()) if count <= 20_000 else -1
+    c = links.certificate
+    own = np.asarray(links.sparse()[np.arange(count), np.argsort(order)]).ravel()
+    return (
+        f"{count} x {count}: {took:.1f} s, {links.graph.edges} links kept, {c.propagation.iterations} rounds, certified: "
+        f"{c.converged}; sums off by {c.propagation.row_error:.1e}, after balancing {c.row_error:.1e}; two formulas for the "
+        f"log evidence ({links.log_evidence:.1f}) differ by {c.propagation.evidence_difference:.1e}; left out {c.left_out:.1e}; "
+        f"right links: mean probability of the true one {own.mean():.4f}"
+        + (f", {right} right in the most expected assignment" if right >= 0 else "")
+        + f"; peak memory {resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e6:.2f} GB"
+    )
+
+
+def argon(draws: int = 10) -> None:
+    """Print the argon tables."""
+    groups: dict[str, list[Draw]] = {}
+    for count in (50, 200, 1000):
+        for steps in (1, 3, 10):
+            groups[f"{count} atoms, {FRAME * steps:g} ps"] = [study(count, steps, seed) for seed in range(draws)]
+            print(estimate_table(groups).splitlines()[0 if len(groups) == 1 else -1], flush=True)
+            if len(groups) == 1:
+                print(estimate_table(groups).splitlines()[-1], flush=True)
+    for steps in (1, 3):
+        name = f"1000 wrapped, {FRAME * steps:g} ps"
+        groups[name] = [study(1000, steps, seed, wrapped=True) for seed in range(draws)]
+        print(estimate_table({name: groups[name]}).splitlines()[-1], flush=True)
+    for title, chosen in (
+        ("all groups", list(groups)),
+        ("10 ps", [name for name in groups if name.endswith(" 10 ps")]),
+    ):
+        print(f"\nReliability, {title}")
+        print(reliability_table([draw for name in chosen for draw in groups[name]]), flush=True)
+
+
+def main(arguments: list[str]) -> None:
+    """Print one part, or all: argon, trap, timing."""
+    parts = arguments or ["argon", "trap", "timing"]
+    if "argon" in parts:
+        print("Argon with hidden labels; D in Å²/ps; medians over draws; shares of right links; mean log probability")
+        argon()
+    if "trap" in parts:
+        inside = trap_recovery(100)
+        for name, held in inside.items():
+            print(f"Trap, 300 unlabelled particles: the 95 % interval of the {name} holds the truth in {sum(held)} of {len(held)}")
+    if "timing" in parts:
+        timing(100)  # compiles
+        for count in (5_000, 100_000):
+            print(timing(count), flush=True)
+
+
+if __name__ == "__main__":
+    main(sys.argv[1:])
