@@ -64,15 +64,20 @@ def _exponentials(values, start, stop, repeats):  # type: ignore[no-untyped-def]
     return total
 
 
-def limits(say: Say) -> None:
-    """cached sweeps against memory bandwidth, streamed sweeps against exponentials"""
+def read_bandwidth() -> float:
+    """Bytes a second of a sum over a gigabyte, on all threads."""
     values = np.ones(2**28, dtype=np.float32)
     bounds = block_bounds(values.size, 8)
     _read(values, 0, 10)
-    seconds = best_of(lambda: run_blocks(lambda block, start, stop: _read(values, start, stop), bounds, 1e9))
-    bandwidth = values.nbytes / seconds
+    return values.nbytes / best_of(
+        lambda: run_blocks(lambda block, start, stop: _read(values, start, stop), bounds, 1e9)
+    )
+
+
+def limits(say: Say) -> None:
+    """cached sweeps against memory bandwidth, streamed sweeps against exponentials"""
+    bandwidth = read_bandwidth()
     say(f"  reading float32 with all threads: {bandwidth / 1e9:.1f} GB/s")
-    del values
     arguments = -20.0 * np.random.default_rng(0).random(8192)
     _exponentials(arguments, 0, 10, 1)
     repeats, blocks = 2000, block_bounds(8, 8)

@@ -25,7 +25,6 @@ import ot
 
 import ensembles
 from ensembles.kernels.cached import CachedKernel
-from ensembles.kernels.choose import gaussian_kernel
 from ensembles.kernels.streamed import StreamedKernel
 from ensembles.schrodinger.iteration import Strategy, sweep_states
 from ensembles.schrodinger.relaxation import RelaxationControl
@@ -121,10 +120,10 @@ def plain_sweeps(x: np.ndarray, y: np.ndarray, epsilon: float) -> int | None:
     log_a = np.full(n, -np.log(n))
     state = State(0, "start", 1.0, np.zeros(n), np.zeros(n), np.inf, np.inf, np.inf, 1.0)
     most = MOST_SWEEPS[min(MOST_SWEEPS, key=lambda size: abs(size - n))]
-    for state in sweep_states(kernel, log_a, log_a, state, RelaxationControl(), False):
-        if state.error <= GOAL:
-            return state.sweep
-        if state.sweep >= most:
+    for swept in sweep_states(kernel, log_a, log_a, state, RelaxationControl(), False):
+        if swept.error <= GOAL:
+            return swept.sweep
+        if swept.sweep >= most:
             return None
     raise AssertionError("sweeps do not end")
 
