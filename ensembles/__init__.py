@@ -26,6 +26,9 @@ _HOMES = {
     "Box": "priors.box",
     "link_particles": "links.link",
     "LinkOptions": "links.candidates",
+    "chain_links": "links.chain",
+    "estimate_prior": "links.estimate",
+    "EstimateOptions": "links.estimate",
     "hold_out": "assessment.hold_out",
     "choose_noise": "assessment.noise",
     "bootstrap": "assessment.uncertainty",
@@ -68,6 +71,9 @@ if TYPE_CHECKING:
     from .checks import InputError as InputError
     from .estimator import BridgeModel as BridgeModel
     from .links.candidates import LinkOptions as LinkOptions
+    from .links.chain import chain_links as chain_links
+    from .links.estimate import EstimateOptions as EstimateOptions
+    from .links.estimate import estimate_prior as estimate_prior
     from .links.link import link_particles as link_particles
     from .priors.box import Box as Box
     from .priors.brownian import Brownian as Brownian

@@ -13,6 +13,7 @@ from .. import checks
 from ..endpoints.conditional import ConditionalEnd
 from ..priors.base import LinearGaussianPrior
 from ..schrodinger.solution import Outcome, Solution
+from .boxed import BoxCoupling, BoxGap
 from .coupling import Coupling
 from .gap import Gap
 from .paths import Paths
@@ -53,8 +54,9 @@ class Bridge:
     def gaps(self) -> tuple[Gap, ...]:
         """The bridge over each gap, K - 1 of them."""
         s = self.series
+        kind = Gap if self.prior.box is None else BoxGap
         return tuple(
-            Gap(
+            kind(
                 (float(s.times[k]), float(s.times[k + 1])),
                 (s.clouds[k], s.clouds[k + 1]),
                 (s.weights[k], s.weights[k + 1]),
@@ -202,6 +204,8 @@ class Bridge:
         Smooth ends do not couple particles: ask for `conditional_end`.
         """
         chosen = self._gap_number(gap)
+        if isinstance(chosen, BoxGap):
+            return BoxCoupling(None, chosen.log_p, chosen.log_q, int(gap), int(gap) + 1, chosen)
         return Coupling(chosen.kernel, chosen.log_p, chosen.log_q, int(gap), int(gap) + 1)
 
     def conditional_end(self, points: np.ndarray, start: float | None = None) -> ConditionalEnd:

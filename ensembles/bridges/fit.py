@@ -16,6 +16,7 @@ from ..schrodinger.coarse import coarse_potentials, gaussian_start
 from ..schrodinger.iteration import Start, Strategy
 from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
 from ..schrodinger.solve import SWEEP_LIMIT, solve
+from .boxed import gap_kernel
 from .bridge import Bridge
 from .choose_ends import chosen_ends
 from .smooth import KernelEnds, MixtureEnds, SmoothSolution
@@ -101,6 +102,13 @@ def fit_bridge(
     require_prior(prior)
     options = options or SolverOptions()
     chosen, reason = chosen_ends(series, prior, ends, components)
+    if prior.box is not None:
+        if not isinstance(chosen, str):
+            raise checks.InputError(
+                f"smooth ends are not available in a box; ends = {ends!r} and the prior has a box; use ends='atoms'"
+            )
+        for time, cloud in zip(series.times, series.clouds):
+            prior.box.require_inside(cloud, f" in snapshot t = {time:g}")
     if not isinstance(chosen, str):
         return _fit_smooth(series, prior, chosen, components, start, reason)
     solutions = []
@@ -165,6 +173,9 @@ def _solve_gap(
     def observe(state: State) -> bool | None:
         return options.observe(k, state) if options.observe is not None else None
 
+    if prior.box is not None:
+        kernel = gap_kernel(prior, transition, series.clouds[k], series.clouds[k + 1])
+        return solve(kernel, weights, tolerance=tolerance, sweep_limit=options.sweep_limit, observe=observe)
     start_values, strategy = _start((u, v), weights, transition, start, series, k, tolerance, options)
     return solve(
         gaussian_kernel(u, v, options.memory),

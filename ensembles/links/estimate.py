@@ -52,8 +52,8 @@ class EstimateOptions:
     rate: str = "scalar"
     detection: float | None = None
     birth_density: float | None = None
-    links: LinkOptions = field(default_factory=lambda: LinkOptions(tolerance=1e-4, iteration_limit=3_000, cluster=0))
-    gradient_tolerance: float = 1e-4
+    links: LinkOptions = field(default_factory=lambda: LinkOptions(tolerance=1e-3, iteration_limit=3_000, cluster=0))
+    gradient_tolerance: float = 3e-4
     iteration_limit: int = 60
 
 

@@ -18,8 +18,8 @@ from .assignment import AssignmentGraph, AssignmentPosterior
 
 __all__ = ["ClusterSums", "scale_edges", "sum_clusters"]
 
-_BALANCE_ROUNDS = 2000
-_BALANCE_ERROR = 1e-12
+_BALANCE_ROUNDS = 300
+_BALANCE_ERROR = 1e-10
 
 
 @dataclass(frozen=True, eq=False)
