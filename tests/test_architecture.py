@@ -23,13 +23,14 @@ MAY_IMPORT = {
     "bridges": FOUNDATION | {"snapshots", "priors", "kernels", "schrodinger", "endpoints", "grid"},
     "links": FOUNDATION | {"bridges", "snapshots", "priors", "kernels", "schrodinger"},
     "physics": FOUNDATION,
+    "quantities": FOUNDATION,
     "lineage": FOUNDATION | {"bridges", "snapshots", "priors"},
     "assessment": FOUNDATION | {"bridges", "snapshots", "priors", "kernels", "schrodinger"},
     "sweep": FOUNDATION,
     "report": FOUNDATION | {"assessment", "lineage", "links", "bridges", "snapshots", "priors", "kernels", "schrodinger"},
     "estimator": FOUNDATION | {"bridges", "snapshots", "priors"},
     "study_problems": {"checks"},
-    "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems"},
+    "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems", "quantities"},
     "overview": FOUNDATION | {"snapshots", "priors", "report"},
     "results": FOUNDATION | {"study", "overview", "report", "bridges", "schrodinger"},
     "assess": FOUNDATION | {"study", "report", "assessment", "bridges"},
@@ -38,7 +39,7 @@ MAY_IMPORT = {
     # The names of the public contract are looked up there, on first use; they are held by tests/test_setup.py.
     "__init__": None,
 }
-HEAVY = {"matplotlib": {"report"}, "numba": {"kernels"}, "pandas": set(), "anndata": set(), "dask": set()}
+HEAVY = {"matplotlib": {"report"}, "numba": {"kernels"}, "pandas": set(), "anndata": set(), "dask": set(), "pint": set()}
 """Slow imports, and the rooms that may do them at the top of a file; everywhere else inside a function."""
 
 
