@@ -21,7 +21,8 @@ __all__ = ["BridgeModel"]
 class BridgeModel(BaseEstimator):
     """A Schrödinger bridge that is fitted to rows of positions and their times.
 
-    The time of a row is its target, y: a splitter then splits both, and stratified ones keep every snapshot.
+    The time of a row is its target, y: a splitter then splits both, and stratified ones, which want whole-numbered times,
+    keep every snapshot.
 
     Parameters
     ----------

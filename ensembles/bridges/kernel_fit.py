@@ -19,6 +19,8 @@ __all__ = ["KernelFit", "fit_kernel", "kernel_start"]
 CENTRES = 300  # by default, or as many as there are particles
 _ROWS = 5_000  # particles of either cloud that a weight fit looks at
 _BANDS = 2.0 ** np.arange(1.0, -6.5, -0.5)  # tried bandwidths, times the cloud's mean standard deviation
+_SMALL = 50_000  # particles times centres up to which the last weights are solved for, not only as far as the data tell
+_EXACT = 1e-8
 _FINE = 0.02
 
 
@@ -67,6 +69,8 @@ def fit_kernel(
 
         bandwidth, chosen = _best_band(held_out, y, b)
     log_a, log_b = logs(bandwidth)
+    if len(y) * len(centres) <= _SMALL:
+        resolution = _EXACT
     log_w, history = ascend_weights(log_a, b, log_b, a, resolution)
     return KernelFit(_kernels(centres, bandwidth, log_w, transition.cholesky), history, chosen, bandwidth)
 

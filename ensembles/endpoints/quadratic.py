@@ -22,7 +22,7 @@ from ..logspace import log_sum_exp
 
 __all__ = ["Posterior", "QuadraticMixture", "apply", "as_diagonal", "as_full"]
 
-_TILE = 4_000_000  # numbers in a block of points by components
+_TILE = 1_000_000  # numbers in a block of points by components, and by coordinates where precisions are full
 
 
 @dataclass(frozen=True)
@@ -119,27 +119,29 @@ class QuadraticMixture:
             Where a point is so far away that its square overflows.
         """
         values, gradients = np.empty(len(points)), np.empty_like(points)
-        step = max(1, _TILE // max(self.count, points.shape[1]))
+        step = max(1, _TILE // (self.precision[..., 0].size + self.linear.size))
         for first in range(0, len(points), step):
-            part = points[first : first + step]
+            part = slice(first, first + step)
             with np.errstate(over="ignore", invalid="ignore"):
-                logs = self.log_components(part)
-                values[first : first + step] = log_sum_exp(logs, axis=1)
-                shares = np.exp(logs - values[first : first + step, None])
-                gradients[first : first + step] = shares @ self.linear - self._pull(shares, part)
+                values[part], gradients[part] = self._evaluate_tile(points[part])
         require_finite_results(values, gradients)
         return values, gradients
 
-    def _pull(self, shares: np.ndarray, points: np.ndarray) -> np.ndarray:
-        """Σ_k share_k Λ_k z."""
+    def _evaluate_tile(self, points: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """`evaluate` without its check; every product Λ_k z of a full precision is formed once."""
         if self.diagonal:
-            return (self.precision[0] if len(self.precision) == 1 else shares @ self.precision) * points
-        if len(self.precision) == 1:
-            return points @ self.precision[0]
-        out = np.zeros_like(points)
-        for k, precision in enumerate(self.precision):
-            out += shares[:, k, None] * (points @ precision)
-        return out
+            logs = self.log_components(points)
+            values = log_sum_exp(logs, axis=1)
+            shares = np.exp(logs - values[:, None])
+            pulled = (self.precision[0] if len(self.precision) == 1 else shares @ self.precision) * points
+            return values, shares @ self.linear - pulled
+        n, d = points.shape
+        products = (points @ self.precision.transpose(1, 0, 2).reshape(d, -1)).reshape(n, -1, d)
+        logs = points @ self.linear.T + self.log_weights - 0.5 * np.matmul(products, points[:, :, None])[:, :, 0]
+        values = log_sum_exp(logs, axis=1)
+        shares = np.exp(logs - values[:, None])
+        weights = np.ones((n, 1)) if len(self.precision) == 1 else shares
+        return values, shares @ self.linear - np.matmul(weights[:, None], products)[:, 0]
 
 
 def require_finite_results(values: np.ndarray, gradients: np.ndarray) -> None:
