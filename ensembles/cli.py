@@ -169,6 +169,34 @@ def solve(
     console.print(f"Wrote {out}: {', '.join(written)}", markup=False, soft_wrap=True)
 
 
+@app.command()
+@_reported
+def holdout(
+    study_file: StudyFile,
+    out: Annotated[Path, typer.Option("--out", help="The folder to write.", show_default=False)],
+    seed: Annotated[
+        int | None, typer.Option("--seed", min=0, help="Instead of the study's.", show_default=False)
+    ] = None,
+    force: Force = False,
+) -> None:
+    """Predict snapshots that are left out, choose the noise level, and check the prior; tables and pictures."""
+    from .assess import assess_study, held_out_table, write_assessment
+    from .study import read_study
+
+    study = read_study(study_file)
+    writing.require_free_folder(out, force=force)
+    chosen = study.seed if seed is None else seed
+    with _progress() as say:
+        found = assess_study(study, seed=chosen, say=say)
+        with writing.output_folder(out, force=force) as folder:
+            written = write_assessment(study, found, folder, seed=chosen)
+    console = _output()
+    _print_frame(console, "Left-out snapshots: value ± standard error", held_out_table(found.hold_out))
+    for sentence in found.sentences:
+        console.print(sentence, markup=False, soft_wrap=True)
+    console.print(f"Wrote {out}: {', '.join(written)}", markup=False, soft_wrap=True)
+
+
 def main(arguments: list[str] | None = None) -> Any:
     """Run the command line; ends the process with its exit status."""
     for stream in (sys.stdout, sys.stderr):

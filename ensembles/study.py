@@ -19,7 +19,7 @@ from .snapshots.files import read_snapshots
 from .snapshots.series import SnapshotSeries
 from .study_problems import Problem, line_of, problem_of, refuse, syntax_line, unknown_key
 
-__all__ = ["DataTable", "OutputTable", "SolveTable", "Study", "UnitsTable", "read_study"]
+__all__ = ["DataTable", "HoldOutTable", "NoiseTable", "OutputTable", "SolveTable", "Study", "UnitsTable", "read_study"]
 
 _Names = Annotated[tuple[str, ...], Field(strict=False)]
 
@@ -75,6 +75,26 @@ class OutputTable(_Table):
     links: int = Field(default=3, ge=1)
 
 
+class HoldOutTable(_Table):
+    """[holdout]: draws from each prediction, resamples and simulations, and the feature that names replicates."""
+
+    draws: int = Field(default=1000, ge=2)
+    repeats: int = Field(default=100, ge=2)
+    simulations: int = Field(default=199, ge=19)
+    replicates: str | None = None
+
+
+class NoiseTable(BaseModel):
+    """[noise]: names of one or two parameters of the prior, each with the list of levels to try."""
+
+    model_config = ConfigDict(frozen=True, extra="allow", strict=True)
+
+    @property
+    def levels(self) -> dict[str, Any]:
+        """Name -> levels; empty if nothing is to be profiled."""
+        return dict(self.model_extra or {})
+
+
 class PriorTable(BaseModel):
     """[prior]: its kind, and the parameters of that kind, which the prior itself checks."""
 
@@ -94,6 +114,8 @@ class _Tables(_Table):
     prior: PriorTable
     solve: SolveTable = SolveTable()
     output: OutputTable = OutputTable()
+    holdout: HoldOutTable = HoldOutTable()
+    noise: NoiseTable = NoiseTable()
 
 
 @dataclass(frozen=True)
@@ -104,7 +126,7 @@ class Study:
     ----------
     path : Path, where it stands; the data file is looked up from its folder.
     text : str, as it was read.
-    title, seed, data, units, prior, solve, output : its tables; title and seed are those of [study].
+    title, seed, data, units, prior, solve, output, holdout, noise : its tables; title and seed are those of [study].
     """
 
     path: Path
@@ -116,6 +138,8 @@ class Study:
     prior: PriorTable
     solve: SolveTable
     output: OutputTable
+    holdout: HoldOutTable
+    noise: NoiseTable
 
     @property
     def data_file(self) -> Path:
@@ -150,7 +174,8 @@ def read_study(path: str | PathLike[str]) -> Study:
 
     Parameters
     ----------
-    path : path of a TOML file with the tables [data] and [prior], and if wanted [study], [units], [solve], [output].
+    path : path of a TOML file with the tables [data] and [prior], and if wanted [study], [units], [solve], [output],
+        [holdout], [noise].
 
     Raises
     ------
@@ -202,6 +227,8 @@ def read_study(path: str | PathLike[str]) -> Study:
         prior=found.prior,
         solve=found.solve,
         output=found.output,
+        holdout=found.holdout,
+        noise=found.noise,
     )
 
 

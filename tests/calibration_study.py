@@ -62,7 +62,9 @@ def one_coverage(prior: str, dimension: int, n: int, refits: int, seed: Sequence
     return np.stack([held, bands.estimate[rows], bands.standard_error[rows]])
 
 
-def repeat(task: Callable[..., object], repeats: int, *arguments: object, seed: int = 0, workers: int = 2) -> np.ndarray:
+def repeat(
+    task: Callable[..., object], repeats: int, *arguments: object, seed: int = 0, workers: int = 2
+) -> np.ndarray:
     """task(*arguments, (seed, r)) for every r, in processes; the result does not depend on their number."""
     if workers == 1:
         return np.array([task(*arguments, (seed, r)) for r in range(repeats)])
@@ -109,7 +111,9 @@ def one_noise(kind: str, dimension: int, n: int, frames: int, refits: int, seed:
     return np.array([low <= 0.5 <= high, found.estimate["diffusion"], low, high])
 
 
-def noise_table(cases: Sequence[tuple[str, int, int, int, int, int]], *, workers: int = 2, seed: int = 2) -> pd.DataFrame:
+def noise_table(
+    cases: Sequence[tuple[str, int, int, int, int, int]], *, workers: int = 2, seed: int = 2
+) -> pd.DataFrame:
     """One row a case (prior, dimension, n, frames, repeats, refits)."""
     rows = []
     for kind, dimension, n, frames, repeats, refits in cases:
@@ -179,9 +183,7 @@ def one_entropy(dimension: int, n: int, seed: Sequence[int]) -> np.ndarray:
     return np.array([gap.value, gap.error, gap.mean_shift, gap.spread, gap.shape])
 
 
-def entropy_table(
-    dimensions: Sequence[int], n: int, repeats: int, *, workers: int = 2, seed: int = 5
-) -> pd.DataFrame:
+def entropy_table(dimensions: Sequence[int], n: int, repeats: int, *, workers: int = 2, seed: int = 5) -> pd.DataFrame:
     """Estimates on clouds of n particles against the closed form for their populations."""
     rows = []
     for dimension in dimensions:
@@ -223,7 +225,9 @@ class Rate:
     slope_error: float
 
 
-def drift_rate(counts: Sequence[int], repeats: Sequence[int], *, dimension: int = 1, workers: int = 2, seed: int = 6) -> Rate:
+def drift_rate(
+    counts: Sequence[int], repeats: Sequence[int], *, dimension: int = 1, workers: int = 2, seed: int = 6
+) -> Rate:
     """Weighted least squares of log error on log n; each error's weight from the scatter of its repeats."""
     errors, spread = [], []
     for n, times in zip(counts, repeats):
@@ -233,7 +237,9 @@ def drift_rate(counts: Sequence[int], repeats: Sequence[int], *, dimension: int 
     x, y, w = np.log(counts), np.log(errors), 1.0 / np.array(spread) ** 2
     centred = x - (w @ x) / w.sum()
     information = float(w @ centred**2)
-    return Rate(np.array(counts), np.array(errors), np.array(spread), float(w @ (centred * y) / information), information**-0.5)
+    return Rate(
+        np.array(counts), np.array(errors), np.array(spread), float(w @ (centred * y) / information), information**-0.5
+    )
 
 
 def draw_rate(rates: dict[str, Rate], path: Path) -> None:

@@ -12,7 +12,16 @@ from scipy.spatial.distance import cdist
 import ensembles.assessment.scores as scores_module
 from ensembles import InputError
 from ensembles.assessment.resampling import resampled_scores, resampling_error, resampling_floor
-from ensembles.assessment.scores import SCORES, covariance_error, energy_distance, mean_error
+from ensembles.assessment.scores import (
+    SCORES,
+    covariance_error,
+    energy_distance,
+    kernel_discrepancy,
+    mean_error,
+    pooled_bandwidth,
+    wasserstein_1,
+    wasserstein_2,
+)
 
 each_score = pytest.mark.parametrize("score", SCORES.values(), ids=SCORES.keys())
 seeds = st.integers(min_value=0, max_value=2**32 - 1)
@@ -238,3 +247,72 @@ def test_nothing_changes_its_input(seed):
     resampling_error(x, y, weights=(a, b), repeats=2)
     for array, copy in zip((x, y, a, b), copies):
         assert_allclose(array, copy, rtol=0)
+
+
+@given(seed=seeds)
+def test_wasserstein_on_a_line_is_that_of_scipy_and_of_pot(seed):
+    import ot
+
+    rng = np.random.default_rng(seed)
+    x, y, a, b = rng.normal(size=20), rng.normal(1.0, 2.0, size=30), rng.uniform(size=20), rng.uniform(size=30)
+    expected = stats.wasserstein_distance(x, y, a, b)
+    assert_allclose(wasserstein_1(x, y, weights=(a, b)), expected, rtol=1e-9)
+    cost = cdist(x[:, None], y[:, None])
+    assert_allclose(wasserstein_1(x, y, weights=(a, b)), ot.emd2(a / a.sum(), b / b.sum(), cost), rtol=1e-9)
+    squared = ot.emd2(a / a.sum(), b / b.sum(), cost**2)
+    assert_allclose(wasserstein_2(x, y, weights=(a, b)), np.sqrt(squared), rtol=1e-7)
+
+
+def test_wasserstein_in_space_is_that_of_an_assignment():
+    from scipy.optimize import linear_sum_assignment
+
+    rng = np.random.default_rng(8)
+    x, y = rng.normal(size=(40, 3)), rng.normal(1.0, 2.0, size=(40, 3))
+    for score, power in ((wasserstein_1, 1), (wasserstein_2, 2)):
+        cost = cdist(x, y) ** power
+        rows, columns = linear_sum_assignment(cost)
+        assert_allclose(score(x, y), cost[rows, columns].mean() ** (1 / power), rtol=1e-9)
+
+
+def test_large_clouds_give_wasserstein_with_an_error(monkeypatch):
+    from ensembles.assessment import transport
+
+    rng = np.random.default_rng(9)
+    x, y = rng.normal(size=(400, 2)), rng.normal(size=(400, 2)) + 2.0
+    exact = wasserstein_1(x, y)
+    monkeypatch.setattr(transport, "EXACT_LIMIT", 300)
+    monkeypatch.setattr(transport, "_PART_SIZE", 150)
+    w = np.full(400, 1 / 400)
+    found = transport.wasserstein(x, y, w, w, order=1)
+    assert not found.exact
+    assert found.error > 0
+    # Subsamples of 150 lie above the whole on average, by far less than the shift of 2√2.
+    assert abs(found.value - exact) < 6 * found.error + 0.2
+    assert transport.wasserstein(x, y, w, w, order=1) == found
+
+
+@given(seed=seeds)
+def test_kernel_discrepancy_is_that_of_scikit_learns_kernel(seed):
+    from sklearn.metrics.pairwise import rbf_kernel
+
+    x, y, a, b = clouds(seed)
+    a, b, h = a / a.sum(), b / b.sum(), 1.7
+    gamma = 0.5 / h**2  # scikit-learn's rbf_kernel is exp(-γ|x - y|²)
+    kxx, kyy, kxy = rbf_kernel(x, gamma=gamma), rbf_kernel(y, gamma=gamma), rbf_kernel(x, y, gamma=gamma)
+    expected = a @ kxx @ a + b @ kyy @ b - 2 * a @ kxy @ b
+    assert_allclose(kernel_discrepancy(x, y, weights=(a, b), bandwidth=h), expected, rtol=1e-8, atol=1e-14)
+    for kernel in (kxx, kyy):
+        np.fill_diagonal(kernel, 0.0)
+    unbiased = a @ kxx @ a / (1 - a @ a) + b @ kyy @ b / (1 - b @ b) - 2 * a @ kxy @ b
+    found = kernel_discrepancy(x, y, weights=(a, b), bandwidth=h, unbiased=True)
+    assert_allclose(found, unbiased, rtol=1e-8, atol=1e-14)
+
+
+def test_the_bandwidth_is_the_root_mean_square_spread():
+    x, y, a, b = clouds(10)
+    traces = [np.trace(np.cov(c, rowvar=False, aweights=w, ddof=0)) for c, w in ((x, a), (y, b))]
+    assert_allclose(pooled_bandwidth(x, y, weights=(a, b)), np.sqrt(np.mean(traces)))
+    with pytest.raises(InputError, match=r"needs a bandwidth; each cloud is a single place"):
+        kernel_discrepancy([0.0, 0.0], [1.0])
+    with pytest.raises(InputError, match=r"bandwidth must be positive and finite; it is -1"):
+        kernel_discrepancy([0.0, 2.0], [1.0], bandwidth=-1)

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from .pairwise import Comparison, multinomial_weights
+from .pairwise import Comparison
 
 __all__ = ["replicate_floor", "snapshot_floor"]
 

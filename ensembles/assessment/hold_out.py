@@ -105,7 +105,9 @@ class HoldOut:
         import pandas
 
         columns = ("time", "prediction", "score", "value", "standard_error", "lead", "lead_error")
-        return pandas.DataFrame([{name: getattr(row, name) for name in columns} for row in self.scores], columns=columns)
+        return pandas.DataFrame(
+            [{name: getattr(row, name) for name in columns} for row in self.scores], columns=columns
+        )
 
     def __repr__(self) -> str:
         return "\n".join(self.verdict)
@@ -201,9 +203,7 @@ def require_interior(series: SnapshotSeries, what: str) -> None:
 class _Judge:
     """Scores all predictions of one snapshot against the same resamples of it."""
 
-    def __init__(
-        self, series: SnapshotSeries, k: int, draws: int, repeats: int, rng: np.random.Generator
-    ) -> None:
+    def __init__(self, series: SnapshotSeries, k: int, draws: int, repeats: int, rng: np.random.Generator) -> None:
         self.series, self.k, self.draws, self.repeats = series, k, draws, repeats
         # One stream a purpose: another score or prediction does not change the rest.
         self.cut, resampling, self.floor_rng, self.predicting, self.transport = rng.spawn(5)
@@ -274,7 +274,9 @@ class _Judge:
                 if made.log_density is not None:
                     logs = made.log_density(self.observed)
                     values[name] = np.vstack([self.weights, self.resampled]) @ logs
-            elif not name.startswith("wasserstein") and not (alone and name in ("energy_distance", "kernel_discrepancy")):
+            elif not name.startswith("wasserstein") and not (
+                alone and name in ("energy_distance", "kernel_discrepancy")
+            ):
                 values[name] = getattr(comparison, name)()
         return values
 
@@ -298,7 +300,9 @@ class _Judge:
         found = {}
         if replicates is not None:
             groups = np.asarray(self.series.features[replicates][self.k]).astype(str)
-            found = replicate_floor(self.series.clouds[self.k], self.series.weights[self.k], groups, names, self.bandwidth)
+            found = replicate_floor(
+                self.series.clouds[self.k], self.series.weights[self.k], groups, names, self.bandwidth
+            )
         if not found:
             found = snapshot_floor(
                 self.observed, self.weights, names, size=size, bandwidth=self.bandwidth,

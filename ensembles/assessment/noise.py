@@ -8,14 +8,13 @@ from itertools import product
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from scipy import stats
 
 from .. import checks
 from ..priors.base import LinearGaussianPrior, require_prior
 from .hold_out import require_interior
 from .pairwise import Comparison, multinomial_weights
 from .parameters import level_grid
-from .profile import Cell, Profile, climb, refined_maximum
+from .profile import Cell, Profile, climb, quadratic_around
 from .resampled_weights import bootstrap_weights, run_repeats
 
 if TYPE_CHECKING:
@@ -84,7 +83,14 @@ class NoiseProfile:
         """One row a cell: the parameters by name, the scores with their errors, and which cell was chosen."""
         import pandas
 
-        scores = ("log_score", "log_score_error", "deficit", "deficit_error", "energy_distance", "energy_distance_error")
+        scores = (
+            "log_score",
+            "log_score_error",
+            "deficit",
+            "deficit_error",
+            "energy_distance",
+            "energy_distance_error",
+        )
         rows = []
         for level in self.levels:
             chosen = {
@@ -117,11 +123,10 @@ def choose_noise(
     """Profile the held-out log score and energy distance over one or two parameters of the prior.
 
     Each interior snapshot is left out and its particles are scored by log ρ of the bridge between its neighbours. The
-    best cell has the largest mean log score. The interval comes from a weighted bootstrap: all snapshots get random
-    weights, the bridges are fitted again, and the maximum is found again; with q the maxima in log (positive parameters)
-    the limits are centre ± t s, where s is the standard deviation of q and the centre is the estimate minus the bias that
-    the resamples show. Finite clouds blur: where particles are further apart than the prior's spread between the
-    snapshots, the log score asks for more noise than there was.
+    best cell has the largest mean log score. The interval holds all values whose score lies less than c below the
+    maximum, where c is such that 90 % of bootstrap resamples of all snapshots, with the bridges fitted again, lose less
+    than c at the estimate against their own maximum. Finite clouds blur: where particles are further apart than the
+    prior's spread between the snapshots, the log score asks for more noise than there was.
 
     Parameters
     ----------
@@ -161,10 +166,17 @@ def choose_noise(
     energies = _energy_distances(profile, cells, repeats, energy)
     rows = tuple(_levels(grid, cells, cells.index(best), log_scores, energies))
     axes = [_coordinate(name, values) for name, values in grid.items()]
-    estimate = refined_maximum(profile.score, best, axes)
+    around = quadratic_around(profile.score, best, axes)
+    estimate = around.maximum()
+
+    def refit(stream: np.random.Generator) -> np.ndarray:
+        return _refitted(profile, best, axes, estimate, stream)
+
     # Every bridge exists by now, so threads only read them.
-    maxima = np.array(run_repeats(lambda stream: _refitted(profile, best, axes, stream), repeats, refitting, workers))
-    interval = _interval(grid, estimate, maxima, min(map(len, series.clouds)))
+    refitted = np.array(run_repeats(refit, repeats, refitting, workers))
+    maxima, losses = refitted[:, :-1], refitted[:, -1]
+    scores = np.array([profile.score(cell) for cell in cells]).reshape(profile.shape)
+    interval = _interval(grid, estimate, around.at(estimate), scores, float(np.quantile(losses, _CHANCE)))
     names = tuple(grid)
     return NoiseProfile(
         names,
@@ -174,7 +186,7 @@ def choose_noise(
         {name: _back(name, grid[name], value) for name, value in zip(names, estimate)},
         interval,
         np.array([[_back(n, grid[n], v) for n, v in zip(names, row)] for row in maxima]),
-        tuple(_warnings(grid, rows, maxima, axes, series)),
+        tuple(_warnings(grid, rows, maxima, axes, interval, series)),
     )
 
 
@@ -245,23 +257,46 @@ def _smallest(rows: Sequence[NoiseLevel], name: str) -> NoiseLevel:
     return min(within, key=lambda row: (row.values[name], row.deficit))
 
 
-def _refitted(profile: Profile, best: Cell, axes: list[np.ndarray], rng: np.random.Generator) -> np.ndarray:
+def _refitted(
+    profile: Profile, best: Cell, axes: list[np.ndarray], estimate: np.ndarray, rng: np.random.Generator
+) -> np.ndarray:
+    """The maximum of a resample, and how much lower its score is at the estimate."""
     again = profile.reweighted(bootstrap_weights(profile.series, rng), _BOOTSTRAP_TOLERANCE)
-    return refined_maximum(again.score, climb(again.score, best, again.shape), axes)
+    top = quadratic_around(again.score, climb(again.score, best, again.shape), axes)
+    maximum = top.maximum()
+    loss = top.at(maximum) - quadratic_around(again.score, best, axes).at(estimate)
+    return np.append(maximum, max(loss, 0.0))
 
 
 def _interval(
-    grid: dict[str, np.ndarray], estimate: np.ndarray, maxima: np.ndarray, particles: int
+    grid: dict[str, np.ndarray], estimate: np.ndarray, top: float, scores: np.ndarray, loss: float
 ) -> dict[str, tuple[float, float]]:
+    """Per parameter the values whose score, the best over the other parameter, lies less than `loss` below the top."""
     found = {}
-    width = stats.t.ppf(0.5 * (1.0 + _CHANCE), max(particles - 1, 2))
-    for (name, values), middle, column in zip(grid.items(), estimate, maxima.T):
-        centre = 2.0 * middle - column.mean()
-        reach = width * column.std(ddof=1)
-        low, high = _coordinate(name, values)[[0, -1]]
-        limits = np.clip([centre - reach, centre + reach], low, high)
+    for position, (name, values) in enumerate(grid.items()):
+        others = tuple(axis for axis in range(len(grid)) if axis != position)
+        axis = _coordinate(name, values)
+        profile = np.sqrt(np.maximum(top - scores.max(axis=others), 0.0))
+        limits = []
+        for side in (-1.0, 1.0):
+            beyond = side * (axis - estimate[position]) > 0
+            # The root of the loss is straight for a quadratic profile, so it is interpolated along lines.
+            z = np.concatenate([[0.0], np.sort(np.abs(axis[beyond] - estimate[position]))])
+            order = np.argsort(np.abs(axis[beyond] - estimate[position]))
+            height = np.maximum.accumulate(np.concatenate([[0.0], profile[beyond][order]]))
+            limits.append(estimate[position] + side * _crossing(z, height, np.sqrt(loss)))
         found[name] = (_back(name, values, limits[0]), _back(name, values, limits[1]))
     return found
+
+
+def _crossing(z: np.ndarray, height: np.ndarray, wanted: float) -> float:
+    """Where a non-decreasing broken line first reaches `wanted`; its end if it never does."""
+    above = np.flatnonzero(height >= wanted)
+    if not above.size or above[0] == 0:
+        return float(z[-1] if not above.size else z[0])
+    i = int(above[0])
+    share = (wanted - height[i - 1]) / (height[i] - height[i - 1])
+    return float(z[i - 1] + share * (z[i] - z[i - 1]))
 
 
 def _warnings(
@@ -269,6 +304,7 @@ def _warnings(
     rows: Sequence[NoiseLevel],
     maxima: np.ndarray,
     axes: list[np.ndarray],
+    interval: dict[str, tuple[float, float]],
     series: SnapshotSeries,
 ) -> list[str]:
     found = []
@@ -280,6 +316,12 @@ def _warnings(
                     f"the data do not bound {name} from {side}: {100 * share:.0f} % of the resamples have their best "
                     f"value at the edge {grid[name][end]:g} of the levels; take wider levels, or measure {name} another way"
                 )
+        inside = [float(v) for v in grid[name] if interval[name][0] <= v <= interval[name][1]]
+        if len(inside) < 2 and low <= 0.05 and high <= 0.05:
+            found.append(
+                f"the levels of {name} are too coarse for its interval, {interval[name][0]:.3g} to {interval[name][1]:.3g}, "
+                "which was interpolated between them; profile again with levels around it"
+            )
     if all(row.deficit <= 2.0 * row.deficit_error for row in rows if row.deficit > 0):
         found.append(
             "flat profile: no level is worse than the best by more than two standard errors; these snapshots do not tell "

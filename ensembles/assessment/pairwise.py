@@ -22,11 +22,17 @@ MATRIX_LIMIT = 4000
 
 
 def multinomial_weights(weights: np.ndarray, repeats: int, rng: np.random.Generator) -> np.ndarray:
-    """(repeats, n) weights of bootstrap resamples: n particles drawn with replacement, each keeping its weight."""
+    """(repeats, n) weights of bootstrap resamples: n particles drawn with replacement, each keeping its weight.
+
+    A resample that holds one particle only, n times, has no pairs and is drawn again.
+    """
     n = weights.size
     present = np.flatnonzero(weights > 0)
     counts = np.zeros((repeats, n))
-    counts[:, present] = rng.multinomial(present.size, np.full(present.size, 1.0 / present.size), size=repeats)
+    drawn = rng.multinomial(present.size, np.full(present.size, 1.0 / present.size), size=repeats)
+    while present.size > 1 and (alone := drawn.max(axis=1) == present.size).any():
+        drawn[alone] = rng.multinomial(present.size, np.full(present.size, 1.0 / present.size), size=int(alone.sum()))
+    counts[:, present] = drawn
     weighted = counts * weights
     return weighted / weighted.sum(axis=1, keepdims=True)
 
@@ -76,7 +82,9 @@ class Comparison:
 
     def covariance_error(self) -> np.ndarray:
         """Frobenius norm of the difference between the covariances, in length²."""
-        return np.linalg.norm(_covariances(self.x, self._all_weights[0]) - _covariances(self.y, self._all_weights[1]), axis=(1, 2))
+        return np.linalg.norm(
+            _covariances(self.x, self._all_weights[0]) - _covariances(self.y, self._all_weights[1]), axis=(1, 2)
+        )
 
     def wasserstein(self, order: int, size: int, rng: np.random.Generator) -> tuple[float, float]:
         """W_p and its standard error, between `size` of the predicted points and the observed cloud.

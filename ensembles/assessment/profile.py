@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import replace
+from dataclasses import dataclass, replace
+from itertools import product
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -16,7 +17,7 @@ if TYPE_CHECKING:
     from ..priors.base import LinearGaussianPrior
     from ..snapshots.series import SnapshotSeries
 
-__all__ = ["Profile", "climb", "refined_maximum"]
+__all__ = ["Cell", "Profile", "Quadratic", "climb", "quadratic_around"]
 
 Cell = tuple[int, ...]
 
@@ -78,9 +79,7 @@ class Profile:
 
     def reweighted(self, weights: tuple[np.ndarray, ...], tolerance: float) -> Profile:
         """The same with other weights of all particles, started from the bridges of this one."""
-        return Profile(
-            replace(self.series, weights=weights), self.prior, self.grid, tolerance=tolerance, warm=self
-        )
+        return Profile(replace(self.series, weights=weights), self.prior, self.grid, tolerance=tolerance, warm=self)
 
 
 def climb(score: Callable[[Cell], float], start: Cell, shape: Cell) -> Cell:
@@ -95,45 +94,63 @@ def climb(score: Callable[[Cell], float], start: Cell, shape: Cell) -> Cell:
 
 
 def _neighbours(cell: Cell, shape: Cell) -> list[Cell]:
-    steps = np.array(np.meshgrid(*[(-1, 0, 1)] * len(shape), indexing="ij")).reshape(len(shape), -1).T
-    cells = [tuple(int(i) for i in np.add(cell, step)) for step in steps if np.any(step)]
+    steps = product((-1, 0, 1), repeat=len(shape))
+    cells = [tuple(i + move for i, move in zip(cell, step)) for step in steps if any(step)]
     return [c for c in cells if all(0 <= i < n for i, n in zip(c, shape))]
 
 
-def refined_maximum(score: Callable[[Cell], float], best: Cell, axes: list[np.ndarray]) -> np.ndarray:
-    """Maximum of the quadratic through the scores of the cells around the best one, in the coordinates `axes`.
+@dataclass(frozen=True, eq=False)
+class Quadratic:
+    """constant + slope·z + ½ zᵀ H z around a cell, z along those axes on whose edge the cell does not lie.
 
-    Along an axis on whose edge the best cell lies there is nothing to interpolate: it keeps its own value. The result
-    stays within one level of the best cell.
+    Attributes
+    ----------
+    origin : (p,) coordinates of the cell.
+    inner : numbers of the axes that z stands for.
+    reach : (inner, 2) lower and upper limits of z, one level to each side.
     """
-    point = np.array([axis[i] for axis, i in zip(axes, best)])
-    inner = [k for k, axis in enumerate(axes) if 0 < best[k] < axis.size - 1]
-    if not inner:
+
+    origin: np.ndarray
+    inner: tuple[int, ...]
+    reach: np.ndarray
+    constant: float
+    slope: np.ndarray
+    hessian: np.ndarray
+
+    def at(self, point: np.ndarray) -> float:
+        """Value at a point in the coordinates of the axes."""
+        z = (point - self.origin)[list(self.inner)]
+        return float(self.constant + self.slope @ z + 0.5 * z @ self.hessian @ z)
+
+    def maximum(self) -> np.ndarray:
+        """The maximum within one level of the cell; the cell itself where the quadratic has none."""
+        point = self.origin.copy()
+        if self.inner and np.linalg.eigvalsh(self.hessian)[-1] < 0.0:
+            move = np.linalg.solve(self.hessian, -self.slope)
+            point[list(self.inner)] += np.clip(move, self.reach[:, 0], self.reach[:, 1])
         return point
-    steps = np.array(np.meshgrid(*[(-1, 0, 1)] * len(inner), indexing="ij")).reshape(len(inner), -1).T
-    rows, values = [], []
-    for step in steps:
-        cell = list(best)
-        for k, move in zip(inner, step):
-            cell[k] += int(move)
-        z = np.array([axes[k][cell[k]] - point[k] for k in inner])
-        rows.append(np.concatenate([[1.0], z, [z[i] * z[j] for i in range(len(z)) for j in range(i, len(z))]]))
-        values.append(score(tuple(cell)))
-    finite = np.isfinite(values)
-    if not finite.all():
-        return point
-    found = np.linalg.lstsq(np.array(rows), np.array(values), rcond=None)[0]
+
+
+def quadratic_around(score: Callable[[Cell], float], cell: Cell, axes: list[np.ndarray]) -> Quadratic:
+    """Least squares through the scores of a cell and all its neighbours (exact with one parameter)."""
+    origin = np.array([axis[i] for axis, i in zip(axes, cell)])
+    inner = tuple(k for k, axis in enumerate(axes) if 0 < cell[k] < axis.size - 1)
     size = len(inner)
-    slope, hessian, at = found[1 : size + 1], np.zeros((size, size)), size + 1
-    for i in range(size):
-        for j in range(i, size):
-            hessian[i, j] += found[at]
-            hessian[j, i] += found[at]
-            at += 1
-    if np.linalg.eigvalsh(hessian)[-1] >= 0.0:
-        return point
-    move = np.linalg.solve(hessian, -slope)
-    for position, k in enumerate(inner):
-        low, high = axes[k][best[k] - 1] - point[k], axes[k][best[k] + 1] - point[k]
-        point[k] += float(np.clip(move[position], low, high))
-    return point
+    reach = np.array([[axes[k][cell[k] + side] - origin[k] for side in (-1, 1)] for k in inner]).reshape(size, 2)
+    if not inner:
+        return Quadratic(origin, inner, reach, score(cell), np.zeros(0), np.zeros((0, 0)))
+    pairs = [(i, j) for i in range(size) for j in range(i, size)]
+    rows, values = [], []
+    for step in product((-1, 0, 1), repeat=size):
+        moved = list(cell)
+        for k, move in zip(inner, step):
+            moved[k] += move
+        z = np.array([axes[k][moved[k]] - origin[k] for k in inner])
+        rows.append(np.concatenate([[1.0], z, [z[i] * z[j] for i, j in pairs]]))
+        values.append(score(tuple(moved)))
+    found = np.linalg.lstsq(np.array(rows), np.array(values), rcond=None)[0]
+    hessian = np.zeros((size, size))
+    for (i, j), value in zip(pairs, found[size + 1 :]):
+        hessian[i, j] += value
+        hessian[j, i] += value
+    return Quadratic(origin, inner, reach, float(found[0]), found[1 : size + 1], hessian)

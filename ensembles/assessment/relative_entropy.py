@@ -233,6 +233,4 @@ def gaussian_relative_entropy(bridge: GaussianBridge, particles: int) -> GapEntr
     end = inverse @ bridge.cov_end @ inverse.T
     shift = inverse @ (bridge.mean_end - transition.mean(bridge.mean_start[None])[0])
     mean_shift, spread = float(0.5 * shift @ shift), _spread(start, end)
-    return GapEntropy(
-        0.0, bridge.duration, mean_shift + spread, 0.0, mean_shift, 0.0, spread, 0.0, 0.0, 0.0, particles
-    )
+    return GapEntropy(0.0, bridge.duration, mean_shift + spread, 0.0, mean_shift, 0.0, spread, 0.0, 0.0, 0.0, particles)

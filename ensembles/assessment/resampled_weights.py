@@ -51,9 +51,14 @@ def run_repeats(
 
     The generators are spawned before anything runs, so the results do not depend on the number of workers.
     """
-    streams = rng.spawn(repeats)
-    if checks.whole_number(workers, "workers") == 1:
-        return [task(stream) for stream in streams]
-    from joblib import Parallel, delayed
+    from threadpoolctl import threadpool_limits
 
-    return list(Parallel(n_jobs=workers, prefer="threads")(delayed(task)(stream) for stream in streams))
+    workers = checks.whole_number(workers, "workers")
+    streams = rng.spawn(repeats)
+    # The solves of a repeat are small: threads inside each would only wait for one another.
+    with threadpool_limits(1, "blas"):
+        if workers == 1:
+            return [task(stream) for stream in streams]
+        from joblib import Parallel, delayed
+
+        return list(Parallel(n_jobs=workers, prefer="threads")(delayed(task)(stream) for stream in streams))

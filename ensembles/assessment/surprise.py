@@ -52,6 +52,18 @@ class GapSurprise:
     observed: np.ndarray
     predicted: np.ndarray
 
+    @property
+    def excess(self) -> float:
+        """Relative entropy beyond the mean of the simulations, in nats per particle: what is not the noise of finite clouds."""
+        return self.entropy.value - float(self.simulated_entropy.mean()) if self.entropy is not None else float("nan")
+
+    @property
+    def log10_probability(self) -> float:
+        """-N excess / log 10, at most 0: the large-deviation probability that the prior gives such an end cloud."""
+        if self.entropy is None:
+            return float("nan")
+        return float(min(0.0, -self.entropy.particles * self.excess / np.log(10.0)))
+
 
 @dataclass(frozen=True, eq=False)
 class PriorCheck:
@@ -85,10 +97,10 @@ class PriorCheck:
                 "entropy_p_value": gap.entropy_p_value,
             }
             for name in ("value", "error", "mean_shift", "mean_shift_error", "spread", "spread_error", "shape",
-                         "shape_error", "particles", "log10_probability", "log10_probability_error"):  # fmt: skip
+                         "shape_error", "particles", "log10_probability_error"):  # fmt: skip
                 key = {"value": "relative_entropy", "error": "relative_entropy_error"}.get(name, name)
                 row[key] = getattr(gap.entropy, name) if gap.entropy is not None else float("nan")
-            rows.append(row)
+            rows.append({**row, "excess": gap.excess, "log10_probability": gap.log10_probability})
         return pandas.DataFrame(rows)
 
     def __repr__(self) -> str:
@@ -253,9 +265,11 @@ def _sentence(gap: GapSurprise) -> str:
     text = f"{gap.start:g} to {gap.end:g}: {judged} (p = {chance:.3g} by energy distance"
     if gap.entropy is None:
         return text + ")."
+    entropy = gap.entropy
     return (
-        f"{text}, {gap.entropy_p_value:.3g} by relative entropy); {gap.entropy.value:.3f} ± {gap.entropy.error:.3f} nats "
-        f"per particle, of which mean shift {gap.entropy.mean_shift:.3f}, spread {gap.entropy.spread:.3f}, shape "
-        f"{gap.entropy.shape:.3f}; for {gap.entropy.particles} particles a probability of about "
-        f"10^({gap.entropy.log10_probability:.3g} ± {gap.entropy.log10_probability_error:.2g})."
+        f"{text}, {gap.entropy_p_value:.3g} by relative entropy); {entropy.value:.3g} ± {entropy.error:.2g} nats per "
+        f"particle, of which mean shift {entropy.mean_shift:.3g}, spread {entropy.spread:.3g}, shape {entropy.shape:.3g}; "
+        f"clouds of the prior itself give {gap.simulated_entropy.mean():.3g} ± {gap.simulated_entropy.std(ddof=1):.2g}, and "
+        f"what exceeds that has for {entropy.particles} particles a probability of about "
+        f"10^({gap.log10_probability:.3g} ± {entropy.log10_probability_error:.2g})."
     )

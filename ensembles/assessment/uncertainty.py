@@ -53,7 +53,8 @@ class Bands:
 
         columns = ("estimate", "standard_error", "bias", "lower", "upper")
         rows = [
-            {**label, **{name: float(getattr(self, name)[i]) for name in columns}} for i, label in enumerate(self.labels)
+            {**label, **{name: float(getattr(self, name)[i]) for name in columns}}
+            for i, label in enumerate(self.labels)
         ]
         return pandas.DataFrame(rows)
 
@@ -125,7 +126,9 @@ def bootstrap(
     """
     chosen = list(quantities) if isinstance(quantities, (list, tuple)) else [quantities]
     if isinstance(repeats, (int, np.integer)) and not isinstance(repeats, bool) and repeats == 1:
-        raise checks.InputError("a bootstrap of one says nothing; repeats is 1; use at least 2, and 100 for an interval")
+        raise checks.InputError(
+            "a bootstrap of one says nothing; repeats is 1; use at least 2, and 100 for an interval"
+        )
     repeats = checks.whole_number(repeats, "repeats", 2)
     if not 0.0 < float(chance) < 1.0:
         raise checks.InputError(f"chance must lie between 0 and 1; it is {chance!r}; use 0.9 for a 90 % interval")
@@ -160,7 +163,9 @@ def bootstrap(
     )
 
 
-def influence(bridge: Bridge, quantity: Quantity, *, number: int = 0, snapshots: Sequence[int] | None = None) -> Influence:
+def influence(
+    bridge: Bridge, quantity: Quantity, *, number: int = 0, snapshots: Sequence[int] | None = None
+) -> Influence:
     """How much one number of a quantity changes when each particle is left out, one after another, and the bridge refitted.
 
     Parameters
@@ -250,5 +255,7 @@ def _warnings(counts: Sequence[int], repeats: int, what: str) -> list[str]:
             "too short"
         )
     if repeats < 50:
-        found.append(f"{repeats} repeats: the error bars themselves are uncertain by {100 / np.sqrt(2 * repeats):.0f} %")
+        found.append(
+            f"{repeats} repeats: the error bars themselves are uncertain by {100 / np.sqrt(2 * repeats):.0f} %"
+        )
     return found

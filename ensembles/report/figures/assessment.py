@@ -1,0 +1,56 @@
+"""Save the pictures of an assessment: held-out snapshots, noise profile, prior check."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.figure import Figure
+
+from ...writing import atomic_path
+from .holdout import draw_hold_out
+from .noise import draw_noise
+from .prior_check import draw_prior_check
+from .style import polish
+
+if TYPE_CHECKING:
+    from ...assessment.hold_out import HoldOut
+    from ...assessment.noise import NoiseProfile
+    from ...assessment.surprise import PriorCheck
+
+__all__ = ["save_assessment_figures"]
+
+
+def save_assessment_figures(
+    folder: str | Path,
+    *,
+    hold_out: HoldOut | None = None,
+    noise: NoiseProfile | None = None,
+    prior_check: PriorCheck | None = None,
+    dpi: int = 200,
+) -> list[tuple[str, str]]:
+    """Draw what is given into `folder` as holdout.png, noise.png and prior_check.png.
+
+    Returns
+    -------
+    list of (file name, caption).
+    """
+    wanted: list[tuple[str, Callable[..., str], Any]] = [
+        ("holdout.png", draw_hold_out, hold_out),
+        ("noise.png", draw_noise, noise),
+        ("prior_check.png", draw_prior_check, prior_check),
+    ]
+    saved = []
+    for name, draw, result in wanted:
+        if result is None:
+            continue
+        figure = Figure(layout="constrained", facecolor="white")
+        FigureCanvasAgg(figure)
+        caption = draw(figure, result)
+        polish(figure)
+        with atomic_path(Path(folder) / name) as temporary:
+            figure.savefig(temporary, dpi=dpi)
+        saved.append((name, caption))
+    return saved

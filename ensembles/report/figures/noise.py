@@ -1,0 +1,83 @@
+"""The profile of held-out scores over noise levels: a curve for one parameter, contours for two."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+from matplotlib.figure import Figure
+
+from .style import ACCENT, DENSITY, GREY, INK, SECOND, WIDTH, plain
+
+if TYPE_CHECKING:
+    from ...assessment.noise import NoiseProfile
+
+__all__ = ["draw_noise"]
+
+
+def draw_noise(figure: Figure, result: NoiseProfile) -> str:
+    """Draw the profile; the caption says what is seen."""
+    return _draw_curve(figure, result) if len(result.names) == 1 else _draw_contours(figure, result)
+
+
+def _draw_curve(figure: Figure, result: NoiseProfile) -> str:
+    (name,) = result.names
+    figure.set_size_inches(WIDTH, 2.9)
+    left, right = figure.subplots(1, 2)
+    x = np.array([level.values[name] for level in result.levels])
+    scores = np.array([level.log_score for level in result.levels])
+    deficits = np.array([level.deficit_error for level in result.levels])
+    left.errorbar(x, scores, deficits, fmt="o-", ms=4, lw=1.2, color=ACCENT, capsize=2)
+    left.set_ylabel("held-out log density\n(nats per particle)")
+    span = np.sort(scores)[-max(2, len(scores) * 2 // 3) :]
+    left.set_ylim(span[0] - 0.15 * np.ptp(span), span[-1] + 0.15 * np.ptp(span))
+    energy = np.array([level.energy_distance for level in result.levels])
+    right.errorbar(x, energy, [level.energy_distance_error for level in result.levels], fmt="s-", ms=4, lw=1.2,
+                   color=SECOND, capsize=2)  # fmt: skip
+    right.set_ylabel("energy distance to\nthe left-out snapshots")
+    for ax in (left, right):
+        ax.axvspan(*result.interval[name], color=GREY, alpha=0.25, lw=0)
+        ax.axvline(result.estimate[name], color=GREY, lw=0.8)
+        if (x > 0).all():
+            ax.set_xscale("log")
+        ax.set_xlabel(plain(name))
+    cut = "" if span[0] == scores.min() else " The lowest scores lie below the axis."
+    return (
+        f"Held-out scores against {name}. Left: mean log-density of the left-out particles; bars: standard error of the "
+        "difference from the best. Right: energy distance with its standard error. Line and grey band: maximum of the "
+        f"log score and its 90 % interval.{cut}"
+    )
+
+
+def _draw_contours(figure: Figure, result: NoiseProfile) -> str:
+    first, second = result.names
+    figure.set_size_inches(0.72 * WIDTH, 3.6)
+    ax = figure.subplots()
+    x, y = (np.unique([level.values[name] for level in result.levels]) for name in result.names)
+    deficit = np.array([level.deficit for level in result.levels]).reshape(x.size, y.size).T
+    error = np.array([level.deficit_error for level in result.levels]).reshape(x.size, y.size).T
+    # The colours are spent on the levels that compete; far ones are all dark.
+    top = float(np.quantile(deficit[deficit > 0], 0.4)) if (deficit > 0).any() else 1.0
+    filled = ax.contourf(x, y, deficit, levels=np.linspace(0.0, top, 9), cmap=DENSITY, extend="max")
+    with np.errstate(divide="ignore", invalid="ignore"):
+        clear = np.where(error > 0, deficit / error, 0.0)
+    if clear.max() > 1.0:
+        lines = ax.contour(
+            x, y, clear, levels=[v for v in (1.0, 2.0) if v < clear.max()], colors=SECOND, linewidths=1.2
+        )
+        ax.clabel(lines, fmt=lambda v: f"{v:g} s.e.", fontsize=7)
+    ax.plot(result.resampled[:, 0], result.resampled[:, 1], ".", ms=3, color=INK, alpha=0.6, zorder=3, clip_on=False)
+    ax.plot(
+        result.best[first], result.best[second], "*", ms=11, color=SECOND, mec=INK, mew=0.6, zorder=4, clip_on=False
+    )
+    for axis, values in ((ax.set_xscale, x), (ax.set_yscale, y)):
+        if (values > 0).all():
+            axis("log")
+    ax.set_xlabel(plain(first))
+    ax.set_ylabel(plain(second))
+    bar = figure.colorbar(filled, ax=ax)
+    bar.set_label("below the best\n(nats per particle)")
+    return (
+        f"Held-out log score over {first} and {second}. Colour: how far it lies below the best; lines: where that is one "
+        "and two standard errors; star: the best level; dots: the best of bootstrap resamples."
+    )
