@@ -173,7 +173,8 @@ def test_a_new_cache_is_announced_once(tmp_path):
 
 def test_interruption_returns_control_and_leaves_no_thread():
     program = (
-        "import threading, numpy as np, ensembles\n"
+        "import signal, threading, numpy as np, ensembles\n"
+        "signal.signal(signal.SIGINT, signal.default_int_handler)\n"  # a shell in the background passes it on ignored
         "rng = np.random.default_rng(0)\n"
         "series = ensembles.SnapshotSeries.from_arrays([0, 1], [rng.normal(size=(6000, 2)), rng.normal(size=(6000, 2)) + 3])\n"
         "options = ensembles.SolverOptions(memory=1000, observe=lambda gap, state: print('sweep', flush=True))\n"

@@ -10,6 +10,7 @@ import numpy as np
 from .. import checks
 from ..kernels.dense import DenseKernel
 from ..kernels.streamed import StreamedKernel
+from ..kernels.truncated import TruncatedKernel
 
 if TYPE_CHECKING:
     import pandas
@@ -26,7 +27,7 @@ class Coupling:
     These are inferences under the prior, not observed links.
     """
 
-    kernel: StreamedKernel
+    kernel: StreamedKernel | TruncatedKernel
     log_p: np.ndarray
     log_q: np.ndarray
     source: int

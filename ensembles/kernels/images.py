@@ -82,7 +82,6 @@ def log_box_kernel(walls: tuple[AxisWalls, ...], u: np.ndarray, v: np.ndarray) -
     return total
 
 
-
 def box_kernel(walls: tuple[AxisWalls, ...], sources: np.ndarray, targets: np.ndarray) -> DenseKernel:
     """The kernel in a box between clouds u (n, d) and v (m, d), held as logarithms: 8 n m bytes."""
     log_kernel = np.empty((sources.shape[0], targets.shape[0]))

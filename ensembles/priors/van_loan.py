@@ -31,7 +31,7 @@ def linear_transition(
     if not np.any(matrix - np.diag(np.diag(matrix))):
         return _diagonal(np.diag(matrix), constant, noise, duration)
     dimension = constant.size
-    doublings = max(0, int(np.ceil(np.log2(max(np.linalg.norm(matrix, 2) * duration, 1e-300) / 0.5))))
+    doublings = max(0, int(np.ceil(np.log2(max(float(np.linalg.norm(matrix, 2)) * duration, 1e-300) / 0.5))))
     step = duration / 2.0**doublings
     scale = np.abs(noise).max()
     block = np.zeros((2 * dimension, 2 * dimension))

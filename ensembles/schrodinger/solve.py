@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import replace
+from dataclasses import fields, replace
 
 import numpy as np
 
@@ -148,13 +148,13 @@ def _unreached(kernel: Kernel, weights: tuple[np.ndarray, np.ndarray]) -> np.nda
 
 def _refused(kernel: Kernel, tolerance: float, unreached: tuple[int, ...]) -> Solution:
     nothing = float("nan")
-    certificate_values = [nothing] * 8
+    values = dict.fromkeys((field.name for field in fields(Certificate)), nothing)
     return Solution(
         np.full(kernel.shape[0], nothing),
         np.full(kernel.shape[1], nothing),
         0,
         Outcome.UNREACHABLE,
-        Certificate(*certificate_values, tolerance=tolerance),
+        Certificate(**(values | {"tolerance": tolerance})),
         np.empty((0, 4)),
         unreached,
     )
