@@ -86,7 +86,7 @@ def myoblasts(components: int) -> ensembles.SnapshotSeries:
 def myoblast_levels(series: ensembles.SnapshotSeries) -> np.ndarray:
     """Levels around the diffusion at which the prior's spread is the spread of the cells, per day and axis."""
     variance = np.mean([cloud.var(axis=0).mean() for cloud in series.clouds])
-    return float(f"{variance / (2 * 24):.2g}") * 2.0 ** np.arange(-7.0, 2.0)
+    return float(f"{variance / (2 * 24):.2g}") * 2.0 ** np.arange(-5.0, 1.5, 0.5)
 
 
 def myoblast_study(components: int, repeats: int) -> tuple[NoiseProfile, HoldOut]:

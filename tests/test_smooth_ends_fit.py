@@ -296,3 +296,17 @@ def test_the_tilted_family_holds_gaussian_mixtures():
     start = np.log((w * norm.pdf(points, mu, np.sqrt(s + 1.0))).sum(axis=1))
     assert_allclose(ends + 0.5 * points[:, 0] ** 2, end, atol=1e-12)
     assert_allclose(starts - 0.5 * points[:, 0] ** 2 - 0.5 * np.log(2 * np.pi), start, atol=1e-12)
+
+
+@pytest.mark.parametrize("ends", ["mixture", "kernel"])
+def test_particles_without_weight_do_not_count(ends):
+    rng = np.random.default_rng(10)
+    clouds = [rng.standard_normal((50, 2)), rng.standard_normal((50, 2)) + 2]
+    prior = ensembles.Brownian(diffusion=0.3)
+    plain = ensembles.fit_bridge(ensembles.SnapshotSeries.from_arrays([0, 1], clouds), prior, ends=ends, components=2)
+    padded = [np.concatenate([cloud, [[50.0, -50.0]] * 70]) for cloud in clouds]
+    weights = [np.concatenate([np.ones(50), np.zeros(70)])] * 2
+    series = ensembles.SnapshotSeries.from_arrays([0, 1], padded, weights)
+    bridge = ensembles.fit_bridge(series, prior, ends=ends, components=2)
+    points = rng.standard_normal((5, 2))
+    assert_allclose(bridge.log_density(0.5, points), plain.log_density(0.5, points), rtol=1e-10)

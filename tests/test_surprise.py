@@ -157,3 +157,38 @@ def test_bad_input_is_refused():
         ensembles.relative_entropy(3)
     with pytest.raises(InputError, match=r"particles must be a whole number of at least 1; it is 0"):
         ensembles.relative_entropy(ensembles.fit_bridge(pair(n=20), PRIOR), particles=0)
+
+
+def test_smooth_ends_need_no_entropy_estimate():
+    rng = np.random.default_rng(6)
+    n = 600
+    series = ensembles.SnapshotSeries.from_arrays([0, 1], [rng.normal(size=(n, 2)), 1.0 + rng.normal(size=(n, 2))])
+    smooth = ensembles.relative_entropy(ensembles.fit_bridge(series, PRIOR, ends="mixture", components=1)).gaps[0]
+    exact = ensembles.relative_entropy(
+        ensembles.gaussian_bridge(np.zeros(2), np.eye(2), np.ones(2), np.eye(2), PRIOR, 1.0)
+    )
+    assert abs(smooth.value - exact.value) < 4 * smooth.error
+    # One Gaussian component has no shape beyond mean and covariance.
+    assert abs(smooth.shape) < 0.01
+    assert 0.02 < smooth.error < 0.2
+
+
+def test_walls_and_smooth_ends_are_refused_where_they_are_not_served():
+    rng = np.random.default_rng(7)
+    series = ensembles.SnapshotSeries.from_arrays([0, 1, 2], [rng.uniform(0.1, 0.9, size=(30, 1)) for _ in range(3)])
+    boxed = ensembles.Brownian(0.1, box=ensembles.Box(0.0, 1.0))
+    with pytest.raises(InputError, match=r"the prior check is not available in a box"):
+        ensembles.prior_check(series, boxed)
+    fitted = ensembles.fit_bridge(series, boxed)
+    with pytest.raises(InputError, match=r"the relative entropy is not available in a box"):
+        ensembles.relative_entropy(fitted)
+    with pytest.raises(InputError, match=r"the effective number of particles is not available in a box"):
+        ensembles.effective_sizes(fitted)
+    found = ensembles.hold_out(series, boxed, repeats=5)
+    assert "the predictions independent, prior were dropped" in found.dropped[0]
+    assert set(found.to_frame()["prediction"]) == {"bridge", "earlier", "later", "straight", "floor"}
+    smooth = ensembles.fit_bridge(series, ensembles.Brownian(0.1), ends="mixture", components=1)
+    with pytest.raises(InputError, match=r"belong to atoms; the bridge has mixture ends"):
+        ensembles.effective_sizes(smooth)
+    with pytest.raises(InputError, match=r"error bars are those of bridges between atoms"):
+        ensembles.bootstrap(smooth, ensembles.Moments([0.5]))

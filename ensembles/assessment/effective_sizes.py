@@ -12,6 +12,7 @@ from .. import checks
 from ..bridges.bridge import Bridge
 from ..bridges.gap import Gap
 from ..kernels.streamed import StreamedKernel
+from .relative_entropy import refuse_box
 
 if TYPE_CHECKING:
     import pandas
@@ -80,6 +81,11 @@ def effective_sizes(
     ([[4.0, 4.0, 4.0]], [[1.0, 1.0, 1.0]])
     """
     count = checks.whole_number(count, "count")
+    refuse_box(bridge.prior, "the effective number of particles")
+    if bridge.ends != "atoms":
+        raise checks.InputError(
+            f"effective numbers of particles belong to atoms; the bridge has {bridge.ends} ends; fit with ends='atoms'"
+        )
     if times is None:
         measured = bridge.series.times
         chosen = np.concatenate([measured[:-1] + share * np.diff(measured) for share in (0.25, 0.5, 0.75)])

@@ -30,7 +30,7 @@ def snapshot_floor(
     n = len(cloud)
     first, second, plans = rng.spawn(3)
     counts = [stream.multinomial(n, weights, size=repeats) / n for stream in (first, second)]
-    pairs = Comparison(cloud, cloud, weights, weights, *counts, bandwidth)
+    pairs = Comparison(cloud, cloud, weights, weights, counts[0], counts[1], bandwidth)
     found = {}
     for name in names:
         if name.startswith("wasserstein"):
@@ -94,7 +94,7 @@ def replicate_floor(
         inside, outside = groups == group, np.isin(groups, kept) & (groups != group)
         a, b = weights[inside] / weights[inside].sum(), weights[outside] / weights[outside].sum()
         none = [np.empty((0, w.size)) for w in (a, b)]
-        pair = Comparison(cloud[inside], cloud[outside], a, b, *none, bandwidth)
+        pair = Comparison(cloud[inside], cloud[outside], a, b, none[0], none[1], bandwidth)
         for name in values:
             if name.startswith("wasserstein"):
                 values[name].append(pair.wasserstein(int(name[-1]), int(inside.sum()), rng)[0])

@@ -13,7 +13,7 @@ from ..priors.base import LinearGaussianPrior, require_prior
 from .entropy import neighbour_entropy
 from .floors import replicate_floor, snapshot_floor
 from .pairwise import MATRIX_LIMIT, Comparison, multinomial_weights
-from .predictions import PREDICTIONS, Neighbours, Prediction, neighbours_of
+from .predictions import GAUSSIAN_ONLY, PREDICTIONS, Neighbours, Prediction, neighbours_of
 from .verdicts import held_out_verdict
 
 if TYPE_CHECKING:
@@ -167,6 +167,8 @@ def hold_out(
         raise checks.unknown_name("feature of the series", replicates, list(series.features))
     rows: list[HeldOutScore] = []
     times, dropped = [], []
+    if prior.box is not None:
+        dropped.append(f"the predictions {', '.join(GAUSSIAN_ONLY)} were dropped: they do not know the walls of a box")
     streams = checks.generator(rng).spawn(len(series) - 2)
     for k, stream in zip(range(1, len(series) - 1), streams):
         near = neighbours_of(series, prior, k)
@@ -175,6 +177,10 @@ def hold_out(
         for name, sentence in judge.unusable(tuple(names)):
             names.pop(name)
             dropped.append(sentence)
+        if prior.box is not None:
+            dropped.append(
+                f"the predictions {', '.join(GAUSSIAN_ONLY)} were dropped: they do not know the walls of a box"
+            )
         found, clouds = judge.score(near, tuple(names))
         rows += found + judge.floors(near, tuple(names), replicates)
         times.append(HeldOutTime(float(series.times[k]), judge.observed, judge.weights, clouds))
@@ -236,8 +242,11 @@ class _Judge:
         clouds = {}
         reference: dict[str, np.ndarray] = {}
         streams = self.predicting.spawn(len(PREDICTIONS))
+        boxed = near.bridge.prior.box is not None
         size = min(len(self.observed), *(len(cloud) for cloud in near.clouds))
         for (prediction, predict), stream in zip(PREDICTIONS.items(), streams):
+            if boxed and prediction in GAUSSIAN_ONLY:
+                continue
             made = predict(near, self.draws, stream)
             clouds[prediction] = made.cloud
             values = self._resampled(made, names, stream)

@@ -25,7 +25,7 @@ from .transport import EXACT_LIMIT, optimal_plan
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
 
-__all__ = ["PREDICTIONS", "Neighbours", "Prediction", "neighbours_of"]
+__all__ = ["GAUSSIAN_ONLY", "PREDICTIONS", "Neighbours", "Prediction", "neighbours_of"]
 
 _PAIRS = 40_000  # pairs of ends that stand for the independent coupling in its density
 _TILE = 2_000_000
@@ -180,3 +180,6 @@ PREDICTIONS: dict[str, Callable[[Neighbours, int, np.random.Generator], Predicti
     "prior": _prior,
 }
 """Every prediction by its name."""
+
+GAUSSIAN_ONLY = ("independent", "prior")
+"""Predictions that carry particles by the Gaussian transition, which is not that of a prior in a box."""

@@ -18,7 +18,7 @@ potentials.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -27,13 +27,21 @@ from .. import checks
 from ..bridges.bridge import Bridge
 from ..bridges.closed_form import GaussianBridge
 from ..bridges.gap import Gap
+from ..priors.base import LinearGaussianPrior
 from ..schrodinger.gaussian_start import gaussian_curvature, gaussian_potentials
 from .entropy import neighbour_entropy
 
 if TYPE_CHECKING:
     import pandas
 
-__all__ = ["GapEntropy", "RelativeEntropy", "atoms_relative_entropy", "gaussian_relative_entropy", "relative_entropy"]
+__all__ = [
+    "GapEntropy",
+    "RelativeEntropy",
+    "atoms_relative_entropy",
+    "gaussian_relative_entropy",
+    "refuse_box",
+    "relative_entropy",
+]
 
 
 @dataclass(frozen=True)
@@ -107,7 +115,8 @@ def relative_entropy(bridge: Bridge | GaussianBridge, *, particles: int | None =
     """Relative entropy of a bridge to its prior in nats per particle, with its parts and standard errors.
 
     H = KL(π | μ₀ ⊗ p) a gap, summed over gaps; see the module's docstring. Closed form for a `gaussian_bridge`; on atoms
-    the potentials and a nearest-neighbour estimate of the end cloud's entropy (`neighbour_entropy`). Finite clouds make
+    the potentials and a nearest-neighbour estimate of the end cloud's entropy (`neighbour_entropy`); with smooth ends the
+    mean of both log-potentials. Finite clouds make
     it a little too small or too large; scripts/calibration prints by how much on Gaussians.
 
     Parameters
@@ -134,16 +143,40 @@ def relative_entropy(bridge: Bridge | GaussianBridge, *, particles: int | None =
     if particles is not None:
         particles = checks.whole_number(particles, "particles")
     if isinstance(bridge, GaussianBridge):
-        gaps = (gaussian_relative_entropy(bridge, particles or 1),)
+        gaps: tuple[GapEntropy, ...] = (gaussian_relative_entropy(bridge, particles or 1),)
     else:
         if not isinstance(bridge, Bridge):
             raise checks.InputError(
                 f"bridge must be a fitted bridge; it is {type(bridge).__name__}; use fit_bridge or gaussian_bridge"
             )
-        gaps = tuple(_on_atoms(bridge, k, particles) for k in range(len(bridge.gaps)))
+        refuse_box(bridge.prior, "the relative entropy")
+        one_gap = _on_atoms if bridge.ends == "atoms" else _on_smooth_ends
+        gaps = tuple(one_gap(bridge, k, particles) for k in range(len(bridge.gaps)))
     return RelativeEntropy(
         gaps, float(sum(gap.value for gap in gaps)), float(np.sqrt(sum(gap.error**2 for gap in gaps)))
     )
+
+
+def refuse_box(prior: LinearGaussianPrior, what: str) -> None:
+    """Refuse a prior with walls, whose transition is no Gaussian."""
+    if prior.box is not None:
+        raise checks.InputError(
+            f"{what} is not available in a box; the prior is {prior!r}; use hold_out and choose_noise, which are"
+        )
+
+
+def _on_smooth_ends(bridge: Bridge, k: int, particles: int | None) -> GapEntropy:
+    """H = E log φ_T(X_T) - E log φ_0(X_0), a plain mean over the two clouds: smooth potentials need no entropy estimate.
+
+    The potentials were fitted to these clouds, which makes the mean a little too large.
+    """
+    gap = bridge.gaps[k]
+    a, b = gap.weights
+    transition = gap.transition
+    start = -gap.ahead(gap.times[0], gap.clouds[0])[0]
+    end = gap.terminal.log_value(gap.clouds[1])[0]
+    parts = _gaussian_parts(transition.whiten_sources(gap.clouds[0]), transition.whiten_targets(gap.clouds[1]), a, b)
+    return _assembled(gap, float(a @ start + b @ end), (start, end), parts, 0.0, particles or int(np.count_nonzero(b)))
 
 
 def _on_atoms(bridge: Bridge, k: int, particles: int | None) -> GapEntropy:
@@ -164,32 +197,42 @@ def atoms_relative_entropy(gap: Gap, particles: int) -> GapEntropy:
     rows = [np.flatnonzero(weights) for weights in (a, b)]
     transition = gap.transition
     entropy = neighbour_entropy(gap.clouds[1][rows[1]], b[rows[1]])
-    f, g = gap.solution.log_f[rows[0]], gap.solution.log_g[rows[1]]
+    f, g = gap.coupled.log_f[rows[0]], gap.coupled.log_g[rows[1]]
     a, b = a[rows[0]], b[rows[1]]
     value = float(a @ f + b @ g) - transition.log_normaliser - entropy.value
     u, v = transition.whiten_sources(gap.clouds[0][rows[0]]), transition.whiten_targets(gap.clouds[1][rows[1]])
-    gaussian = _gaussian_parts(u, v, a, b)
-    ends = g + entropy.log_density
     # The noise of the nearest-neighbour distances is shared by neighbours: it is in the entropy's own error only.
-    spread_only = _variance(entropy.log_density, b)
-    extra = max(entropy.error**2 - spread_only, 0.0)
+    extra = max(entropy.error**2 - _variance(entropy.log_density, b), 0.0)
+    reduced = replace(gap, clouds=(gap.clouds[0][rows[0]], gap.clouds[1][rows[1]]), weights=(a, b))
+    return _assembled(reduced, value, (f, g + entropy.log_density), _gaussian_parts(u, v, a, b), extra, particles)
+
+
+def _assembled(
+    gap: Gap,
+    value: float,
+    terms: tuple[np.ndarray, np.ndarray],
+    parts: dict[str, Any],
+    extra: float,
+    particles: int,
+) -> GapEntropy:
+    """The parts of H with their errors, from what each particle at the start and at the end adds to H."""
+    a, b = gap.weights
+    shift, gaussian = parts["shift_terms"], parts["gaussian_terms"]
 
     def error(start_terms: np.ndarray, end_terms: np.ndarray, more: float = 0.0) -> float:
         return float(np.sqrt(_variance(start_terms, a) + _variance(end_terms, b) + more))
 
-    start_shift, end_shift = gaussian["shift_terms"]
-    start_gauss, end_gauss = gaussian["gaussian_terms"]
     return GapEntropy(
         gap.times[0],
         gap.times[1],
         value,
-        error(f, ends, extra),
-        gaussian["mean_shift"],
-        error(start_shift, end_shift),
-        gaussian["spread"],
-        error(start_gauss - start_shift, end_gauss - end_shift),
-        value - gaussian["mean_shift"] - gaussian["spread"],
-        error(f - start_gauss, ends - end_gauss, extra),
+        error(*terms, extra),
+        parts["mean_shift"],
+        error(*shift),
+        parts["spread"],
+        error(gaussian[0] - shift[0], gaussian[1] - shift[1]),
+        value - parts["mean_shift"] - parts["spread"],
+        error(terms[0] - gaussian[0], terms[1] - gaussian[1], extra),
         particles,
     )
 

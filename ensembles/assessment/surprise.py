@@ -10,7 +10,7 @@ import numpy as np
 from .. import checks
 from ..bridges.fit import fit_bridge
 from ..priors.base import LinearGaussianPrior, Transition, require_prior
-from .relative_entropy import GapEntropy, atoms_relative_entropy
+from .relative_entropy import GapEntropy, atoms_relative_entropy, refuse_box
 from .resampled_weights import run_repeats
 from .scores import energy_distance
 
@@ -150,6 +150,7 @@ def prior_check(
     0.025
     """
     require_prior(prior)
+    refuse_box(prior, "the prior check")
     simulations = checks.whole_number(simulations, "simulations", 19)
     streams = checks.generator(rng).spawn(len(series) - 1)
     gaps, dropped, verdict = [], [], []

@@ -124,7 +124,8 @@ def bootstrap(
     >>> bool(0.05 < bands.standard_error[0] < 0.2)  # 1 / sqrt(100) = 0.1
     True
     """
-    chosen = list(quantities) if isinstance(quantities, (list, tuple)) else [quantities]
+    chosen: list[Quantity] = list(quantities) if isinstance(quantities, (list, tuple)) else [quantities]  # type: ignore
+    _require_atoms(bridge)
     if isinstance(repeats, (int, np.integer)) and not isinstance(repeats, bool) and repeats == 1:
         raise checks.InputError(
             "a bootstrap of one says nothing; repeats is 1; use at least 2, and 100 for an interval"
@@ -182,6 +183,7 @@ def influence(
     >>> ensembles.influence(bridge, ensembles.Moments([0.0]), snapshots=[0]).to_frame().iloc[0].tolist()
     [0.0, 2.0, -2.5]
     """
+    _require_atoms(bridge)
     series = bridge.series
     values = quantity.evaluate(bridge)
     number = checks.whole_number(number, "number", 0)
@@ -201,6 +203,13 @@ def influence(
             found.append((k, int(i), float(quantity.evaluate(again)[number] - values[number])))
     columns = np.array(found).reshape(-1, 3)
     return Influence(columns[:, 0].astype(int), columns[:, 1].astype(int), columns[:, 2], float(values[number]))
+
+
+def _require_atoms(bridge: Bridge) -> None:
+    if bridge.ends != "atoms":
+        raise checks.InputError(
+            f"error bars are those of bridges between atoms; the bridge has {bridge.ends} ends; fit with ends='atoms'"
+        )
 
 
 def _snapshot_numbers(snapshots: Sequence[int] | None, count: int) -> list[int]:

@@ -52,14 +52,11 @@ def _mixture(
     components: int | None,
     warm: SmoothSolution | None,
 ) -> SmoothSolution:
-    cloud, weights = series.clouds[k], series.weights[k]
+    (cloud, weights), (end, end_weights) = (_weighted(series, index) for index in (k, k + 1))
     basis = transition.cholesky
     centre = transition.mean((weights @ cloud)[None])[0]
-    u, v = (
-        solve_triangular(basis, (points - centre).T, lower=True).T
-        for points in (transition.mean(cloud), series.clouds[k + 1])
-    )
-    clouds = WhitenedClouds(np.ascontiguousarray(u), weights, np.ascontiguousarray(v), series.weights[k + 1])
+    u, v = (solve_triangular(basis, (points - centre).T, lower=True).T for points in (transition.mean(cloud), end))
+    clouds = WhitenedClouds(np.ascontiguousarray(u), weights, np.ascontiguousarray(v), end_weights)
     begin = None
     if warm is not None:
         old = warm.terminal
@@ -74,7 +71,7 @@ def _mixture(
     if ends.smooth_start:
         initial, notes = mixture_start(cloud, weights, terminal, transition, ends)
     else:
-        initial, notes = atom_start(cloud, weights, terminal, transition), ()
+        initial, notes = atom_start(series.clouds[k], series.weights[k], terminal, transition), ()
     return SmoothSolution(
         initial, terminal, "mixture", _entropy(series, k, terminal, transition), fit.chosen, fit.ascent.iterations,
         fit.ascent.history, fit.notes + notes,
@@ -84,8 +81,8 @@ def _mixture(
 def _kernel(
     series: SnapshotSeries, k: int, transition: Transition, ends: KernelEnds, components: int | None
 ) -> SmoothSolution:
-    cloud, end = series.clouds[k], series.clouds[k + 1]
-    weights = series.weights[k], series.weights[k + 1]
+    (cloud, begin_weights), (end, end_weights) = (_weighted(series, index) for index in (k, k + 1))
+    weights = begin_weights, end_weights
     centres = ends.centres
     if centres is None:
         count = components or min(CENTRES, len(end))
@@ -99,12 +96,18 @@ def _kernel(
         initial = begin.potential
         notes.append(f"start: bandwidth {begin.bandwidth:.3g}")
     else:
-        initial = atom_start(cloud, weights[0], fit.potential, transition)
+        initial = atom_start(series.clouds[k], series.weights[k], fit.potential, transition)
     steps = np.arange(fit.history.size)
     return SmoothSolution(
         initial, fit.potential, "kernel", _entropy(series, k, fit.potential, transition), fit.chosen, steps.size,
         np.column_stack([steps, fit.history]), tuple(notes),
     )  # fmt: skip
+
+
+def _weighted(series: SnapshotSeries, k: int) -> tuple[np.ndarray, np.ndarray]:
+    """The particles of a snapshot that carry weight, and their weights."""
+    used = series.weights[k] > 0
+    return series.clouds[k][used], series.weights[k][used]
 
 
 def _potential(tilted: Tilted, centre: np.ndarray, basis: np.ndarray) -> MixturePotential:

@@ -19,6 +19,7 @@ import numpy as np
 __all__ = ["ascend_density_weights", "ascend_weights"]
 
 _SMALLEST = 1e-300
+_LONGEST = 1e4  # plain updates that one extrapolation may stand for
 
 
 def ascend_weights(
@@ -75,7 +76,7 @@ def _accelerated(
     while True:
         _, second = update(first)
         r, v = first - log_w, second - 2.0 * first + log_w
-        length = max(1.0, float(np.sqrt(r @ r) / max(np.sqrt(v @ v), 1e-300)))
+        length = min(max(1.0, float(np.sqrt(r @ r) / max(np.sqrt(v @ v), 1e-300))), _LONGEST)
         trial = np.clip(log_w + 2.0 * length * r + length**2 * v, -690.0, 690.0)
         trial_value, after = update(trial)
         second_value, plain_after = update(second)

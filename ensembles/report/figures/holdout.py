@@ -37,20 +37,20 @@ def draw_hold_out(figure: Figure, result: HoldOut, score: str = "energy_distance
     times = [result.times[i] for i in dict.fromkeys(chosen.tolist())]
     figure.set_size_inches(WIDTH, 5.0)
     grid = figure.add_gridspec(2, len(times), height_ratios=[1.0, 1.05])
-    top = None
+    top: Axes | None = None
     for column, time in enumerate(times):
         ax = figure.add_subplot(grid[0, column], sharex=top, sharey=top)
         top = top or ax
         _draw_scores(ax, result, time.time, score, first=column == 0)
         ax.set_title(plain(f"left out: {time.time:g} {result.time_unit}".rstrip()), loc="left")
-    first = None
+    first: Axes | None = None
     for column, time in enumerate(times):
         ax = figure.add_subplot(grid[1, column], sharex=first, sharey=first)
         _draw_clouds(ax, result, time, first=first is None)
         first = first or ax
     unit = {"covariance_error": f"{result.length_unit}²" if result.length_unit else "", "log_density": "nats",
             "kernel_discrepancy": ""}.get(score, result.length_unit)  # fmt: skip
-    top.set_xlabel(plain(axis_name(score.replace("_", " "), unit)))
+    figure.axes[0].set_xlabel(plain(axis_name(score.replace("_", " "), unit)))
     shown = (
         "" if len(times) == len(result.times) else f" {len(times)} of {len(result.times)} left-out snapshots are shown."
     )
