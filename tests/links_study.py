@@ -150,7 +150,7 @@ def reliability_table(draws: list[Draw]) -> str:
     return "\n".join(lines)
 
 
-def trap_recovery(repeats: int, count: int = 300, seed: int = 0) -> dict[str, list[bool]]:
+def trap_recovery(repeats: int, count: int = 300, seed: int = 0, gap: float = 0.2) -> dict[str, list[bool]]:
     """Share of 95 % intervals that hold the true rate and D of an Ornstein-Uhlenbeck process, from unlabelled frames."""
     rate, diffusion = 0.5, 1.0
     prior = ensembles.OrnsteinUhlenbeck(rate=rate, centre=[1.0, -2.0], diffusion=diffusion)
@@ -159,8 +159,8 @@ def trap_recovery(repeats: int, count: int = 300, seed: int = 0) -> dict[str, li
         rng = np.random.default_rng([seed, repeat])
         # Released from a wider cloud than the stationary one, so that one gap shows the rate.
         clouds = [rng.normal(size=(count, 2)) * 12.0 + [1.0, -2.0]]
-        clouds += [prior.transition(0.4, 2).sample(clouds[0], rng)]
-        series = ensembles.SnapshotSeries.from_arrays([0.0, 0.4], [clouds[0], rng.permutation(clouds[1])])
+        clouds += [prior.transition(gap, 2).sample(clouds[0], rng)]
+        series = ensembles.SnapshotSeries.from_arrays([0.0, gap], [clouds[0], rng.permutation(clouds[1])])
         estimate = ensembles.estimate_prior(series, "ornstein-uhlenbeck")
         for name, truth in (("rate", rate), ("diffusion", diffusion)):
             low, high = estimate.interval(name)

@@ -49,22 +49,35 @@ class LinkOptions:
             raise checks.InputError(f"cluster must be at most 12; it is {self.cluster}; the cost doubles with each one")
 
 
+def messages_of_all_pairs(posterior: AssignmentPosterior) -> np.ndarray | None:
+    """Messages to rows of every pair (n m,), a start for nearby weights; None where there are too many pairs."""
+    n, m = posterior.graph.shape
+    if float(n) * m > _MATRIX:
+        return None
+    messages = np.tile(-posterior.log_column_sums, n)
+    messages[posterior.graph.rows * m + posterior.graph.columns] = posterior.to_row
+    return messages
+
+
 def linked_posterior(
-    law: LinkLaw, log_alone: tuple[np.ndarray, np.ndarray], options: LinkOptions
+    law: LinkLaw,
+    log_alone: tuple[np.ndarray, np.ndarray],
+    options: LinkOptions,
+    start: np.ndarray | None = None,
 ) -> tuple[AssignmentPosterior, float]:
     """Beliefs of the links between two frames, and the largest probability of a particle that the graph leaves out.
 
     `log_alone` are log-weights of a missed (n,) and of a new particle (m,), -inf where that cannot be; matched pairs
-    weigh p(y | x), so a detection probability is divided out before.
+    weigh p(y | x), so a detection probability is divided out before. `start` are messages of all pairs (n m,).
     """
     n, m = law.shape
     pairs = float(n) * m
     if pairs <= _DENSE:
         rows, columns = np.divmod(np.arange(n * m), m)
         graph = AssignmentGraph.from_edges(rows, columns, law.log_weights(rows, columns), log_alone)
-        return _propagate(graph, options), 0.0
+        return _propagate(graph, options, start), 0.0
     if pairs <= _MATRIX:
-        return _from_matrix(law, log_alone, options)
+        return _from_matrix(law, log_alone, options, start)
     return _from_trees(law, log_alone, options)
 
 
@@ -93,16 +106,21 @@ def _largest_share(rows: np.ndarray, columns: np.ndarray, log_odds: np.ndarray) 
 
 
 def _from_matrix(
-    law: LinkLaw, log_alone: tuple[np.ndarray, np.ndarray], options: LinkOptions
+    law: LinkLaw, log_alone: tuple[np.ndarray, np.ndarray], options: LinkOptions, start: np.ndarray | None
 ) -> tuple[AssignmentPosterior, float]:
     """All pairs are weighed; those that matter after a few rounds are kept, and all are looked at again at the end."""
     n, m = law.shape
     rows, columns = np.divmod(np.arange(n * m), m)
     weights = law.log_weights(rows, columns)
     everything = AssignmentGraph.from_edges(rows, columns, weights, log_alone)
-    rough = _propagate(everything, options, rough=True)
+    rough = _propagate(everything, options, start, rough=True)
     log_odds = weights + rough.to_row + rough.to_column
     kept = log_odds > np.log(_KEPT)
+    square = log_odds.reshape(n, m)
+    for axis in (0, 1):  # every particle keeps its best links, however poor they are
+        count = min(_NEAREST, square.shape[axis]) - 1
+        best = square >= -np.partition(-square, count, axis=axis).take([count], axis=axis)
+        kept |= best.ravel()
     start = rough.to_row[kept]
     for _ in range(_ROUNDS):
         graph = AssignmentGraph.from_edges(rows[kept], columns[kept], weights[kept], log_alone)

@@ -18,7 +18,7 @@ import numpy as np
 from scipy.optimize import minimize
 
 from .. import checks
-from .candidates import LinkOptions, linked_posterior
+from .candidates import LinkOptions, linked_posterior, messages_of_all_pairs
 from .estimated_prior import PriorEstimate
 from .families import PriorFamily
 from .frames import loner_weights, require_same_particles
@@ -32,8 +32,9 @@ __all__ = ["EstimateOptions", "Evidence", "estimate_prior"]
 
 _STEP = 1e-3  # of free parameters, for derivatives of log-weights
 _CURVATURE_STEP = 0.03
-_SCAN = (1.0, 2.0, 4.0, 8.0, 16.0)
-_FARTHEST = 12.0  # how far a free parameter may go from its start: e^12 in diffusion
+_SCAN = (16.0, 6.0, 2.5, 1.0)  # times a lower bound; from the top, where messages settle soon
+_REACH = 1.2  # how far a free parameter may go in one search: a wild first step would leave all links behind
+_RECENTRED = 8
 
 
 @dataclass(frozen=True)
@@ -59,11 +60,12 @@ class EstimateOptions:
 
 @dataclass(frozen=True, eq=False)
 class Evidence:
-    """log Z_B of all gaps as a function of the free parameters of a family."""
+    """log Z_B of all gaps as a function of the free parameters of a family; `warm` keeps messages to start from."""
 
     series: SnapshotSeries
     family: PriorFamily
     options: EstimateOptions
+    warm: dict[int, np.ndarray] = field(default_factory=dict)
 
     @property
     def particles(self) -> int:
@@ -83,7 +85,10 @@ class Evidence:
 
             prior, _ = self.family.build(free)
             loners = loner_weights(self.series, k, prior, self.options.detection, self.options.birth_density)
-            posterior, _ = linked_posterior(law(free), loners.log_alone, self.options.links)
+            posterior, _ = linked_posterior(law(free), loners.log_alone, self.options.links, self.warm.get(k))
+            messages = messages_of_all_pairs(posterior)
+            if messages is not None and posterior.certificate.converged:
+                self.warm[k] = messages
             total += posterior.log_evidence + loners.log_constant
             graph = posterior.graph
             for i in range(free.size):
@@ -110,18 +115,23 @@ class Evidence:
             value, gradient = self.at(free)
             return -value / scale, -gradient[moving] / scale
 
-        found = minimize(
-            loss,
-            start[moving],
-            jac=True,
-            method="L-BFGS-B",
-            bounds=[(x - _FARTHEST, x + _FARTHEST) for x in start[moving]],
-            options={"gtol": self.options.gradient_tolerance, "maxiter": self.options.iteration_limit, "ftol": 1e-12},
-        )
+        best = start[moving]
+        for _ in range(_RECENTRED):
+            found = minimize(
+                loss,
+                best,
+                jac=True,
+                method="L-BFGS-B",
+                bounds=[(x - _REACH, x + _REACH) for x in best],
+                options={"gtol": self.options.gradient_tolerance, "maxiter": self.options.iteration_limit, "ftol": 1e-12},
+            )
+            inside = bool((np.abs(found.x - best) < 0.99 * _REACH).all())
+            best = found.x
+            if inside:
+                break
         free = start.copy()
-        free[moving] = found.x
+        free[moving] = best
         flat = float(np.abs(found.jac).max()) <= 20.0 * self.options.gradient_tolerance
-        inside = bool((np.abs(found.x - start[moving]) < 0.99 * _FARTHEST).all())
         return free, -float(found.fun) * scale, flat and inside
 
     def curvature(self, free: np.ndarray) -> np.ndarray:
