@@ -41,6 +41,12 @@ _HOMES = {
     "prior_check": "assessment.surprise",
     "relative_entropy": "assessment.relative_entropy",
     "effective_sizes": "assessment.effective_sizes",
+    "descendants": "lineage.fates",
+    "ancestors": "lineage.fates",
+    "commitment": "lineage.fates",
+    "label_flows": "lineage.fates",
+    "feature_trends": "lineage.features",
+    "early_features": "lineage.features",
     "InputError": "checks",
     "ComputationError": "checks",
     "ConvergenceError": "schrodinger.solution",
@@ -70,6 +76,12 @@ if TYPE_CHECKING:
     from .checks import ComputationError as ComputationError
     from .checks import InputError as InputError
     from .estimator import BridgeModel as BridgeModel
+    from .lineage.fates import ancestors as ancestors
+    from .lineage.fates import commitment as commitment
+    from .lineage.fates import descendants as descendants
+    from .lineage.fates import label_flows as label_flows
+    from .lineage.features import early_features as early_features
+    from .lineage.features import feature_trends as feature_trends
     from .links.candidates import LinkOptions as LinkOptions
     from .links.chain import chain_links as chain_links
     from .links.estimate import EstimateOptions as EstimateOptions

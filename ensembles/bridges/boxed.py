@@ -180,3 +180,13 @@ class BoxCoupling(Coupling):
         """Σ_j π_ij values_j / Σ_j π_ij for every source."""
         table = self.matrix()
         return (table / table.sum(axis=1, keepdims=True)) @ np.asarray(values, dtype=float)
+
+    def expectation_of_sources(self, values: np.ndarray) -> np.ndarray:
+        """Σ_i π_ij values_i / Σ_i π_ij for every target."""
+        table = self.matrix()
+        return (table / table.sum(axis=0)).T @ np.asarray(values, dtype=float)
+
+    def draw_sources(self, targets: np.ndarray, rng: np.random.Generator) -> np.ndarray:
+        """One source for each target row number, drawn with probability ∝ π_ij."""
+        sums = np.cumsum(self.matrix()[:, targets], axis=0)
+        return np.asarray((rng.random(targets.size) * sums[-1] >= sums).sum(axis=0))

@@ -87,18 +87,27 @@ class Coupling:
         })  # fmt: skip
 
     def expectation(self, values: np.ndarray) -> np.ndarray:
-        """Σ_j π_ij values_j / Σ_j π_ij for every source: values (m,) or (m, k), result (n,) or (n, k)."""
-        values = np.asarray(values, dtype=float)
-        out = np.empty((self.shape[0], *values.shape[1:]))
-        tile = max(1, 4_000_000 // self.shape[1])
-        for start in range(0, self.shape[0], tile):
-            part = self.kernel.sources[start : start + tile]
-            log_kernel = DenseKernel.between(part, self.kernel.targets).log_kernel + self.log_q
-            log_kernel -= log_kernel.max(axis=1, keepdims=True)
-            row = np.exp(log_kernel, out=log_kernel)
-            row /= row.sum(axis=1, keepdims=True)
-            out[start : start + tile] = row @ values
-        return out
+        """Σ_j π_ij values_j / Σ_j π_ij for every source: values (m,) or (m, k), result (n,) or (n, k); streamed."""
+        return _averages(self.kernel, self.log_q, values)
+
+    def expectation_of_sources(self, values: np.ndarray) -> np.ndarray:
+        """Σ_i π_ij values_i / Σ_i π_ij for every target: values (n,) or (n, k), result (m,) or (m, k); streamed."""
+        return _averages(self.kernel.reversed, self.log_p, values)
+
+    def draw_sources(self, targets: np.ndarray, rng: np.random.Generator) -> np.ndarray:
+        """One source for each target row number, drawn with probability ∝ π_ij; row numbers."""
+        rows, inverse, counts = np.unique(targets, return_inverse=True, return_counts=True)
+        kernel = self.kernel.reversed.restrict(rows, np.arange(self.shape[0]))
+        drawn = np.empty(targets.size, dtype=np.int64)
+        # Draws come back target after target.
+        drawn[np.argsort(inverse, kind="stable")] = kernel.sample_targets(self.log_p, counts, rng.random(targets.size))
+        return drawn
 
     def __repr__(self) -> str:
         return f"Coupling({self.shape[0]} particles of snapshot {self.source} with {self.shape[1]} of snapshot {self.target})"
+
+
+def _averages(kernel: StreamedKernel | TruncatedKernel, log_weights: np.ndarray, values: np.ndarray) -> np.ndarray:
+    values = np.asarray(values, dtype=float)
+    flat = kernel.expectation(log_weights, values.reshape(values.shape[0], -1))
+    return flat.reshape(kernel.shape[0], *values.shape[1:])

@@ -19,6 +19,7 @@ __all__ = [
     "exponents",
     "fill_entries",
     "log_sum_and_mean",
+    "expectation_rows",
     "log_sum_of",
     "log_sum_rows",
     "nearest_cost",
@@ -136,6 +137,33 @@ def log_sum_and_mean(x, vt, log_weights, bounds, pointers, ranges, first, last, 
                         total += weight[j] * v[j]
                     packed += v.size
                 mean[i, k] = total
+
+
+@compiled
+def expectation_rows(x, vt, log_weights, values, bounds, pointers, ranges, first, last, buffer, out):
+    """out[i] = Σ_j w_ij values[:, j] / Σ_j w_ij with w_ij = exp(log_weights_j - ½|x_i - v_j|²); values (k, m)."""
+    for chunk in range(first, last):
+        near = ranges[pointers[chunk] : pointers[chunk + 1]]
+        for i in range(bounds[chunk, 0], bounds[chunk, 1]):
+            count = exponents(x, vt, log_weights, near, i, 1, buffer)
+            row = buffer[0, :count]
+            top = -np.inf
+            for j in range(count):
+                top = max(top, row[j])
+            sum_row = 0.0
+            for j in range(count):
+                row[j] = exponential(row[j] - top)
+                sum_row += row[j]
+            for k in range(values.shape[0]):
+                total = 0.0
+                packed = 0
+                for part in range(near.shape[0]):
+                    v = values[k, near[part, 0] : near[part, 1]]
+                    weight = row[packed : packed + v.size]
+                    for j in range(v.size):
+                        total += weight[j] * v[j]
+                    packed += v.size
+                out[i, k] = total / sum_row
 
 
 @compiled

@@ -76,6 +76,12 @@ class StreamedKernel(Kernel):
         self._run(compiled.log_sum_and_mean, (log_weights,), (out, mean))
         return out, mean
 
+    def expectation(self, log_weights: np.ndarray, values: np.ndarray) -> np.ndarray:
+        """Average of values (m, k) over the targets with weights exp(log_weights_j) k_ij, for every source; (n, k)."""
+        out = np.empty((self.shape[0], values.shape[1]))
+        self._run(compiled.expectation_rows, (log_weights, np.ascontiguousarray(values.T, dtype=float)), (out,))
+        return out
+
     def sweep(self, log_f: np.ndarray, q: np.ndarray, log_a: np.ndarray, relaxation: float) -> Sweep:
         """One fused pass; see `Kernel.sweep`."""
         return self.sweep_and_store(log_f, q, log_a, relaxation, _NOT_STORED)

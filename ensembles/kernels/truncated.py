@@ -88,6 +88,14 @@ class TruncatedKernel(Kernel):
         out[side.rows_order], mean[side.rows_order] = side.kernel(weights).log_sum_and_mean(weights)
         return out + side.row_shift, mean @ side.to_targets + side.target_mean
 
+    def expectation(self, log_weights: np.ndarray, values: np.ndarray) -> np.ndarray:
+        """Average of values (m, k) over the targets with weights exp(log_weights_j) k_ij, for every source; (n, k)."""
+        side = self._forward
+        weights = side.columns(log_weights)
+        out = np.empty((self.shape[0], values.shape[1]))
+        out[side.rows_order] = side.kernel(weights).expectation(weights, values[side.columns_order])
+        return out
+
     def top_targets(self, log_weights: np.ndarray, count: int) -> tuple[np.ndarray, np.ndarray]:
         """The `count` most probable targets of every source and their probabilities given the source, (n, count)."""
         side = self._forward

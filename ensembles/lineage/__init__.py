@@ -1,0 +1,1 @@
+"""Who came from where: descendants, ancestors, flows between labels, features along the way, and their error bars."""

@@ -1,0 +1,52 @@
+"""Values carried along the chain of couplings, in either direction, without an n by m matrix.
+
+Given its particle, what follows a snapshot does not depend on what came before it (the chain is Markov), so conditional
+expectations over several gaps are those over each gap, one after another.
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+if TYPE_CHECKING:
+    from ..bridges.bridge import Bridge
+
+__all__ = ["ancestor_weights", "draw_histories", "expected_at_end", "expected_at_start"]
+
+
+def expected_at_end(bridge: Bridge, values: np.ndarray, start: int, end: int) -> np.ndarray:
+    """E[values at snapshot `end` | particle of snapshot `start`]: values (n_end, p), result (n_start, p)."""
+    for gap in range(end - 1, start - 1, -1):
+        values = bridge.coupling(gap).expectation(values)
+    return values
+
+
+def expected_at_start(bridge: Bridge, values: np.ndarray, start: int, end: int) -> np.ndarray:
+    """E[values at snapshot `start` | particle of snapshot `end`]: values (n_start, p), result (n_end, p)."""
+    for gap in range(start, end):
+        values = bridge.coupling(gap).expectation_of_sources(values)
+    return values
+
+
+def ancestor_weights(bridge: Bridge, weights: np.ndarray, start: int, end: int) -> list[np.ndarray]:
+    """Weights of the ancestors, at every snapshot from `start` to `end`, of particles of `end` weighted by (n_end, p).
+
+    w_k(i) = Σ_j w_(k+1)(j) π_ij / Σ_i π_ij; columns keep their sum 1.
+    """
+    found = [weights / weights.sum(axis=0)]
+    for gap in range(end - 1, start - 1, -1):
+        before, after = bridge.gaps[gap].weights
+        share = np.divide(found[0], after[:, None], out=np.zeros_like(found[0]), where=after[:, None] > 0)
+        earlier = before[:, None] * bridge.coupling(gap).expectation(share)
+        found.insert(0, earlier / earlier.sum(axis=0))
+    return found
+
+
+def draw_histories(bridge: Bridge, last: np.ndarray, start: int, end: int, rng: np.random.Generator) -> np.ndarray:
+    """Row numbers (count, end - start + 1) of drawn ancestors of the particles `last` (count,) of snapshot `end`."""
+    members = [last]
+    for gap in range(end - 1, start - 1, -1):
+        members.insert(0, bridge.coupling(gap).draw_sources(members[0], rng))
+    return np.stack(members, axis=1)
