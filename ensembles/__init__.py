@@ -12,6 +12,7 @@ __version__ = "0.1.0"
 
 _HOMES = {
     "SnapshotSeries": "snapshots.series",
+    "Growth": "snapshots.growth",
     "read_snapshots": "snapshots.files",
     "write_snapshots": "snapshots.files",
     "Brownian": "priors.brownian",
@@ -47,6 +48,9 @@ _HOMES = {
     "label_flows": "lineage.fates",
     "feature_trends": "lineage.features",
     "early_features": "lineage.features",
+    "implied_growth": "lineage.growth",
+    "kept_weights": "lineage.growth",
+    "masses": "lineage.growth",
     "InputError": "checks",
     "ComputationError": "checks",
     "ConvergenceError": "schrodinger.solution",
@@ -82,6 +86,9 @@ if TYPE_CHECKING:
     from .lineage.fates import label_flows as label_flows
     from .lineage.features import early_features as early_features
     from .lineage.features import feature_trends as feature_trends
+    from .lineage.growth import implied_growth as implied_growth
+    from .lineage.growth import kept_weights as kept_weights
+    from .lineage.growth import masses as masses
     from .links.candidates import LinkOptions as LinkOptions
     from .links.chain import chain_links as chain_links
     from .links.estimate import EstimateOptions as EstimateOptions
@@ -93,6 +100,7 @@ if TYPE_CHECKING:
     from .schrodinger.solution import ConvergenceError as ConvergenceError
     from .snapshots.files import read_snapshots as read_snapshots
     from .snapshots.files import write_snapshots as write_snapshots
+    from .snapshots.growth import Growth as Growth
     from .snapshots.series import SnapshotSeries as SnapshotSeries
 
 

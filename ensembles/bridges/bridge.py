@@ -41,6 +41,8 @@ class Bridge:
     tolerance : L1 error of the marginals that was asked for; smooth ends have none.
     ends : "atoms", "kernel" or "mixture".
     notes : sentences worth knowing: why these ends, what was chosen.
+    gap_weights : the weights of both snapshots in the coupling of each gap, where growth makes them others than the
+        series' own; otherwise None.
     """
 
     series: SnapshotSeries
@@ -49,6 +51,7 @@ class Bridge:
     tolerance: float
     ends: str = "atoms"
     notes: tuple[str, ...] = ()
+    gap_weights: tuple[tuple[np.ndarray, np.ndarray], ...] | None = None
 
     @cached_property
     def gaps(self) -> tuple[Gap, ...]:
@@ -59,7 +62,7 @@ class Bridge:
             kind(
                 (float(s.times[k]), float(s.times[k + 1])),
                 (s.clouds[k], s.clouds[k + 1]),
-                (s.weights[k], s.weights[k + 1]),
+                (s.weights[k], s.weights[k + 1]) if self.gap_weights is None else self.gap_weights[k],
                 self.prior,
                 solution,
             )

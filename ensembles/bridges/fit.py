@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from .. import checks
-from ..kernels.choose import MEMORY, gaussian_kernel
+from ..kernels.choose import MEMORY, evaluation_kernel, gaussian_kernel
 from ..priors.base import LinearGaussianPrior, Transition, require_prior
 from ..schrodinger.coarse import coarse_potentials, gaussian_start
 from ..schrodinger.iteration import Start, Strategy
@@ -19,6 +19,7 @@ from ..schrodinger.solve import SWEEP_LIMIT, solve
 from .boxed import gap_kernel
 from .bridge import Bridge
 from .choose_ends import chosen_ends
+from .growing import growing_weights, growth_notes, require_particles, solve_growing, unbalanced_start
 from .smooth import KernelEnds, MixtureEnds, SmoothSolution
 from .smooth_fit import fit_smooth_gap
 
@@ -64,7 +65,8 @@ def fit_bridge(
     """Fit the Schrödinger bridge through all snapshots of a series.
 
     Over every gap, π_ij = a_i b_j exp(f_i + g_j) k_ij with the prior's transition density k and the two clouds' weights as
-    marginals; the bridge over K snapshots is the chain of the pairwise ones.
+    marginals; the bridge over K snapshots is the chain of the pairwise ones. Where the series says how particles grow
+    (`SnapshotSeries.with_growth`), the earlier weights are those that birth and death leave at the end of the gap.
 
     Parameters
     ----------
@@ -110,10 +112,11 @@ def fit_bridge(
         for time, cloud in zip(series.times, series.clouds):
             prior.box.require_inside(cloud, f" in snapshot t = {time:g}")
     if not isinstance(chosen, str):
+        require_particles(series, "smooth")
         return _fit_smooth(series, prior, chosen, components, start, reason)
-    solutions = []
+    solutions, weights = [], []
     for k in range(len(series.times) - 1):
-        solution = _solve_gap(series, prior, k, tolerance, start, options)
+        found, solution = _solve_gap(series, prior, k, tolerance, start, options)
         if solution.outcome is not Outcome.CONVERGED:
             message = (
                 f"the bridge did not converge between t = {series.times[k]:g} and t = {series.times[k + 1]:g}; "
@@ -123,7 +126,10 @@ def fit_bridge(
                 raise ConvergenceError(message, solution)
             warnings.warn(message, RuntimeWarning, stacklevel=2)
         solutions.append(solution)
-    return Bridge(series, prior, tuple(solutions), float(tolerance), notes=reason)
+        weights.append(found)
+    notes = (*reason, *growth_notes(series))
+    kept = None if series.growth is None else tuple(weights)
+    return Bridge(series, prior, tuple(solutions), float(tolerance), notes=notes, gap_weights=kept)
 
 
 def _fit_smooth(
@@ -163,21 +169,32 @@ def _solve_gap(
     tolerance: float,
     start: Bridge | None,
     options: SolverOptions,
-) -> Solution:
+) -> tuple[tuple[np.ndarray, np.ndarray], Solution]:
+    """The weights that gap k couples, and its solution."""
     transition = prior.transition(float(series.times[k + 1] - series.times[k]), series.dimension)
     u = transition.whiten_sources(series.clouds[k])
     v = transition.whiten_targets(series.clouds[k + 1])
-    weights = (series.weights[k], series.weights[k + 1])
+    weights = growing_weights(series, k)
     _require_enough_noise(u, v, weights, prior, series, k)
 
     def observe(state: State) -> bool | None:
         return options.observe(k, state) if options.observe is not None else None
 
-    if prior.box is not None:
-        kernel = gap_kernel(prior, transition, series.clouds[k], series.clouds[k + 1])
-        return solve(kernel, weights, tolerance=tolerance, sweep_limit=options.sweep_limit, observe=observe)
+    boxed = gap_kernel(prior, transition, series.clouds[k], series.clouds[k + 1]) if prior.box is not None else None
+    if series.growth is not None and not series.growth.exact:
+        strengths = series.growth.strengths(float(series.durations[k]))
+        return solve_growing(
+            evaluation_kernel(u, v) if boxed is None else boxed,
+            weights,
+            strengths,
+            tolerance=tolerance,
+            start=None if start is None else unbalanced_start(start.gaps[k].coupled, strengths),
+            sweep_limit=options.sweep_limit,
+        )
+    if boxed is not None:
+        return weights, solve(boxed, weights, tolerance=tolerance, sweep_limit=options.sweep_limit, observe=observe)
     start_values, strategy = _start((u, v), weights, transition, start, series, k, tolerance, options)
-    return solve(
+    return weights, solve(
         gaussian_kernel(u, v, options.memory),
         weights,
         tolerance=tolerance,

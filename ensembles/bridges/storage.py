@@ -2,7 +2,8 @@
 
 Arrays: `header` (JSON text: format, version, prior, tolerance, names, units, certificates), `times`, `masses`, and per
 snapshot k `cloud_k`, `weights_k`, `rows_k`, optionally `labels_k` and `feature_i_k`; per gap `log_f_k`, `log_g_k`,
-`history_k`, and with smooth ends (version 2) both potentials as in smooth_storage.py. `digest` is the SHA-256 of all of
+`history_k`, with smooth ends (version 2) both potentials as in smooth_storage.py, and with growth (version 3) the weights
+`gap_weights_0_k`, `gap_weights_1_k` that the gap couples. `digest` is the SHA-256 of all of
 them, so that a damaged file is known as such.
 """
 
@@ -20,6 +21,7 @@ import numpy as np
 from .. import checks
 from ..priors.registry import build_prior
 from ..schrodinger.solution import Certificate, Outcome, Solution
+from ..snapshots.growth import Growth
 from ..snapshots.series import SnapshotSeries
 from ..writing import atomic_path
 from .bridge import Bridge
@@ -29,7 +31,7 @@ from .smooth_storage import pack_solution, unpack_solution
 __all__ = ["load_bridge", "save_bridge"]
 
 _FORMAT = "ensembles-bridge"
-_VERSION = 2  # 2: smooth ends; a bridge of atoms is still written as 1, for earlier readers
+_VERSION = 3  # 2: smooth ends; 3: growth. A bridge without them is still written as 1, for earlier readers
 
 
 def _digest(arrays: dict[str, np.ndarray]) -> str:
@@ -51,7 +53,7 @@ def save_bridge(bridge: Bridge, path: str | Path) -> None:
     ]
     header = {
         "format": _FORMAT,
-        "version": 1 if bridge.ends == "atoms" else _VERSION,
+        "version": _version(bridge),
         "ends": bridge.ends,
         "notes": list(bridge.notes),
         "prior": {"kind": bridge.prior.kind, "parameters": bridge.prior.parameters()},
@@ -63,6 +65,8 @@ def save_bridge(bridge: Bridge, path: str | Path) -> None:
         "features": features,
         "solutions": [entry for entry, _ in packed],
     }
+    if series.growth is not None:
+        header["growth"] = series.growth.to_mapping()
     arrays: dict[str, np.ndarray] = {
         "header": np.array(json.dumps(header)),
         "times": series.times,
@@ -75,6 +79,8 @@ def save_bridge(bridge: Bridge, path: str | Path) -> None:
         for i, name in enumerate(features):
             column = np.asarray(series.features[name][k])
             arrays[f"feature_{i}_{k}"] = column.astype(str) if column.dtype == object else column
+    for k, (early, late) in enumerate(bridge.gap_weights or ()):
+        arrays |= {f"gap_weights_0_{k}": early, f"gap_weights_1_{k}": late}
     for _, parts in packed:
         arrays |= parts
     path = Path(path)
@@ -82,6 +88,12 @@ def save_bridge(bridge: Bridge, path: str | Path) -> None:
         raise checks.InputError(f"a bridge is saved as .npz; the name is {path.name!r}; end it in .npz")
     with atomic_path(path) as temporary, open(temporary, "wb") as stream:
         np.savez(stream, **{**arrays, "digest": np.array(_digest(arrays))})  # type: ignore[arg-type]
+
+
+def _version(bridge: Bridge) -> int:
+    if bridge.series.growth is not None:
+        return _VERSION
+    return 1 if bridge.ends == "atoms" else 2
 
 
 def _pack_coupling(solution: Solution, k: int) -> tuple[dict[str, Any], dict[str, np.ndarray]]:
@@ -158,6 +170,7 @@ def _rebuild(header: dict[str, Any], arrays: dict[str, np.ndarray]) -> Bridge:
         time_name=header["time_name"],
         time_unit=header["time_unit"],
         length_unit=header["length_unit"],
+        growth=Growth.from_mapping(header["growth"]) if "growth" in header else None,
     )
     solutions = tuple(
         unpack_solution(entry, arrays, k)
@@ -175,4 +188,8 @@ def _rebuild(header: dict[str, Any], arrays: dict[str, np.ndarray]) -> Bridge:
     )
     prior = build_prior(header["prior"]["kind"], header["prior"]["parameters"])
     tolerance = float("nan") if header["tolerance"] is None else header["tolerance"]
-    return Bridge(series, prior, solutions, tolerance, header.get("ends", "atoms"), tuple(header.get("notes", ())))
+    gap_weights = None
+    if "gap_weights_0_0" in arrays:
+        gap_weights = tuple((arrays[f"gap_weights_0_{k}"], arrays[f"gap_weights_1_{k}"]) for k in range(count - 1))
+    notes = tuple(header.get("notes", ()))
+    return Bridge(series, prior, solutions, tolerance, header.get("ends", "atoms"), notes, gap_weights)

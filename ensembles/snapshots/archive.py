@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import zipfile
 import zlib
 from collections.abc import Mapping, Sequence
@@ -15,6 +16,7 @@ from .. import checks
 from ..checks import InputError
 from ..writing import atomic_path
 from .columns import read_units
+from .growth import Growth
 from .series import SnapshotSeries
 
 __all__ = ["FORMAT", "VERSION", "read_archive", "write_archive"]
@@ -38,6 +40,8 @@ def write_archive(series: SnapshotSeries, path: Path) -> None:
         "length_unit": np.array(series.length_unit),
         "feature_names": np.array(list(series.features), dtype=np.str_),
     }
+    if series.growth is not None:
+        arrays["growth"] = np.array(json.dumps(series.growth.to_mapping()))
     for k in range(len(series)):
         arrays[f"positions_{k}"] = series.clouds[k]
         arrays[f"weights_{k}"] = series.weights[k]
@@ -170,6 +174,13 @@ def _series(arrays: Mapping[str, np.ndarray], path: Path) -> SnapshotSeries:
         series = replace(series, rows=_rows(rows, series.counts, path))
     if "masses" in arrays:
         series = _with_masses(series, weights, arrays["masses"], path)
+    if "growth" in arrays:
+        try:
+            series = series.with_growth(Growth.from_mapping(json.loads(str(arrays["growth"]))))
+        except (ValueError, TypeError) as cause:
+            raise InputError(
+                f"the growth in an archive cannot be used; {str(path)!r}: {cause}; write the archive again"
+            ) from None
     return series
 
 

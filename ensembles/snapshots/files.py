@@ -56,6 +56,7 @@ def read_snapshots(
     position_names          (d,) texts; optional
     time_name               a text; optional
     time_unit, length_unit  texts; optional
+    growth                  JSON text of the fields of `Growth`; optional
     ======================  ===========================================================================
 
     Parameters

@@ -25,6 +25,7 @@ from .columns import (
     too_few_snapshots,
     weight_arrays,
 )
+from .growth import Growth
 from .wording import series_html, series_notes, series_text
 
 if TYPE_CHECKING:
@@ -54,6 +55,7 @@ class SnapshotSeries:
     rows : tuple of (n_k,) arrays of whole numbers
         The row of each particle in the table it came from, counted from 0.
     position_names, time_name, time_unit, length_unit : names of the axes; '' is an unknown unit
+    growth : `Growth`, or None where particles neither divide nor die; see `with_growth`
 
     Examples
     --------
@@ -78,6 +80,7 @@ class SnapshotSeries:
     time_name: str = "time"
     time_unit: str = ""
     length_unit: str = ""
+    growth: Growth | None = None
 
     def __post_init__(self) -> None:
         if len(self.clouds) < 2:
@@ -255,6 +258,28 @@ class SnapshotSeries:
             rows=pick(self.rows),
         )
 
+    def with_growth(self, growth: Growth | None) -> SnapshotSeries:
+        """Return the same series with what is known of birth and death; every fit then accounts for it.
+
+        Raises
+        ------
+        InputError
+            A feature that does not exist or is no rate, and a growth that leaves the range of floating point.
+
+        Examples
+        --------
+        >>> from ensembles import Growth
+        >>> series = SnapshotSeries.from_arrays([0, 1], [[0.0, 1.0], [1.0, 3.0]]).with_growth(Growth(0.5, uncertainty=0.2))
+        >>> series.growth.uncertainty
+        0.2
+        """
+        if growth is not None:
+            if not isinstance(growth, Growth):
+                raise InputError(f"growth must be a Growth; it is {growth!r}; write ensembles.Growth(rate=...)")
+            for gap in range(len(self) - 1):
+                growth.log_factor(self, gap)
+        return replace(self, growth=growth)
+
     def to_frame(self) -> pandas.DataFrame:
         """Return a data frame with one row per particle, in order of time.
 
@@ -266,11 +291,15 @@ class SnapshotSeries:
         return frame_from_series(self)
 
     def fingerprint(self) -> str:
-        """Return the SHA-256 of times, clouds, weights and masses: equal exactly when these are equal bit by bit."""
+        """Return the SHA-256 of times, clouds, weights, masses and growth: equal exactly when these are equal bit by bit."""
         digest = hashlib.sha256(b"ensembles-snapshots")
         for array in (self.times, self.masses, *self.clouds, *self.weights):
             digest.update(repr(array.shape).encode())
             digest.update(np.ascontiguousarray(array, dtype="<f8").data)
+        if self.growth is not None:
+            digest.update(repr(self.growth).encode())
+            for k in range(len(self)):
+                digest.update(np.ascontiguousarray(self.growth.rates(self, k), dtype="<f8").data)
         return digest.hexdigest()
 
     def notes(self) -> tuple[str, ...]:
