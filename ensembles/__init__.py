@@ -13,6 +13,8 @@ __version__ = "0.1.0"
 _HOMES = {
     "SnapshotSeries": "snapshots.series",
     "Growth": "snapshots.growth",
+    "Scaling": "snapshots.scaling",
+    "fit_scaling": "snapshots.scaling",
     "read_snapshots": "snapshots.files",
     "write_snapshots": "snapshots.files",
     "Brownian": "priors.brownian",
@@ -67,8 +69,8 @@ if TYPE_CHECKING:
     from .assessment.quantities import LinkProbabilities as LinkProbabilities
     from .assessment.quantities import Moments as Moments
     from .assessment.quantities import PathQuantiles as PathQuantiles
-    from .assessment.surprise import prior_check as prior_check
     from .assessment.relative_entropy import relative_entropy as relative_entropy
+    from .assessment.surprise import prior_check as prior_check
     from .assessment.uncertainty import bootstrap as bootstrap
     from .assessment.uncertainty import influence as influence
     from .bridges.closed_form import gaussian_bridge as gaussian_bridge
@@ -101,6 +103,8 @@ if TYPE_CHECKING:
     from .snapshots.files import read_snapshots as read_snapshots
     from .snapshots.files import write_snapshots as write_snapshots
     from .snapshots.growth import Growth as Growth
+    from .snapshots.scaling import Scaling as Scaling
+    from .snapshots.scaling import fit_scaling as fit_scaling
     from .snapshots.series import SnapshotSeries as SnapshotSeries
 
 

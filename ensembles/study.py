@@ -8,114 +8,33 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from os import PathLike
 from pathlib import Path
-from typing import Annotated, Any, Literal
+from typing import Any
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError
+import numpy as np
+from pydantic import ValidationError
 
 from . import checks
 from .priors.base import LinearGaussianPrior
 from .priors.registry import PRIORS, build_prior
 from .snapshots.files import read_snapshots
+from .snapshots.growth import Growth
+from .snapshots.scaling import Scaling, fit_scaling
 from .snapshots.series import SnapshotSeries
 from .study_problems import Problem, line_of, problem_of, refuse, syntax_line, unknown_key
+from .study_tables import (
+    DataTable,
+    GrowthTable,
+    HoldOutTable,
+    NoiseTable,
+    OutputTable,
+    PriorTable,
+    ScalingTable,
+    SolveTable,
+    Tables,
+    UnitsTable,
+)
 
-__all__ = ["DataTable", "HoldOutTable", "NoiseTable", "OutputTable", "SolveTable", "Study", "UnitsTable", "read_study"]
-
-_Names = Annotated[tuple[str, ...], Field(strict=False)]
-
-
-class _Table(BaseModel):
-    """A table of the study file: no key but the known ones, no silent conversion, nothing changed afterwards."""
-
-    model_config = ConfigDict(frozen=True, extra="forbid", strict=True)
-
-
-class StudyTable(_Table):
-    """[study]: what it is called, and the seed of every random number in it."""
-
-    title: str = ""
-    seed: int = Field(default=0, ge=0)
-
-
-class DataTable(_Table):
-    """[data]: the file, looked up from the folder of the study file, and what its columns mean.
-
-    An .npz archive names its own columns; any other file needs `time` and `position`.
-    """
-
-    file: str = Field(min_length=1)
-    time: str | None = None
-    position: _Names | None = Field(default=None, min_length=1)
-    weight: str | None = None
-    label: str | None = None
-    features: _Names = ()
-
-
-class UnitsTable(_Table):
-    """[units]: words for tables and axes; nothing is converted."""
-
-    time: str = ""
-    length: str = ""
-
-
-class SolveTable(_Table):
-    """[solve]: the L1 error of the marginals to reach, and the largest number of sweeps (default: the solver's own)."""
-
-    tolerance: float = Field(default=1e-6, gt=0, allow_inf_nan=False)
-    sweeps: int | None = Field(default=None, ge=1)
-
-
-class OutputTable(_Table):
-    """[output]: how much is written, and how."""
-
-    paths: int = Field(default=200, ge=1)
-    path_times: int = Field(default=41, ge=2)
-    intermediate: int = Field(default=5, ge=1)
-    format: Literal["csv", "parquet"] = "csv"
-    links: int = Field(default=3, ge=1)
-
-
-class HoldOutTable(_Table):
-    """[holdout]: draws from each prediction, resamples and simulations, and the feature that names replicates."""
-
-    draws: int = Field(default=1000, ge=2)
-    repeats: int = Field(default=100, ge=2)
-    simulations: int = Field(default=199, ge=19)
-    replicates: str | None = None
-
-
-class NoiseTable(BaseModel):
-    """[noise]: names of one or two parameters of the prior, each with the list of levels to try."""
-
-    model_config = ConfigDict(frozen=True, extra="allow", strict=True)
-
-    @property
-    def levels(self) -> dict[str, Any]:
-        """Name -> levels; empty if nothing is to be profiled."""
-        return dict(self.model_extra or {})
-
-
-class PriorTable(BaseModel):
-    """[prior]: its kind, and the parameters of that kind, which the prior itself checks."""
-
-    model_config = ConfigDict(frozen=True, extra="allow", strict=True)
-    kind: str
-
-    @property
-    def parameters(self) -> dict[str, Any]:
-        """Every key but `kind`."""
-        return dict(self.model_extra or {})
-
-
-class _Tables(_Table):
-    study: StudyTable = StudyTable()
-    data: DataTable
-    units: UnitsTable = UnitsTable()
-    prior: PriorTable
-    solve: SolveTable = SolveTable()
-    output: OutputTable = OutputTable()
-    holdout: HoldOutTable = HoldOutTable()
-    noise: NoiseTable = NoiseTable()
+__all__ = ["Study", "read_study"]
 
 
 @dataclass(frozen=True)
@@ -126,7 +45,8 @@ class Study:
     ----------
     path : Path, where it stands; the data file is looked up from its folder.
     text : str, as it was read.
-    title, seed, data, units, prior, solve, output, holdout, noise : its tables; title and seed are those of [study].
+    title, seed, data, units, prior, solve, output, holdout, noise, scaling, growth : its tables; title and seed are those
+        of [study].
     """
 
     path: Path
@@ -140,6 +60,8 @@ class Study:
     output: OutputTable
     holdout: HoldOutTable
     noise: NoiseTable
+    scaling: ScalingTable
+    growth: GrowthTable | None
 
     @property
     def data_file(self) -> Path:
@@ -147,22 +69,48 @@ class Study:
         return self.path.parent / self.data.file
 
     def read_series(self) -> SnapshotSeries:
-        """Read the snapshots.
+        """Read the snapshots, in the coordinates that are fitted: scaled where the study says so.
 
         Raises
         ------
         InputError
             If the file or one of its columns is missing, or a value in it cannot be used.
         """
-        return read_snapshots(
+        return self.read_scaled()[0]
+
+    def read_scaled(self) -> tuple[SnapshotSeries, Scaling]:
+        """The snapshots as `read_series` gives them, and the way from the file's coordinates to theirs and back."""
+        features = list(self.data.features)
+        rates = () if self.growth is None else (self.growth.rate, self.growth.birth, self.growth.death)
+        features += [name for name in rates if isinstance(name, str) and name not in features]
+        series = read_snapshots(
             self.data_file,
             time=self.data.time,
             position=None if self.data.position is None else list(self.data.position),
             weight=self.data.weight,
             label=self.data.label,
-            features=list(self.data.features),
+            features=features,
             units={"time": self.units.time, "length": self.units.length},
         )
+        if self.growth is not None:
+            series = series.with_growth(Growth(**self.growth.model_dump()))
+        scaling = fit_scaling(
+            series, self.scaling.kind, components=self.scaling.components, snapshots=self._fitted_on(series)
+        )
+        return scaling.scale(series), scaling
+
+    def _fitted_on(self, series: SnapshotSeries) -> list[int] | None:
+        """Numbers of the snapshots at the times of scaling.fit."""
+        found = []
+        for t in self.scaling.fit:
+            at = np.flatnonzero(series.times == t)
+            if not at.size:
+                raise checks.InputError(
+                    f"no snapshot to fit the scaling on; scaling.fit holds {t:g} and the times are "
+                    f"{', '.join(f'{time:g}' for time in series.times)}; name some of these"
+                )
+            found.append(int(at[0]))
+        return found or None
 
     def build_prior(self) -> LinearGaussianPrior:
         """Build the prior of [prior]."""
@@ -174,8 +122,8 @@ def read_study(path: str | PathLike[str]) -> Study:
 
     Parameters
     ----------
-    path : path of a TOML file with the tables [data] and [prior], and if wanted [study], [units], [solve], [output],
-        [holdout], [noise].
+    path : path of a TOML file with the tables [data] and [prior], and if wanted [study], [units], [scaling], [growth],
+        [solve], [output], [holdout], [noise].
 
     Raises
     ------
@@ -209,7 +157,7 @@ def read_study(path: str | PathLike[str]) -> Study:
     problems = []
     found = None
     try:
-        found = _Tables.model_validate(content)
+        found = Tables.model_validate(content)
     except ValidationError as cause:
         # Rules of a union or a container can report one key twice; a key is named once.
         errors = {tuple(error["loc"]): error for error in cause.errors(include_url=False)}
@@ -229,6 +177,8 @@ def read_study(path: str | PathLike[str]) -> Study:
         output=found.output,
         holdout=found.holdout,
         noise=found.noise,
+        scaling=found.scaling,
+        growth=found.growth,
     )
 
 
@@ -248,8 +198,8 @@ def _read_text(path: Path) -> str:
 def _known_keys(content: Mapping[str, Any]) -> dict[str, list[str]]:
     """The known keys of every table; those of [prior] depend on its kind."""
     keys = {
-        name: list(field.annotation.model_fields)  # type: ignore[union-attr]
-        for name, field in _Tables.model_fields.items()
+        name: list((GrowthTable if name == "growth" else field.annotation).model_fields)  # type: ignore[union-attr]
+        for name, field in Tables.model_fields.items()
     }
     prior = content.get("prior")
     kind = prior.get("kind") if isinstance(prior, Mapping) else None
@@ -262,7 +212,7 @@ def _known_keys(content: Mapping[str, Any]) -> dict[str, list[str]]:
 
 def _unnamed_columns(content: Mapping[str, Any], text: str) -> list[Problem]:
     data = content.get("data")
-    if not isinstance(data, Mapping) or str(data.get("file")).endswith(".npz"):
+    if not isinstance(data, Mapping) or str(data.get("file")).endswith((".npz", ".h5ad")):
         return []
     line = line_of(text, ["data"])
     examples = {"time": '"t"', "position": '["x", "y"]'}
@@ -320,7 +270,9 @@ def _refused_by_prior(kind: str, given: dict[str, Any], content: Mapping[str, An
         prior = build_prior(kind, given)
         data = content.get("data")
         position = data.get("position") if isinstance(data, Mapping) else None
-        if isinstance(position, list) and position:
+        # Components and scaled coordinates are counted when the data are read.
+        counted = not str(data.get("file")).endswith(".h5ad") and "scaling" not in content if position else False
+        if counted and isinstance(position, list):
             prior.linear_drift(len(position))
             prior.diffusion_matrix(len(position))
     except checks.InputError as cause:

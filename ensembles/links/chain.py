@@ -19,10 +19,10 @@ import numpy as np
 from scipy.sparse import csr_matrix, identity
 
 from .. import checks
+from ..bridges.images import draw_images
 from ..bridges.paths import Paths
 from ..priors.base import LinearGaussianPrior
 from ..priors.pinned import pinned_steps
-from ..bridges.images import draw_images
 from .particle_links import ParticleLinks
 
 if TYPE_CHECKING:

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 from .. import writing
 from ..checks import InputError
 from .archive import read_archive, write_archive
+from .cells import read_cells, write_cells
 from .series import SnapshotSeries
 from .table import ChosenColumns, choose_columns, require_columns, series_from_frame
 
@@ -21,7 +22,7 @@ if TYPE_CHECKING:
 __all__ = ["read_snapshots", "write_snapshots"]
 
 _SEPARATORS = {".csv": ",", ".tsv": "\t"}
-_SUFFIXES = (*_SEPARATORS, ".parquet", ".npz")
+_SUFFIXES = (*_SEPARATORS, ".parquet", ".npz", ".h5ad")
 # What counts as an empty cell of a number column; a label or a text feature keeps these words.
 _EMPTY = ["", "NA", "N/A", "NaN", "nan", "null", "NULL"]
 
@@ -40,6 +41,9 @@ def read_snapshots(
 
     ``.csv`` and ``.tsv`` are UTF-8 text with a header line, a decimal point and one row per particle; ``.parquet`` is
     the same as columns (it needs ``pip install "ensembles[parquet]"``). Rows of exactly equal time are one snapshot.
+    ``.h5ad`` is an AnnData file of cells (it needs ``pip install "ensembles[cells]"``): `time`, `weight` and `label` are
+    columns of .obs, and times may be words such as "day 2"; `position` is one key of .obsm, or "pca:30" for components
+    made of .X; `features` are columns of .obs or names of genes. Only what is named is read.
     ``.npz`` is a numpy archive without pickled objects; it names its own columns, so that `time` and `position` may be
     left out. Its arrays are
 
@@ -61,7 +65,7 @@ def read_snapshots(
 
     Parameters
     ----------
-    path : file name ending in .csv, .tsv, .parquet or .npz
+    path : file name ending in .csv, .tsv, .parquet, .npz or .h5ad
     time, position : column of the times and columns of the coordinates; of an archive, the coordinates to keep
     weight, label, features : further columns; of an archive, `features` are those to keep (all when left out)
     units : {"time": ..., "length": ...}, used on axes only; an archive's own units hold where none are given
@@ -84,6 +88,10 @@ def read_snapshots(
       t_s = 4 s: 1 particle
     """
     file = _existing_file(path)
+    if file.suffix == ".h5ad":
+        return read_cells(
+            file, time=time, position=position, weight=weight, label=label, features=features, units=units
+        )
     if file.suffix == ".npz":
         _refuse_archive_columns(weight, label)
         return read_archive(file, time=time, position=position, features=features, units=units)
@@ -103,7 +111,7 @@ def read_snapshots(
 
 
 def write_snapshots(series: SnapshotSeries, path: str | os.PathLike[str]) -> None:
-    """Write a series as .npz (loses nothing), or as .csv, .tsv or .parquet with the columns of `to_frame`.
+    """Write a series as .npz or .h5ad (which lose nothing), or as .csv, .tsv or .parquet with the columns of `to_frame`.
 
     The file appears under its name only when it is complete. A table does not hold units and original row numbers, and
     its ``weight`` column is exact to rounding.
@@ -126,6 +134,8 @@ def write_snapshots(series: SnapshotSeries, path: str | os.PathLike[str]) -> Non
     _require_suffix(file)
     if file.suffix == ".npz":
         write_archive(series, file)
+    elif file.suffix == ".h5ad":
+        write_cells(series, file)
     else:
         writing.write_table(file, series.to_frame())
 

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from .columns import duplicate_count, time_text
+from .counts import looks_like_counts
 
 if TYPE_CHECKING:
     from .series import SnapshotSeries
@@ -42,6 +43,11 @@ def series_notes(series: SnapshotSeries) -> tuple[str, ...]:
     for axis, name in enumerate(series.position_names):
         if all((cloud[:, axis] == first[axis]).all() for cloud in series.clouds):
             found.append(f"coordinate {name} is {first[axis]:g} for every particle: it carries no information")
+    if looks_like_counts(np.concatenate(series.clouds)):
+        found.append(
+            "the coordinates are whole numbers with a variance far above their mean, like raw counts: normalise, take "
+            "logarithms and make components first"
+        )
     return tuple(found)
 
 
