@@ -277,10 +277,10 @@ COVERAGE = [
     for d in (1, 2, 5)
 ]
 NOISE = [
-    ("Brownian", 1, 200, 3, 80, 40),
-    ("Brownian", 2, 200, 3, 60, 30),
-    ("Brownian", 1, 200, 5, 40, 30),
-    ("Ornstein-Uhlenbeck", 1, 200, 3, 60, 30),
+    ("Brownian", 1, 200, 3, 60, 30),
+    ("Brownian", 2, 200, 3, 40, 30),
+    ("Brownian", 1, 200, 5, 30, 30),
+    ("Ornstein-Uhlenbeck", 1, 200, 3, 40, 30),
 ]
 SIMULATIONS = 39
 
@@ -306,8 +306,8 @@ def run(section: str, out: Path, workers: int) -> None:
         print(frame.round(3).to_string(index=False))
         frame.to_csv(out / "p_values.csv", index=False)
     elif section == "power":
-        frame = power_table(2, 100, 50, SIMULATIONS, workers=workers)
-        print(f"two dimensions, n = 100, 50 repeats of {SIMULATIONS} simulations; share of p-values at or below 0.05")
+        frame = power_table(2, 100, 40, SIMULATIONS, workers=workers)
+        print(f"two dimensions, n = 100, 40 repeats of {SIMULATIONS} simulations; share of p-values at or below 0.05")
         print(frame.round(3).to_string(index=False))
         frame.to_csv(out / "power.csv", index=False)
     elif section == "entropy":
