@@ -82,6 +82,8 @@ def test_the_rate_and_the_diffusion_of_a_trap_jointly():
     assert len(found.levels) == 9
     assert set(found.interval) == {"rate", "diffusion"}
     assert found.resampled.shape == (10, 2)
+    apart = abs(np.corrcoef(np.log(found.resampled).T)[0, 1]) <= 0.8
+    assert apart != any("told together rather than apart" in sentence for sentence in found.warnings)
     assert not any("one left-out snapshot" in sentence for sentence in found.warnings)
 
 

@@ -29,6 +29,7 @@ _ENERGY_DRAWS = 600
 _ENERGY_PARTICLES = 2000
 _BOOTSTRAP_TOLERANCE = 1e-4  # L1 error of the marginals; resampled weights themselves move by far more
 _CHANCE = 0.9
+_RIDGE = 0.8  # correlation of two parameters beyond which it is worth a sentence
 
 
 @dataclass(frozen=True)
@@ -284,6 +285,14 @@ def _warnings(
             found.append(
                 f"the levels of {name} are too coarse for its interval, {interval[name][0]:.3g} to {interval[name][1]:.3g}, "
                 "which was interpolated between them; profile again with levels around it"
+            )
+    if len(grid) == 2 and np.ptp(maxima, axis=0).all():
+        correlation = float(np.corrcoef(maxima.T)[0, 1])
+        if abs(correlation) > _RIDGE:
+            first, second = grid
+            found.append(
+                f"{first} and {second} are told together rather than apart: their best values correlate {correlation:.2f} "
+                "over the resamples; fix one of them from elsewhere to learn the other"
             )
     if all(row.deficit <= 2.0 * row.deficit_error for row in rows if row.deficit > 0):
         found.append(
