@@ -5,7 +5,7 @@ from __future__ import annotations
 import inspect
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from os import PathLike
 from pathlib import Path
 from typing import Annotated, Any, Literal
@@ -146,8 +146,8 @@ class Study:
     holdout: HoldOutTable
     noise: NoiseTable
     identity: str = "lost"
-    links: LinksTable = LinksTable()
-    box: BoxTable = BoxTable()
+    links: LinksTable = field(default_factory=LinksTable)
+    box: BoxTable = field(default_factory=BoxTable)
 
     @property
     def data_file(self) -> Path:

@@ -94,7 +94,9 @@ def box_problems(content: Mapping[str, Any], text: str) -> list[Problem]:
     prior, data = content.get("prior"), content.get("data")
     kind = prior.get("kind") if isinstance(prior, Mapping) else None
     if box is not None and kind != "brownian":
-        message = f"only a Brownian prior can live in a box; prior.kind is {kind!r}; remove [box], or use kind = 'brownian'"
+        message = (
+            f"only a Brownian prior can live in a box; prior.kind is {kind!r}; remove [box], or use kind = 'brownian'"
+        )
         return [Problem(line_of(text, ["box"]), message)]
     position = data.get("position") if isinstance(data, Mapping) else None
     if box is not None and isinstance(position, list) and len(position) != box.dimension:

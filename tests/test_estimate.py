@@ -1,5 +1,7 @@
 """Parameters from unlabelled frames: simulation, families, errors, profiles, refusals; argon with hidden labels."""
 
+from itertools import pairwise
+
 import links_study
 import numpy as np
 import pytest
@@ -15,7 +17,7 @@ def frames(prior, times, count, seed, width=12.0, dimension=2, error=0.0):
     """Shuffled frames of `count` particles under a prior, each coordinate measured with an error."""
     rng = np.random.default_rng(seed)
     clouds = [rng.uniform(0.0, width, (count, dimension))]
-    for before, after in zip(times[:-1], times[1:]):
+    for before, after in pairwise(times):
         clouds.append(prior.transition(after - before, dimension).sample(clouds[-1], rng))
     seen = [rng.permutation(cloud + error * rng.standard_normal(cloud.shape)) for cloud in clouds]
     return ensembles.SnapshotSeries.from_arrays(times, seen, units={"time": "s", "length": "µm"})
@@ -31,7 +33,9 @@ def family(series, kind="brownian", **changes):
 
 def test_evidence_of_few_particles_is_below_the_exact_one_and_its_gradient_is_right():
     series = frames(ensembles.Brownian(0.3), [0.0, 1.0], 8, 0, width=4.0)
-    evidence = Evidence(series, family(series, drift=True), EstimateOptions(links=ensembles.LinkOptions(tolerance=1e-9)))
+    evidence = Evidence(
+        series, family(series, drift=True), EstimateOptions(links=ensembles.LinkOptions(tolerance=1e-9))
+    )
     free = np.array([np.log(0.3), 0.1, -0.2])
     value, gradient = evidence.at(free)
     step = evidence.family.build(free)[0].transition(1.0, 2)
@@ -147,7 +151,10 @@ SERIES = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [[[0.0], [5.0]], [[0.1
         ({"family": "ornstein-uhlenbeck", "drift": True}, "no constant drift"),
         ({"family": "brownian", "localisation": "estimate"}, "cannot be told from diffusion over equal gaps"),
         ({"family": "brownian", "localisation": "guess"}, "unknown localisation"),
-        ({"family": "ornstein-uhlenbeck", "box": ensembles.Box([-1.0], [9.0])}, "only a Brownian prior can live in a box"),
+        (
+            {"family": "ornstein-uhlenbeck", "box": ensembles.Box([-1.0], [9.0])},
+            "only a Brownian prior can live in a box",
+        ),
         ({"family": "brownian", "box": ensembles.Box([0.0], [5.1])}, "positions must lie in the box"),
     ],
 )

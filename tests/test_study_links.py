@@ -17,7 +17,9 @@ def write_study(folder, *, identity="same", diffusion='"0.2 um^2/s"', box="", li
     rng = np.random.default_rng(seed)
     start = rng.random((40, 2)) * 20.0
     end = start + np.sqrt(2 * 0.2 * 0.5) * rng.standard_normal(start.shape)
-    rows = [(0.0, *x) for x in start[: counts[0]]] + [(0.5, *np.clip(x, 0, 20)) for x in rng.permutation(end)[: counts[1]]]
+    rows = [(0.0, *x) for x in start[: counts[0]]] + [
+        (0.5, *np.clip(x, 0, 20)) for x in rng.permutation(end)[: counts[1]]
+    ]
     pandas.DataFrame(rows, columns=["t_s", "x", "y"]).to_csv(folder / "data.csv", index=False)
     study = folder / "study.toml"
     study.write_text(
