@@ -98,7 +98,8 @@ class AssignmentCertificate:
     Attributes
     ----------
     converged : whether row and column error met the tolerance.
-    message_change : largest change of a log-message in the last iteration, over edges that are not yet decided.
+    message_change : largest change of a log-message in the last iteration, over edges with a probability between
+        0.1 % and 99.9 %; those of decided edges may grow without end.
     row_error, column_error : largest |Σ probabilities - 1| of a row and of a column, loners included.
     evidence_difference : |log Z_B from the beliefs - log Z_B from the messages|: 0 at a stationary point.
     iterations : rounds of messages.
