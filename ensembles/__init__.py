@@ -27,6 +27,8 @@ _HOMES = {
     "KernelEnds": "bridges.smooth",
     "BridgeModel": "estimator",
     "Box": "priors.box",
+    "Kinetic": "priors.kinetic",
+    "fit_kinetic_bridge": "bridges.kinetic",
     "link_particles": "links.link",
     "LinkOptions": "links.candidates",
     "chain_links": "links.chain",
@@ -76,6 +78,7 @@ if TYPE_CHECKING:
     from .bridges.closed_form import gaussian_bridge as gaussian_bridge
     from .bridges.fit import SolverOptions as SolverOptions
     from .bridges.fit import fit_bridge as fit_bridge
+    from .bridges.kinetic import fit_kinetic_bridge as fit_kinetic_bridge
     from .bridges.smooth import KernelEnds as KernelEnds
     from .bridges.smooth import MixtureEnds as MixtureEnds
     from .bridges.storage import load_bridge as load_bridge
@@ -98,6 +101,7 @@ if TYPE_CHECKING:
     from .links.link import link_particles as link_particles
     from .priors.box import Box as Box
     from .priors.brownian import Brownian as Brownian
+    from .priors.kinetic import Kinetic as Kinetic
     from .priors.ornstein_uhlenbeck import OrnsteinUhlenbeck as OrnsteinUhlenbeck
     from .schrodinger.solution import ConvergenceError as ConvergenceError
     from .snapshots.files import read_snapshots as read_snapshots

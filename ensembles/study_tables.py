@@ -6,6 +6,8 @@ from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, ConfigDict, Field
 
+from .study_links import BoxTable, LinksTable
+
 __all__ = [
     "DataTable",
     "GrowthTable",
@@ -30,10 +32,11 @@ class _Table(BaseModel):
 
 
 class StudyTable(_Table):
-    """[study]: what it is called, and the seed of every random number in it."""
+    """[study]: what it is called, the seed of its random numbers, and identity: are the "same" particles in all frames?"""
 
     title: str = ""
     seed: int = Field(default=0, ge=0)
+    identity: Literal["lost", "same"] = "lost"
 
 
 class DataTable(_Table):
@@ -138,3 +141,5 @@ class Tables(_Table):
     output: OutputTable = OutputTable()
     holdout: HoldOutTable = HoldOutTable()
     noise: NoiseTable = NoiseTable()
+    links: LinksTable = LinksTable()
+    box: BoxTable = BoxTable()
