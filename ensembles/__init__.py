@@ -52,6 +52,10 @@ _HOMES = {
     "label_flows": "lineage.fates",
     "feature_trends": "lineage.features",
     "early_features": "lineage.features",
+    "LineageProbabilities": "lineage.uncertainty",
+    "lineage_errors": "lineage.uncertainty",
+    "annotate_cells": "lineage.annotate",
+    "save_cells": "lineage.annotate",
     "implied_growth": "lineage.growth",
     "kept_weights": "lineage.growth",
     "masses": "lineage.growth",
@@ -85,6 +89,8 @@ if TYPE_CHECKING:
     from .checks import ComputationError as ComputationError
     from .checks import InputError as InputError
     from .estimator import BridgeModel as BridgeModel
+    from .lineage.annotate import annotate_cells as annotate_cells
+    from .lineage.annotate import save_cells as save_cells
     from .lineage.fates import ancestors as ancestors
     from .lineage.fates import commitment as commitment
     from .lineage.fates import descendants as descendants
@@ -94,6 +100,8 @@ if TYPE_CHECKING:
     from .lineage.growth import implied_growth as implied_growth
     from .lineage.growth import kept_weights as kept_weights
     from .lineage.growth import masses as masses
+    from .lineage.uncertainty import LineageProbabilities as LineageProbabilities
+    from .lineage.uncertainty import lineage_errors as lineage_errors
     from .links.candidates import LinkOptions as LinkOptions
     from .links.chain import chain_links as chain_links
     from .links.estimate import EstimateOptions as EstimateOptions

@@ -99,14 +99,41 @@ def test_contaminants_are_shed():
     assert_allclose(error, certificate.marginal_error, rtol=1e-3, atol=1e-13)
 
 
-def test_paths_follow_the_coupling_with_growth():
+def test_descendants_over_two_gaps_count_by_their_own_descendants():
+    bridge = ensembles.fit_bridge(growing(rate="net"), PRIOR, tolerance=1e-11)
+    first, second = bridge.coupling(0).matrix(), bridge.coupling(1).matrix()
+    weights = bridge.series.weights
+    joint = (first / weights[1]) @ second  # mass of the pairs (particle at the start, descendant at the end)
+    late = bridge.series.labels[2][:, None] == np.unique(bridge.series.labels[2])
+    expected = joint @ late / joint.sum(axis=1, keepdims=True)
+    assert_allclose(ensembles.descendants(bridge).to_numpy(), expected, atol=1e-9)
+    assert_allclose(joint.sum(axis=0), weights[2], rtol=1e-8)
+    early = bridge.series.labels[0][:, None] == np.unique(bridge.series.labels[0])
+    assert_allclose(ensembles.ancestors(bridge).to_numpy(), (joint / joint.sum(axis=0)).T @ early, atol=1e-9)
+    # Rates that differ make this another table than that of the conditional laws, one after the other.
+    naive = (first / first.sum(axis=1, keepdims=True)) @ (second / second.sum(axis=1, keepdims=True)) @ late
+    assert np.abs(naive - expected).max() > 0.05
+    by_label = ensembles.LineageProbabilities(by="label").evaluate(bridge)
+    mass = early.T @ joint @ late
+    assert_allclose(by_label, (mass / mass.sum(axis=1, keepdims=True)).ravel(), atol=1e-8)
+
+
+def test_paths_are_the_histories_of_the_last_snapshot():
     bridge = ensembles.fit_bridge(growing(rate="net", uncertainty=0.5), PRIOR)
     count = 30_000
-    members = bridge.sample_paths(count, [0.0, 1.0], rng=1).members
-    seen = np.bincount(members[:, 0], minlength=60) / count
-    expected = bridge.gap_weights[0][0]
-    assert (np.abs(seen - expected) < 6 * np.sqrt(expected / count)).all()
-    assert np.abs(bridge.series.weights[0] - expected).max() > 6 * np.sqrt(1 / 60 / count)
+    paths = bridge.sample_paths(count, [0.0, 0.5, 1.0, 2.5], rng=1)
+    joint = (bridge.coupling(0).matrix() / bridge.gap_weights[0][1]) @ bridge.coupling(1).matrix()
+    for k, expected in ((0, joint.sum(axis=1)), (2, bridge.series.weights[2])):
+        seen = np.bincount(paths.members[:, k], minlength=expected.size) / count
+        assert (np.abs(seen - expected) < 6 * np.sqrt(expected / count)).all()
+    assert_allclose(paths.positions[:, 2], bridge.series.clouds[1][paths.members[:, 1]], rtol=0)
+    # Negative control: the first snapshot's own weights are others.
+    assert np.abs(bridge.series.weights[0] - joint.sum(axis=1)).max() > 6 * np.sqrt(1 / 60 / count)
+    middle = paths.positions[:, 1]
+    between = 0.5 * (paths.positions[:, 0] + paths.positions[:, 2])
+    # The pinned prior at half a gap of length 1: variance 2 D (1/2)(1/2), 5 standard errors.
+    variance = 2 * 0.4 * 0.25
+    assert_allclose((middle - between).var(axis=0), variance, atol=5 * variance * np.sqrt(2 / count))
 
 
 def test_density_between_snapshots_has_mass_one():

@@ -1,7 +1,7 @@
 """Values carried along the chain of couplings, in either direction, without an n by m matrix.
 
 Given its particle, what follows a snapshot does not depend on what came before it (the chain is Markov), so conditional
-expectations over several gaps are those over each gap, one after another.
+expectations over several gaps are those over each gap, one after another; forwards with growth, expected numbers are.
 """
 
 from __future__ import annotations
@@ -13,14 +13,38 @@ import numpy as np
 if TYPE_CHECKING:
     from ..bridges.bridge import Bridge
 
-__all__ = ["ancestor_weights", "draw_histories", "expected_at_end", "expected_at_start"]
+__all__ = ["ancestor_weights", "descendant_weights", "draw_histories", "expected_at_end", "expected_at_start"]
 
 
 def expected_at_end(bridge: Bridge, values: np.ndarray, start: int, end: int) -> np.ndarray:
-    """E[values at snapshot `end` | particle of snapshot `start`]: values (n_end, p), result (n_start, p)."""
+    """Mean of values (n_end, p) over the descendants at snapshot `end` of each particle of `start`; (n_start, p).
+
+    With growth a descendant on the way counts by the descendants that it leaves itself: numbers are carried, and divided
+    at the end.
+    """
+    if bridge.gap_weights is None:
+        for gap in range(end - 1, start - 1, -1):
+            values = bridge.coupling(gap).expectation(values)
+        return values
+    numbers = np.column_stack([values, np.ones(len(values))])
     for gap in range(end - 1, start - 1, -1):
-        values = bridge.coupling(gap).expectation(values)
-    return values
+        numbers = bridge.coupling(gap).expectation(numbers)
+        if gap > start:  # the first factor is common to a row
+            numbers = numbers * _growth_factor(bridge, gap)[:, None]
+            numbers = numbers / numbers[:, -1].max()
+    return numbers[:, :-1] / numbers[:, -1:]
+
+
+def descendant_weights(bridge: Bridge, start: int, end: int) -> np.ndarray:
+    """Share (n_start,) of the particles of snapshot `start` in the population of `end`; sum 1."""
+    later = bridge.gaps[end - 1].weights[1]
+    return ancestor_weights(bridge, later[:, None], start, end)[0][:, 0]
+
+
+def _growth_factor(bridge: Bridge, gap: int) -> np.ndarray:
+    """Relative number of descendants (n,) that each particle before a gap leaves after it."""
+    before, after = bridge.series.weights[gap], bridge.gaps[gap].weights[0]
+    return np.divide(after, before, out=np.zeros_like(after), where=before > 0)
 
 
 def expected_at_start(bridge: Bridge, values: np.ndarray, start: int, end: int) -> np.ndarray:

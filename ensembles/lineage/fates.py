@@ -20,8 +20,8 @@ __all__ = ["ancestors", "commitment", "descendants", "label_flows"]
 def descendants(bridge: Bridge, start: int = 0, end: int = -1) -> pandas.DataFrame:
     """Probability that a particle's descendants at a later snapshot carry each label.
 
-    P_i(l) = Σ_j 1[label of j is l] π_ij / Σ_j π_ij over the chain of couplings. These are inferences under the prior,
-    not observed lineages.
+    P_i(l) = Σ_j 1[label of j is l] π_ij / Σ_j π_ij over a gap, composed along the chain; with growth, a descendant on the
+    way counts by the descendants that it leaves. These are inferences under the prior, not observed lineages.
 
     Parameters
     ----------

@@ -1,0 +1,108 @@
+"""Cells that diffuse, divide, die and commit, with their true descendants; only snapshots of other cells are kept.
+
+Each cell wanders as dX = sqrt(2 D) dW in two coordinates, divides at the rate 0.9 where x > 0 and dies at the rate 0.5 where
+x < 0 (both rates rise over a width of 0.5). At the end it is called by its side: "right" or "left". A snapshot takes cells of
+founders of its own, so no cell and no clone is measured twice, as when every sample is destroyed. The cells of the first
+snapshot are let live on, unseen, for the truth.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+import ensembles
+
+DIFFUSION = 0.25
+TIMES = (0.0, 0.5, 1.0, 1.5, 2.0)
+_STEP = 0.02
+
+
+def net_rate(x):
+    """Net growth rate at positions (n, 2)."""
+    side = 1.0 / (1.0 + np.exp(-2.0 * x[:, 0]))
+    return 0.9 * side - 0.5 * (1.0 - side)
+
+
+@dataclass(frozen=True)
+class Branching:
+    """The series, and of every cell of the first snapshot: how many descendants it had, the share that went right, and
+    the chance that a descendant of a cell at its place goes right (from many clones of it)."""
+
+    series: ensembles.SnapshotSeries
+    descendants: np.ndarray
+    share: np.ndarray
+    chance: np.ndarray
+
+
+def live(x, duration, rng):
+    """Positions at the end and the founder of each living cell, of cells that start at x (n, 2)."""
+    founder = np.arange(len(x))
+    for _ in range(round(duration / _STEP)):
+        x = x + np.sqrt(2.0 * DIFFUSION * _STEP) * rng.normal(size=x.shape)
+        side = 1.0 / (1.0 + np.exp(-2.0 * x[:, 0]))
+        event = rng.random(len(x))
+        copies = 1 + (event < 0.9 * side * _STEP).astype(int) - (event > 1.0 - 0.5 * (1.0 - side) * _STEP)
+        x, founder = np.repeat(x, copies, axis=0), np.repeat(founder, copies)
+    return x, founder
+
+
+def simulate(count=1200, seed=0, clones=60):
+    """Snapshots of about `count` cells at three times, and the truth about the first of them."""
+    rng = np.random.default_rng(seed)
+    begin = lambda n: rng.normal(0.0, [1.0, 0.6], (n, 2))  # noqa: E731
+    first = begin(count)
+    clouds = [first]
+    for t in TIMES[1:]:
+        seen, _ = live(begin(3 * count), t, rng)
+        clouds.append(seen[rng.choice(len(seen), count, replace=False)])
+    labels = [np.where(cloud[:, 0] > 0, "right", "left") for cloud in clouds]
+    series = ensembles.SnapshotSeries.from_arrays(
+        TIMES, clouds, labels=labels, features={"net": [net_rate(cloud) for cloud in clouds]}
+    )
+    ends, founder = live(first, TIMES[-1], rng)
+    total = np.bincount(founder, minlength=count)
+    right = np.bincount(founder, weights=ends[:, 0] > 0, minlength=count)
+    ends, founder = live(np.repeat(first, clones, axis=0), TIMES[-1], rng)
+    founder //= clones
+    many, many_right = np.bincount(founder, minlength=count), np.bincount(founder, ends[:, 0] > 0, minlength=count)
+    return Branching(series, total, right / np.maximum(total, 1), many_right / np.maximum(many, 1))
+
+
+def reliability(predicted, truth, bins=5):
+    """Predicted and observed share that goes right, and the descendants counted, in bins of the prediction."""
+    rows = np.minimum((predicted * bins).astype(int), bins - 1)
+    counted = np.array([truth.descendants[rows == k].sum() for k in range(bins)])
+    mean = lambda values: np.array([  # noqa: E731
+        np.average(values[rows == k], weights=truth.descendants[rows == k]) if counted[k] else np.nan for k in range(bins)
+    ])  # fmt: skip
+    return mean(predicted), mean(truth.share), counted
+
+
+def brier(predicted, truth):
+    """Mean squared error of the prediction for every descendant."""
+    errors = (1.0 - predicted) ** 2 * truth.share + predicted**2 * (1.0 - truth.share)
+    return float(np.average(errors, weights=truth.descendants))
+
+
+def nearest_neighbours(series):
+    """The baseline: each cell becomes the nearest of the next snapshot."""
+    from scipy.spatial import cKDTree
+
+    rows = np.arange(len(series.clouds[0]))
+    for early, late in zip(series.clouds[:-1], series.clouds[1:]):
+        rows = cKDTree(late).query(early[rows])[1]
+    return (series.labels[-1][rows] == "right").astype(float)
+
+
+def predictions(truth, uncertainty=1.0):
+    """Probability of going right with growth known, unknown (unbalanced) and ignored."""
+    prior = ensembles.Brownian(diffusion=DIFFUSION)
+    cases = {
+        "known": ensembles.Growth("net"),
+        "unknown": ensembles.Growth(uncertainty=uncertainty),
+        "ignored": None,
+    }
+    return {
+        name: ensembles.descendants(ensembles.fit_bridge(truth.series.with_growth(growth), prior))["right"].to_numpy()
+        for name, growth in cases.items()
+    }
