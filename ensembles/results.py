@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from . import __version__, writing
+from .lineage_results import write_lineage
 from .overview import verdicts
 from .study import Study
 
@@ -89,7 +90,14 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
     bridge.save(folder / "bridge.npz")
     say("Drawing pictures", 0.85)
     figures = save_figures(bridge, folder, paths=paths, rng=picture_stream)
+    say("Following lineages", 0.9)
+    lineages, sentences = write_lineage(
+        bridge, folder, repeats=study.output.repeats, seed=seed, annotated=study.data_file.suffix == ".h5ad"
+    )
+    figures += lineages
     summary = _summary(study, bridge, seed)
+    summary["notes"] += [*bridge.notes, *sentences]
+    _write_scaling(study, paths, folder, summary)
     write_page(folder, summary, figures)
     writing.write_text(folder / "study.toml", study.text)
     # Last: the folder is known as a complete output by this file.
@@ -110,6 +118,22 @@ def _write_tables(study: Study, bridge: Bridge, paths: Paths, folder: Path, rng:
     writing.write_table(folder / "drift.csv", tables.drift_table(bridge, times, clouds))
     writing.write_table(folder / "moments.csv", tables.moments_table(bridge, paths.times))
     writing.write_table(folder / "certificate.csv", tables.certificate_table(bridge))
+
+
+def _write_scaling(study: Study, paths: Paths, folder: Path, summary: dict[str, Any]) -> None:
+    """The map of the coordinates, and the paths in the original ones."""
+    if study.scaling.kind == "none":
+        return
+    from dataclasses import replace
+
+    _, scaling = study.read_scaled()
+    writing.write_json(folder / "scaling.json", scaling.to_mapping())
+    original = replace(paths, positions=scaling.restore(paths.positions), names=scaling.original_names)
+    writing.write_table(folder / f"original_paths.{study.output.format}", original.to_frame())
+    summary["notes"].append(
+        f"positions, the prior and all tables but original_paths are in scaled coordinates ({scaling.kind}, "
+        f"{100 * scaling.kept:.4g} % of the variance); scaling.json maps them back"
+    )
 
 
 def _summary(study: Study, bridge: Bridge, seed: int) -> dict[str, Any]:

@@ -69,13 +69,14 @@ class SolveTable(_Table):
 
 
 class OutputTable(_Table):
-    """[output]: how much is written, and how."""
+    """[output]: how much is written, and how; `repeats` are the resamples for standard errors of lineages, 0 for none."""
 
     paths: int = Field(default=200, ge=1)
     path_times: int = Field(default=41, ge=2)
     intermediate: int = Field(default=5, ge=1)
     format: Literal["csv", "parquet"] = "csv"
     links: int = Field(default=3, ge=1)
+    repeats: int = Field(default=20, ge=0)
 
 
 class ScalingTable(_Table):

@@ -25,12 +25,13 @@ def net_rate(x):
 
 @dataclass(frozen=True)
 class Branching:
-    """The series, and of every cell of the first snapshot: how many descendants it had, the share that went right, and
-    the chance that a descendant of a cell at its place goes right (from many clones of it)."""
+    """The series, and of every cell of the first snapshot: how many descendants it had and the share that went right; of
+    many clones of it, the mean number of descendants and the share of them that went right, its true chance."""
 
     series: ensembles.SnapshotSeries
     descendants: np.ndarray
     share: np.ndarray
+    expected: np.ndarray
     chance: np.ndarray
 
 
@@ -65,17 +66,19 @@ def simulate(count=1200, seed=0, clones=60):
     ends, founder = live(np.repeat(first, clones, axis=0), TIMES[-1], rng)
     founder //= clones
     many, many_right = np.bincount(founder, minlength=count), np.bincount(founder, ends[:, 0] > 0, minlength=count)
-    return Branching(series, total, right / np.maximum(total, 1), many_right / np.maximum(many, 1))
+    chance = many_right / np.maximum(many, 1)
+    return Branching(series, total, right / np.maximum(total, 1), many / clones, chance)
 
 
 def reliability(predicted, truth, bins=5):
-    """Predicted and observed share that goes right, and the descendants counted, in bins of the prediction."""
+    """Predicted and true share that goes right, of all clones' descendants, and cells counted, in bins of the prediction."""
     rows = np.minimum((predicted * bins).astype(int), bins - 1)
-    counted = np.array([truth.descendants[rows == k].sum() for k in range(bins)])
-    mean = lambda values: np.array([  # noqa: E731
-        np.average(values[rows == k], weights=truth.descendants[rows == k]) if counted[k] else np.nan for k in range(bins)
-    ])  # fmt: skip
-    return mean(predicted), mean(truth.share), counted
+    counted = np.bincount(rows, minlength=bins)
+    total = np.bincount(rows, truth.expected, minlength=bins)
+    with np.errstate(invalid="ignore"):
+        said = np.bincount(rows, truth.expected * predicted, minlength=bins) / total
+        seen = np.bincount(rows, truth.expected * truth.chance, minlength=bins) / total
+    return said, seen, counted
 
 
 def brier(predicted, truth):
@@ -94,7 +97,7 @@ def nearest_neighbours(series):
     return (series.labels[-1][rows] == "right").astype(float)
 
 
-def predictions(truth, uncertainty=1.0):
+def predictions(truth, uncertainty=2.0):
     """Probability of going right with growth known, unknown (unbalanced) and ignored."""
     prior = ensembles.Brownian(diffusion=DIFFUSION)
     cases = {

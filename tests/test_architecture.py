@@ -36,7 +36,8 @@ MAY_IMPORT = {
     "link_results": FOUNDATION | {"study", "links", "report", "snapshots"},
     "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems", "study_links", "study_tables"},
     "overview": FOUNDATION | {"snapshots", "priors", "report"},
-    "results": FOUNDATION | {"study", "overview", "report", "lineage", "bridges", "schrodinger"},
+    "results": FOUNDATION | {"study", "overview", "report", "lineage_results", "bridges", "schrodinger"},
+    "lineage_results": FOUNDATION | {"lineage", "report", "bridges"},
     "assess": FOUNDATION | {"study", "report", "assessment", "bridges"},
     "cli": FOUNDATION
     | {"study", "overview", "results", "link_results", "assess", "report", "bridges", "snapshots", "priors"},

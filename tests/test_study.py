@@ -50,6 +50,7 @@ def test_a_study_with_its_defaults(tmp_path):
         "intermediate": 5,
         "format": "csv",
         "links": 3,
+        "repeats": 20,
     }
     assert study.data_file == tmp_path / "beads.csv"
     assert study.text == GOOD

@@ -1,0 +1,104 @@
+"""What `ensembles solve` writes of lineages where the study names a label, and of growth where it names rates."""
+
+from __future__ import annotations
+
+from itertools import pairwise
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from . import checks, writing
+
+if TYPE_CHECKING:
+    from .bridges.bridge import Bridge
+
+__all__ = ["write_lineage"]
+
+_LARGEST_REPEATED = 4_000_000  # pairs of particles in all gaps up to which resampling is done unasked
+
+
+def write_lineage(
+    bridge: Bridge, folder: Path, *, repeats: int, seed: int, annotated: bool
+) -> tuple[list[tuple[str, str]], list[str]]:
+    """Write lineage tables and pictures into `folder`.
+
+    Parameters
+    ----------
+    bridge : a bridge between particles.
+    repeats : resamples for the standard errors; 0 for none.
+    seed : of the random numbers.
+    annotated : whether an .h5ad of all results is written too.
+
+    Returns
+    -------
+    pictures as (file name, caption), and sentences worth knowing.
+    """
+    from .lineage.growth import masses
+    from .report import lineage_tables as tables
+    from .report.figures.lineage import save_lineage_figures
+
+    series, notes, pictures = bridge.series, [], []
+    if series.growth is not None:
+        growth = tables.growth_table(bridge)
+        writing.write_table(folder / "growth.csv", growth)
+        writing.write_table(folder / "kept.csv", tables.kept_table(bridge))
+        writing.write_table(folder / "masses.csv", masses(bridge))
+        if not series.growth.exact:
+            pictures += save_lineage_figures(folder, series, growth=growth)
+    labelled = [k for k in range(len(series)) if series.labels is not None and (series.labels[k] != "").any()]
+    if series.labels is not None and len(labelled) < 2:
+        notes.append("labels are missing at all times but one: no lineage tables were written")
+    if len(labelled) >= 2:
+        found, sentences = _write_labels(bridge, folder, labelled, repeats, seed)
+        pictures, notes = found + pictures, notes + sentences
+        if annotated and len(labelled) == len(series):
+            from .lineage.annotate import annotate_cells, save_cells
+
+            save_cells(annotate_cells(bridge), folder / "cells.h5ad")
+    return pictures, notes
+
+
+def _write_labels(
+    bridge: Bridge, folder: Path, labelled: list[int], repeats: int, seed: int
+) -> tuple[list[tuple[str, str]], list[str]]:
+    from .lineage.fates import label_flows
+    from .lineage.features import CAVEAT, early_features, feature_trends
+    from .lineage.labels import label_notes
+    from .lineage.uncertainty import LineageProbabilities, lineage_errors
+    from .report import lineage_tables as tables
+    from .report.figures.lineage import save_lineage_figures
+
+    series, notes = bridge.series, list(label_notes(bridge.series))
+    first, last = labelled[0], labelled[-1]
+    writing.write_table(folder / "descendants.csv", tables.descendants_table(bridge, last))
+    writing.write_table(folder / "ancestors.csv", tables.ancestors_table(bridge, first))
+    flows = label_flows(bridge) if any(b - a == 1 for a, b in pairwise(labelled)) else None
+    if flows is not None:
+        writing.write_table(folder / "flows.csv", flows)
+    trends = None
+    numeric = [name for name, columns in series.features.items() if _numbers(columns)]
+    if numeric and last > 0:
+        trends = feature_trends(bridge, numeric, end=last, rng=seed)
+        writing.write_table(folder / "trends.csv", trends)
+        if np.count_nonzero(series.weights[first]) >= 8:
+            writing.write_table(folder / "early_features.csv", early_features(bridge, numeric, start=first, end=last))
+            notes.append(f"early_features.csv: {CAVEAT}")
+    pairs = sum(len(a) * len(b) for a, b in zip(series.clouds, series.clouds[1:]))
+    if repeats and pairs <= _LARGEST_REPEATED:
+        for direction in ("descendants", "ancestors"):
+            quantity = LineageProbabilities(direction, first, last, by="label")
+            try:
+                frame = lineage_errors(bridge, quantity, repeats=repeats, rng=seed)
+            except checks.ComputationError as cause:
+                notes.append(f"no standard errors of {direction}: {cause}")
+                continue
+            writing.write_table(folder / f"{direction}_errors.csv", frame)
+            notes += [f"{direction}_errors.csv: {sentence}" for sentence in frame.attrs["warnings"]]
+    elif repeats:
+        notes.append(f"no standard errors of lineages: {pairs} pairs of particles; ask for lineage_errors in Python")
+    return save_lineage_figures(folder, series, flows=flows, trends=trends), notes
+
+
+def _numbers(columns: tuple[np.ndarray, ...]) -> bool:
+    return all(column.dtype.kind in "biuf" and np.isfinite(column.astype(float)).all() for column in columns)
