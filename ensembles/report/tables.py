@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..snapshots.summary import describe_snapshots
-from .wording import CAUTIONS, bracketed, gap_sentence, speed_unit, square_unit, warning_sentences
+from .wording import CAUTIONS, GROWTH_CAUTION, bracketed, gap_sentence, speed_unit, square_unit, warning_sentences
 
 if TYPE_CHECKING:
     import pandas
@@ -240,7 +240,7 @@ def summary(bridge: Bridge) -> dict[str, Any]:
         ],
         "warnings": warning_sentences(bridge),
         "notes": list(series.notes()),
-        "cautions": list(CAUTIONS),
+        "cautions": [GROWTH_CAUTION if series.growth and "birth and death" in text else text for text in CAUTIONS],
     }
     return _finite(found)
 

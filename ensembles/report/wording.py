@@ -12,6 +12,7 @@ if TYPE_CHECKING:
 
 __all__ = [
     "CAUTIONS",
+    "GROWTH_CAUTION",
     "axis_name",
     "bare_name",
     "bracketed",
@@ -34,6 +35,12 @@ CAUTIONS = (
     "Not for clinical, diagnostic or safety decisions without licensed practice and local rules.",
 )
 """What every report says about its own results."""
+
+GROWTH_CAUTION = (
+    "Snapshots are taken as complete: sampling noise and measurement error are not modelled; birth and death are as the study "
+    "gives them, and between snapshots the bridge shows the histories that reach the next one."
+)
+"""What it says in place of one of them where the study tells how particles grow."""
 
 _TELLING = 0.1
 """Largest error of the log-potentials (0.1 is ten per cent) at which the rigorous bound is worth a sentence."""

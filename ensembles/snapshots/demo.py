@@ -75,6 +75,14 @@ features = ["marker_sheath", "marker_core"]   # further columns to carry along
 time = "d"
 length = ""                       # components have no unit
 
+# [scaling]                       # of the coordinates before the fit; the prior is then in scaled units
+# kind = "pca"                    # or "none", "standardise", "whiten"
+# components = 5
+# [growth]                        # birth and death; left out: none
+# rate = 0.0                      # net growth rate per day: a number, or the name of a feature column
+# uncertainty = 0.2               # how far a cell's rate may be from that; 0 takes it as exact
+# later = 0.5                     # by how much a later cell's weight may change (logarithm); sheds what has no origin
+
 [prior]                           # what a cell does when nothing else is known
 kind = "brownian"                 # dX = drift dt + sqrt(2 diffusion) dW
 diffusion = 0.1                   # per day: `ensembles look study.toml` says whether it is of the right order
@@ -88,6 +96,7 @@ path_times = 36                   # times along each
 intermediate = 5                  # clouds and densities between the first and the last snapshot
 format = "csv"                    # of paths: "csv" or "parquet"
 links = 3                         # most probable partners listed for each cell
+repeats = 20                      # resamples for the standard errors of lineages; 0 for none
 """
 
 _STUDIES = {"beads": _BEADS, "cells": _CELLS}
