@@ -12,6 +12,7 @@ from matplotlib.figure import Figure
 from matplotlib.patches import PathPatch, Rectangle
 from matplotlib.path import Path as Outline
 
+from ...lineage.labels import UNLABELLED
 from ...writing import atomic_path
 from ..wording import gap_title, time_axis_name
 from .style import GREY, INK, MARKERS, WIDTH, panel_grid, plain, polish, set_title
@@ -56,7 +57,7 @@ def draw_flow(figure: Figure, flows: pandas.DataFrame, series: SnapshotSeries) -
         late=flows["later_label"].where(flows["later_label"].isin(shown), _OTHERS),
     )
     width = _BLOCK * float(series.durations.min())
-    shares = _snapshot_shares(table, order)
+    shares = _snapshot_shares(table, order, series)
     for k, share in shares.items():
         _draw_blocks(ax, series.times[k], width, share, order, colour, k == max(shares))
     for gap, part in table.groupby("gap"):
@@ -71,20 +72,22 @@ def draw_flow(figure: Figure, flows: pandas.DataFrame, series: SnapshotSeries) -
     ax.set_ylim(1.0 + _SPACE * (len(order) + 1), -_SPACE)
     others = "" if len(shown) == len(names) else f" The {len(names) - len(shown)} rarest labels are drawn as one."
     return (
-        "Flow between labels along time. Blocks: share of each label in a snapshot. Bands: where the mass of a block goes in "
+        "Flow between labels along time. Blocks: share of each label in a snapshot (where later weights may depart, as the "
+        "bridge weighs it). Bands: where the mass of a block goes in "
         "the next snapshot, coloured by the earlier label; a band that widens belongs to a label whose share grows."
         f"{others} Flows are inferences under the prior, not observed lineages."
     )
 
 
-def _snapshot_shares(table: pandas.DataFrame, order: list[str]) -> dict[int, np.ndarray]:
-    """Share of each label at every snapshot that a flow begins or ends at; where both do, that of the arriving mass."""
+def _snapshot_shares(table: pandas.DataFrame, order: list[str], series: SnapshotSeries) -> dict[int, np.ndarray]:
+    """Share of each label at every snapshot that a flow begins or ends at: its own at first, then that of the arriving mass."""
     found: dict[int, np.ndarray] = {}
     for gap, part in table.groupby("gap"):
-        early = part.groupby("early")["mass"].sum().reindex(order).fillna(0.0).to_numpy()
-        late = part.groupby("late")["mass"].sum().reindex(order).fillna(0.0).to_numpy()
-        found.setdefault(int(gap), early)
-        found[int(gap) + 1] = late
+        if int(gap) not in found and series.labels is not None:
+            names = part.drop_duplicates("earlier_label").set_index("earlier_label")["early"]
+            own = names.reindex([str(name) or UNLABELLED for name in series.labels[int(gap)]]).to_numpy()
+            found[int(gap)] = np.array([series.weights[int(gap)][own == name].sum() for name in order])
+        found[int(gap) + 1] = part.groupby("late")["mass"].sum().reindex(order).fillna(0.0).to_numpy()
     return found
 
 
