@@ -282,9 +282,10 @@ def _refused_by_prior(kind: str, given: dict[str, Any], content: Mapping[str, An
         prior = build_prior(kind, given)
         data = content.get("data")
         # Components and scaled coordinates are counted when the data are read.
-        counted = isinstance(data, Mapping) and not str(data.get("file")).endswith(".h5ad") and "scaling" not in content
-        position = data["position"] if counted and "position" in data else None
-        if isinstance(position, list) and position:
+        table = data if isinstance(data, Mapping) else {}
+        counted = not str(table.get("file")).endswith(".h5ad") and "scaling" not in content
+        position = table.get("position")
+        if counted and isinstance(position, list) and position:
             prior.linear_drift(len(position))
             prior.diffusion_matrix(len(position))
     except checks.InputError as cause:

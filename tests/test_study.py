@@ -100,12 +100,14 @@ def test_the_demonstrations_are_good_studies(tmp_path, name):
 @pytest.mark.parametrize("name", DEMOS)
 def test_the_optional_keys_that_a_demonstration_shows_exist(tmp_path, name):
     _, file = write_demo(name, tmp_path)
-    shown = re.sub(r"^# (\w+ = )", r"\1", file.read_text(encoding="utf-8"), flags=re.MULTILINE)
+    shown = re.sub(r"^# (\w+ = |\[\w+\])", r"\1", file.read_text(encoding="utf-8"), flags=re.MULTILINE)
     shown = shown.replace("drift = [0.1, 0.0]", "# drift")  # said to be of the other kind
     study = read_study(written(tmp_path, shown))
     if name == "beads":
         assert (study.data.weight, study.data.label, study.data.features) == ("mass", "kind", ("brightness",))
         assert study.solve.sweeps == 1000
+    else:
+        assert (study.scaling.kind, study.scaling.components, study.growth.uncertainty) == ("pca", 5, 0.2)
 
 
 def test_demonstrations_repeat_with_their_seed():
