@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -41,6 +41,7 @@ class Bridge:
     tolerance : L1 error of the marginals that was asked for; smooth ends have none.
     ends : "atoms", "kernel" or "mixture".
     notes : sentences worth knowing: why these ends, what was chosen.
+    earlier : the last fits of a sweep that this one started from, for the next to start from; not saved.
     """
 
     series: SnapshotSeries
@@ -49,6 +50,7 @@ class Bridge:
     tolerance: float
     ends: str = "atoms"
     notes: tuple[str, ...] = ()
+    earlier: tuple[Bridge, ...] = field(default=(), repr=False)
 
     @cached_property
     def gaps(self) -> tuple[Gap, ...]:

@@ -4,16 +4,15 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Callable
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from .. import checks
 from ..kernels.choose import MEMORY, gaussian_kernel
-from ..priors.base import LinearGaussianPrior, Transition, require_prior
-from ..schrodinger.coarse import coarse_potentials, gaussian_start
-from ..schrodinger.iteration import Start, Strategy
+from ..priors.base import LinearGaussianPrior, require_prior
+from ..schrodinger.iteration import Strategy
 from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
 from ..schrodinger.solve import SWEEP_LIMIT, solve
 from .boxed import gap_kernel
@@ -21,6 +20,7 @@ from .bridge import Bridge
 from .choose_ends import chosen_ends
 from .smooth import KernelEnds, MixtureEnds, SmoothSolution
 from .smooth_fit import fit_smooth_gap
+from .warm import gap_start, history_of
 
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
@@ -28,7 +28,6 @@ if TYPE_CHECKING:
 __all__ = ["SolverOptions", "fit_bridge"]
 
 _LARGEST_RATIO = 1e6  # mean squared whitened distance; beyond it the noise ladder is not known to arrive
-_WARM_RATIO = 8.0  # change of noise variance up to which another fit's potentials beat the closed-form start
 
 
 @dataclass(frozen=True)
@@ -123,7 +122,7 @@ def fit_bridge(
                 raise ConvergenceError(message, solution)
             warnings.warn(message, RuntimeWarning, stacklevel=2)
         solutions.append(solution)
-    return Bridge(series, prior, tuple(solutions), float(tolerance), notes=reason)
+    return Bridge(series, prior, tuple(solutions), float(tolerance), notes=reason, earlier=history_of(start))
 
 
 def _fit_smooth(
@@ -176,7 +175,9 @@ def _solve_gap(
     if prior.box is not None:
         kernel = gap_kernel(prior, transition, series.clouds[k], series.clouds[k + 1])
         return solve(kernel, weights, tolerance=tolerance, sweep_limit=options.sweep_limit, observe=observe)
-    start_values, strategy = _start((u, v), weights, transition, start, series, k, tolerance, options)
+    start_values, strategy = gap_start(
+        (u, v), weights, transition, start, series, k, gaussian_kernel, options.memory, tolerance, options.strategy
+    )
     return solve(
         gaussian_kernel(u, v, options.memory),
         weights,
@@ -186,46 +187,6 @@ def _solve_gap(
         strategy=strategy,
         observe=observe,
     )
-
-
-def _start(
-    clouds: tuple[np.ndarray, np.ndarray],
-    weights: tuple[np.ndarray, np.ndarray],
-    transition: Transition,
-    warm: Bridge | None,
-    series: SnapshotSeries,
-    k: int,
-    tolerance: float,
-    options: SolverOptions,
-) -> tuple[Start | tuple[np.ndarray, np.ndarray], Strategy]:
-    """Where gap k starts: another bridge's potentials, those of coarser clouds, or the closed form for Gaussians."""
-    if warm is not None:
-        counts = [len(cloud) for cloud in warm.series.clouds]
-        if counts != [len(cloud) for cloud in series.clouds] or warm.series.dimension != series.dimension:
-            raise checks.InputError(
-                f"start is a bridge through other snapshots; they hold {counts} particles where "
-                f"{[len(cloud) for cloud in series.clouds]} are needed; start from a fit of the same snapshots"
-            )
-        old = warm.gaps[k].transition
-        ratio = float(np.exp(2.0 * (transition.log_normaliser - old.log_normaliser) / series.dimension))
-        if 1.0 / _WARM_RATIO <= ratio <= _WARM_RATIO:
-            # Potentials times noise variance are lengths², nearly the same at neighbouring noise levels.
-            solution = warm.gaps[k].coupled
-            return (solution.log_f * ratio, solution.log_g * ratio), options.strategy
-    if 4.0 * clouds[0].shape[0] * clouds[1].shape[0] <= options.memory:
-        return gaussian_start(clouds, weights), options.strategy
-    chosen = [np.flatnonzero(weight) for weight in weights]
-    potentials, factor = coarse_potentials(
-        (clouds[0][chosen[0]], clouds[1][chosen[1]]),
-        (weights[0][chosen[0]], weights[1][chosen[1]]),
-        tolerance,
-        gaussian_kernel,
-        options.strategy,
-    )
-    full = (np.zeros(weights[0].size), np.zeros(weights[1].size))
-    for values, rows, found in zip(full, chosen, potentials, strict=True):
-        values[rows] = found
-    return full, replace(options.strategy, first_factor=factor)
 
 
 def _require_enough_noise(

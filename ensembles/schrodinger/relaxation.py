@@ -37,7 +37,9 @@ class RelaxationControl:
         self.factor = 1.0
         self._known = min(first_factor, _LARGEST)
         self.rate = 1.0  # contraction a sweep at the present factor
-        self.settled = False  # whether a first block of sweeps has been seen
+        self.settled = False  # whether the rate is known
+        if self._known > 1.0:
+            self.rate, self.settled = max(self._known - 1.0, 0.1), True
         self._errors: list[float] = []
         self._ceiling = _LARGEST
         self._wait = _PLAIN if first_factor == 1.0 else _FEW
