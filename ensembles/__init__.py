@@ -59,17 +59,17 @@ if TYPE_CHECKING:
     from .assessment.quantities import LinkProbabilities as LinkProbabilities
     from .assessment.quantities import Moments as Moments
     from .assessment.quantities import PathQuantiles as PathQuantiles
-    from .assessment.surprise import prior_check as prior_check
     from .assessment.relative_entropy import relative_entropy as relative_entropy
+    from .assessment.surprise import prior_check as prior_check
     from .assessment.uncertainty import bootstrap as bootstrap
     from .assessment.uncertainty import influence as influence
     from .bridges.closed_form import gaussian_bridge as gaussian_bridge
     from .bridges.fit import SolverOptions as SolverOptions
     from .bridges.fit import fit_bridge as fit_bridge
+    from .bridges.kinetic import fit_kinetic_bridge as fit_kinetic_bridge
     from .bridges.smooth import KernelEnds as KernelEnds
     from .bridges.smooth import MixtureEnds as MixtureEnds
     from .bridges.storage import load_bridge as load_bridge
-    from .bridges.kinetic import fit_kinetic_bridge as fit_kinetic_bridge
     from .checks import ComputationError as ComputationError
     from .checks import InputError as InputError
     from .estimator import BridgeModel as BridgeModel

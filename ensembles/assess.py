@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
 from . import __version__, checks, writing
 from .study import Study
 
@@ -17,6 +19,7 @@ if TYPE_CHECKING:
     from .assessment.hold_out import HoldOut
     from .assessment.noise import NoiseProfile
     from .assessment.surprise import PriorCheck
+    from .assessment.uncertainty import Bands
 
 __all__ = ["Assessment", "assess_study", "held_out_table", "write_assessment"]
 
@@ -25,12 +28,16 @@ Say = Callable[[str, float], None]
 
 @dataclass(frozen=True, eq=False)
 class Assessment:
-    """Everything that judges a study; `noise` is None where the study asks for no levels."""
+    """Everything that judges a study.
+
+    `noise` is None where the study asks for no levels; `prior_check` and `effective_sizes` are None in a box.
+    """
 
     hold_out: HoldOut
     noise: NoiseProfile | None
-    prior_check: PriorCheck
-    effective_sizes: EffectiveSizes
+    prior_check: PriorCheck | None
+    effective_sizes: EffectiveSizes | None
+    bands: Bands
 
     @property
     def sentences(self) -> list[str]:
@@ -40,9 +47,9 @@ class Assessment:
             *self.hold_out.verdict,
             *self.hold_out.dropped,
             *noise,
-            *self.prior_check.verdict,
-            *self.prior_check.dropped,
-            *self.effective_sizes.warnings,
+            *(() if self.prior_check is None else (*self.prior_check.verdict, *self.prior_check.dropped)),
+            *(() if self.effective_sizes is None else self.effective_sizes.warnings),
+            *self.bands.warnings,
         ]
 
 
@@ -66,7 +73,9 @@ def assess_study(study: Study, *, seed: int, say: Say) -> Assessment:
     from .assessment.hold_out import hold_out
     from .assessment.noise import choose_noise
     from .assessment.parameters import level_grid
+    from .assessment.quantities import Moments
     from .assessment.surprise import prior_check
+    from .assessment.uncertainty import bootstrap
     from .bridges.fit import fit_bridge
 
     say("Reading the snapshots", 0.0)
@@ -80,11 +89,17 @@ def assess_study(study: Study, *, seed: int, say: Say) -> Assessment:
     if study.noise.levels:
         say("Profiling the noise level", 0.3)
         noise = choose_noise(series, prior, study.noise.levels, repeats=asked.repeats, rng=seed + 1)
-    say("Simulating the prior", 0.7)
-    surprise = prior_check(series, prior, simulations=max(19, asked.simulations), rng=seed + 2)
-    say("Counting effective particles", 0.95)
-    sizes = effective_sizes(fit_bridge(series, prior, tolerance=study.solve.tolerance), rng=seed + 3)
-    return Assessment(held, noise, surprise, sizes)
+    surprise = None
+    if prior.box is None:
+        say("Simulating the prior", 0.6)
+        surprise = prior_check(series, prior, simulations=asked.simulations, rng=seed + 2)
+    say("Error bars", 0.85)
+    bridge = fit_bridge(series, prior, tolerance=study.solve.tolerance)
+    middles = [series.times[:-1] + share * series.durations for share in (0.25, 0.5, 0.75)]
+    times = np.sort(np.concatenate([series.times, *middles])).tolist()
+    bands = bootstrap(bridge, Moments(times), repeats=asked.repeats, replicates=asked.replicates, rng=seed + 4)
+    sizes = effective_sizes(bridge, rng=seed + 3) if prior.box is None else None
+    return Assessment(held, noise, surprise, sizes, bands)
 
 
 def held_out_table(found: HoldOut) -> pd.DataFrame:
@@ -110,11 +125,14 @@ def write_assessment(study: Study, found: Assessment, folder: Path, *, seed: int
     from .report.figures.assessment import save_assessment_figures
 
     writing.write_table(folder / "holdout.csv", found.hold_out.to_frame())
-    writing.write_table(folder / "prior_check.csv", found.prior_check.to_frame())
-    writing.write_table(folder / "effective_sizes.csv", found.effective_sizes.to_frame())
-    if found.noise is not None:
-        writing.write_table(folder / "noise.csv", found.noise.to_frame())
-    figures = save_assessment_figures(folder, hold_out=found.hold_out, noise=found.noise, prior_check=found.prior_check)
+    writing.write_table(folder / "bands.csv", found.bands.to_frame())
+    for name in ("prior_check", "effective_sizes", "noise"):
+        result = getattr(found, name)
+        if result is not None:
+            writing.write_table(folder / f"{name}.csv", result.to_frame())
+    figures = save_assessment_figures(
+        folder, hold_out=found.hold_out, noise=found.noise, prior_check=found.prior_check, bands=found.bands
+    )
     captions = [f"{name}: {caption}" for name, caption in figures]
     writing.write_text(folder / "verdict.txt", "\n".join([*found.sentences, "", *captions]) + "\n")
     writing.write_text(folder / "study.toml", study.text)

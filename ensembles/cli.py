@@ -161,6 +161,13 @@ def solve(
 
     study = read_study(study_file)
     writing.require_free_folder(out, force=force)
+    if study.identity == "same":
+        from .link_results import write_links
+
+        with _progress() as say, writing.output_folder(out, force=force) as folder:
+            written = write_links(study, folder, seed=study.seed if seed is None else seed, say=say)
+        _output().print(f"Wrote {out}: {', '.join(written)}", markup=False, soft_wrap=True)
+        return
     with _progress() as say:
         bridge = fit_study(study, say=say)
         with writing.output_folder(out, force=force) as folder:

@@ -105,7 +105,11 @@ def stokes_einstein(radius: float, kelvin: float, viscosity: float | None = None
     """
     radius = checks.positive_number(radius, "radius", "give it in metres")
     kelvin = temperature(kelvin)
-    eta = water_viscosity(kelvin) if viscosity is None else checks.positive_number(viscosity, "viscosity", "give it in Pa s")
+    eta = (
+        water_viscosity(kelvin)
+        if viscosity is None
+        else checks.positive_number(viscosity, "viscosity", "give it in Pa s")
+    )
     return _boltzmann() * kelvin / (6.0 * np.pi * eta * radius)
 
 

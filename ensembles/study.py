@@ -5,7 +5,7 @@ from __future__ import annotations
 import inspect
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from os import PathLike
 from pathlib import Path
 from typing import Annotated, Any, Literal
@@ -17,6 +17,7 @@ from .priors.base import LinearGaussianPrior
 from .priors.registry import PRIORS, build_prior
 from .snapshots.files import read_snapshots
 from .snapshots.series import SnapshotSeries
+from .study_links import BoxTable, LinksTable, box_problems, with_numbers
 from .study_problems import Problem, line_of, problem_of, refuse, syntax_line, unknown_key
 
 __all__ = ["DataTable", "HoldOutTable", "NoiseTable", "OutputTable", "SolveTable", "Study", "UnitsTable", "read_study"]
@@ -31,10 +32,11 @@ class _Table(BaseModel):
 
 
 class StudyTable(_Table):
-    """[study]: what it is called, and the seed of every random number in it."""
+    """[study]: what it is called, the seed of its random numbers, and identity: are the "same" particles in all frames?"""
 
     title: str = ""
     seed: int = Field(default=0, ge=0)
+    identity: Literal["lost", "same"] = "lost"
 
 
 class DataTable(_Table):
@@ -116,6 +118,8 @@ class _Tables(_Table):
     output: OutputTable = OutputTable()
     holdout: HoldOutTable = HoldOutTable()
     noise: NoiseTable = NoiseTable()
+    links: LinksTable = LinksTable()
+    box: BoxTable = BoxTable()
 
 
 @dataclass(frozen=True)
@@ -126,7 +130,8 @@ class Study:
     ----------
     path : Path, where it stands; the data file is looked up from its folder.
     text : str, as it was read.
-    title, seed, data, units, prior, solve, output, holdout, noise : its tables; title and seed are those of [study].
+    title, seed, data, units, prior, solve, output, holdout, noise, links, box : its tables; title, seed and identity are
+        those of [study].
     """
 
     path: Path
@@ -140,6 +145,9 @@ class Study:
     output: OutputTable
     holdout: HoldOutTable
     noise: NoiseTable
+    identity: str = "lost"
+    links: LinksTable = field(default_factory=LinksTable)
+    box: BoxTable = field(default_factory=BoxTable)
 
     @property
     def data_file(self) -> Path:
@@ -165,8 +173,9 @@ class Study:
         )
 
     def build_prior(self) -> LinearGaussianPrior:
-        """Build the prior of [prior]."""
-        return build_prior(self.prior.kind, self.prior.parameters)
+        """Build the prior of [prior], in the box of [box]."""
+        box = self.box.build()
+        return build_prior(self.prior.kind, self.prior.parameters | ({} if box is None else {"box": box}))
 
 
 def read_study(path: str | PathLike[str]) -> Study:
@@ -205,15 +214,17 @@ def read_study(path: str | PathLike[str]) -> Study:
         content = tomllib.loads(text)
     except tomllib.TOMLDecodeError as cause:
         refuse(place, [Problem(syntax_line(str(cause)), f"not a TOML file; {cause}; correct that line")])
+    content, problems = with_numbers(content, text)
     tables = _known_keys(content)
-    problems = []
     found = None
     try:
         found = _Tables.model_validate(content)
     except ValidationError as cause:
         # Rules of a union or a container can report one key twice; a key is named once.
         errors = {tuple(error["loc"]): error for error in cause.errors(include_url=False)}
-        problems = [problem_of(text, error, tables) for error in errors.values()]
+        problems += [problem_of(text, error, tables) for error in errors.values()]
+    if not problems:
+        problems += box_problems(content, text)
     problems += _unnamed_columns(content, text) + _prior_problems(content, text, tables)
     refuse(place, problems)
     assert found is not None  # refuse() raised otherwise
@@ -229,6 +240,9 @@ def read_study(path: str | PathLike[str]) -> Study:
         output=found.output,
         holdout=found.holdout,
         noise=found.noise,
+        identity=found.study.identity,
+        links=found.links,
+        box=found.box,
     )
 
 
@@ -254,9 +268,11 @@ def _known_keys(content: Mapping[str, Any]) -> dict[str, list[str]]:
     prior = content.get("prior")
     kind = prior.get("kind") if isinstance(prior, Mapping) else None
     if isinstance(kind, str) and kind in PRIORS:
-        keys["prior"] += list(inspect.signature(PRIORS[kind]).parameters)
+        keys["prior"] += [name for name in inspect.signature(PRIORS[kind]).parameters if name != "box"]
     else:
-        keys["prior"] += sorted({name for prior in PRIORS.values() for name in inspect.signature(prior).parameters})
+        keys["prior"] += sorted(
+            {name for prior in PRIORS.values() for name in inspect.signature(prior).parameters} - {"box"}
+        )
     return keys
 
 

@@ -246,6 +246,7 @@ def draw_rate(rates: dict[str, Rate], path: Path) -> None:
     """Error against n, on logarithmic axes, beside the slope -1/2."""
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
+    from matplotlib.ticker import NullFormatter
 
     from ensembles.report.figures.style import ACCENT, GREY, MARKERS, SECOND, polish
 
@@ -258,6 +259,7 @@ def draw_rate(rates: dict[str, Rate], path: Path) -> None:
         ax.plot(rate.counts, rate.errors[0] * (rate.counts / rate.counts[0]) ** -0.5, color=GREY, lw=0.8, zorder=1)
     ax.set_xscale("log")
     ax.set_yscale("log")
+    ax.yaxis.set_minor_formatter(NullFormatter())
     ax.set_xlabel("particles a snapshot, n")
     ax.set_ylabel("r.m.s. error of the drift at half time")
     ax.legend()
@@ -270,12 +272,17 @@ def draw_rate(rates: dict[str, Rate], path: Path) -> None:
 SECTIONS = ("coverage", "noise", "p-values", "power", "entropy", "rates")
 COVERAGE = [
     (prior, d, n, repeats, refits)
-    for n, repeats, refits in ((50, 200, 100), (200, 200, 60), (2000, 40, 30))
+    for n, repeats, refits in ((50, 200, 60), (200, 100, 40), (2000, 24, 20))
     for prior in PRIORS
     for d in (1, 2, 5)
 ]
-NOISE = [("Brownian", 1, 200, 3, 100, 40), ("Brownian", 2, 200, 3, 100, 40), ("Brownian", 1, 200, 5, 60, 40),
-         ("Ornstein-Uhlenbeck", 1, 200, 3, 60, 40)]  # fmt: skip
+NOISE = [
+    ("Brownian", 1, 200, 3, 60, 30),
+    ("Brownian", 2, 200, 3, 40, 30),
+    ("Brownian", 1, 200, 5, 30, 30),
+    ("Ornstein-Uhlenbeck", 1, 200, 3, 40, 30),
+]
+SIMULATIONS = 39
 
 
 def run(section: str, out: Path, workers: int) -> None:
@@ -289,7 +296,7 @@ def run(section: str, out: Path, workers: int) -> None:
     elif section == "p-values":
         rows = []
         for dimension, n, repeats in ((1, 100, 200), (2, 100, 200)):
-            found, uniform = uniformity(dimension, n, repeats, 99, workers=workers)
+            found, uniform = uniformity(dimension, n, repeats, SIMULATIONS, workers=workers)
             for column, by in enumerate(("energy distance", "relative entropy")):
                 rows.append({
                     "d": dimension, "n": n, "repeats": repeats, "by": by, "Kolmogorov-Smirnov p": uniform[column],
@@ -299,8 +306,8 @@ def run(section: str, out: Path, workers: int) -> None:
         print(frame.round(3).to_string(index=False))
         frame.to_csv(out / "p_values.csv", index=False)
     elif section == "power":
-        frame = power_table(2, 100, 60, 59, workers=workers)
-        print("two dimensions, n = 100, 60 repeats of 59 simulations; share of p-values at or below 0.05")
+        frame = power_table(2, 100, 40, SIMULATIONS, workers=workers)
+        print(f"two dimensions, n = 100, 40 repeats of {SIMULATIONS} simulations; share of p-values at or below 0.05")
         print(frame.round(3).to_string(index=False))
         frame.to_csv(out / "power.csv", index=False)
     elif section == "entropy":

@@ -15,6 +15,9 @@ import numpy as np
 from scipy.spatial import cKDTree
 
 import ensembles
+from ensembles.schrodinger.assignment import AssignmentGraph, propagate_beliefs
+from ensembles.schrodinger.clusters import sum_clusters
+from ensembles.schrodinger.exact_assignment import exact_assignment
 
 DATA = Path(__file__).resolve().parents[1] / "data" / "argon_diffusion.npz"
 FRAME = 10.0  # ps between frames
@@ -168,6 +171,35 @@ def trap_recovery(repeats: int, count: int = 300, seed: int = 0, gap: float = 0.
     return inside
 
 
+def few_particles(problems: int = 50) -> str:
+    """Belief propagation and clusters of 6 against enumeration of 3 to 12 particles, by noise in units of the spacing."""
+    lines = [
+        f"{'noise':>6}{'problems':>10}{'link error, propagation: mean':>31}{'largest':>9}{'clusters of 6: mean':>21}"
+        f"{'largest':>9}{'exact - Bethe: least':>22}{'mean':>8}{'most':>8}{'estimated, 6: mean':>20}{'most over n/2 log 2':>21}"
+    ]
+    for noise in (0.1, 0.3, 1.0, 3.0):
+        rng = np.random.default_rng(int(10 * noise))
+        rows = []
+        for _ in range(problems):
+            n = int(rng.integers(3, 13))
+            start = rng.random((n, 2)) * np.sqrt(n)
+            end = start + noise * rng.standard_normal((n, 2))
+            log_weights = -0.5 * ((start[:, None] - end[None]) ** 2).sum(axis=2) / noise**2
+            exact, links, _, _ = exact_assignment(log_weights)
+            posterior = propagate_beliefs(AssignmentGraph.dense(log_weights), tolerance=1e-6)
+            sums = sum_clusters(posterior, limit=6)
+            errors = [float(np.abs(p - links.ravel()).max()) for p in (posterior.probabilities, sums.probabilities)]
+            excess = exact - posterior.log_evidence
+            rows.append([*errors, excess, sums.log_evidence_correction, excess / (0.5 * n * np.log(2.0))])
+        found = np.array(rows)
+        mean, most = found.mean(axis=0), found.max(axis=0)
+        lines.append(
+            f"{noise:>6g}{problems:>10}{mean[0]:>31.4f}{most[0]:>9.4f}{mean[1]:>21.4f}{most[1]:>9.4f}"
+            f"{found[:, 2].min():>22.1e}{mean[2]:>8.3f}{most[2]:>8.3f}{mean[3]:>20.3f}{most[4]:>21.3f}"
+        )
+    return "\n".join(lines)
+
+
 def timing(count: int) -> str:
     """Link `count` simulated particles at a spacing of 3 noise lengths in two dimensions."""
     import resource
@@ -177,14 +209,14 @@ def timing(count: int) -> str:
     end = start + rng.standard_normal((count, 2))
     order = rng.permutation(count)
     series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [start, end[order]])
-    began = time.perf_counter()
+    began, busy = time.perf_counter(), time.process_time()
     links = ensembles.link_particles(series, ensembles.Brownian(diffusion=0.5))[0]
-    took = time.perf_counter() - began
+    took, busy = time.perf_counter() - began, time.process_time() - busy
     right = int((links.expected_assignment == np.argsort(order)).sum()) if count <= 20_000 else -1
     c = links.certificate
     own = np.asarray(links.sparse()[np.arange(count), np.argsort(order)]).ravel()
     return (
-        f"{count} x {count}: {took:.1f} s, {links.graph.edges} links kept, {c.propagation.iterations} rounds, certified: "
+        f"{count} x {count}: {took:.1f} s ({busy:.1f} s of processors), {links.graph.edges} links kept, {c.propagation.iterations} rounds, certified: "
         f"{c.converged}; sums off by {c.propagation.row_error:.1e}, after balancing {c.row_error:.1e}; two formulas for the "
         f"log evidence ({links.log_evidence:.1f}) differ by {c.propagation.evidence_difference:.1e}; left out {c.left_out:.1e}; "
         f"right links: mean probability of the true one {own.mean():.4f}"
@@ -194,36 +226,50 @@ def timing(count: int) -> str:
 
 
 def argon(draws: int = 10) -> None:
-    """Print the argon tables."""
+    """Print the argon tables, a line as soon as its draws are done."""
     groups: dict[str, list[Draw]] = {}
-    for count in (50, 200, 1000):
-        for steps in (1, 3, 10):
-            groups[f"{count} atoms, {FRAME * steps:g} ps"] = [study(count, steps, seed) for seed in range(draws)]
-            print(estimate_table(groups).splitlines()[0 if len(groups) == 1 else -1], flush=True)
-            if len(groups) == 1:
-                print(estimate_table(groups).splitlines()[-1], flush=True)
-    for steps in (1, 3):
-        name = f"1000 wrapped, {FRAME * steps:g} ps"
-        groups[name] = [study(1000, steps, seed, wrapped=True) for seed in range(draws)]
-        print(estimate_table({name: groups[name]}).splitlines()[-1], flush=True)
-    for title, chosen in (
-        ("all groups", list(groups)),
-        ("10 ps", [name for name in groups if name.endswith(" 10 ps")]),
-    ):
-        print(f"\nReliability, {title}")
-        print(reliability_table([draw for name in chosen for draw in groups[name]]), flush=True)
+    print("Argon with hidden labels; D in Å²/ps; medians over draws; shares of right links; mean log probability")
+    for count, steps, wrapped in [(n, k, False) for n in (50, 200, 1000) for k in (1, 3, 10)] + [(1000, 1, True)]:
+        name = f"{count} {'wrapped' if wrapped else 'atoms'}, {FRAME * steps:g} ps"
+        groups[name] = [study(count, steps, seed, wrapped=wrapped) for seed in range(draws)]
+        table = estimate_table({name: groups[name]}).splitlines()
+        print("\n".join(table if len(groups) == 1 else table[1:]), flush=True)
+        if steps == 10 or wrapped:
+            chosen = [draw for draws in groups.values() for draw in draws]
+            print(f"\nReliability of all links so far ({len(chosen)} draws)\n{reliability_table(chosen)}\n", flush=True)
+    print(independent_control())
+
+
+def independent_control(diffusion: float = 0.205) -> str:
+    """The wrapped box again with steps that are independent: what the estimate gives when its assumption holds."""
+    positions, edges = read_positions()
+    box = ensembles.Box(np.zeros(3), edges)
+    found = []
+    for seed in range(3):
+        rng = np.random.default_rng(seed)
+        start = box.fold(positions[START_STEP * seed])
+        end = box.fold(start + rng.normal(size=start.shape) * np.sqrt(2.0 * diffusion * FRAME))
+        series = ensembles.SnapshotSeries.from_arrays([0.0, FRAME], [start, rng.permutation(end)], units=UNITS)
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", RuntimeWarning)
+            estimate = ensembles.estimate_prior(series, "brownian", box=box)
+        found.append(f"{float(estimate.prior.diffusion):.4f} ± {estimate.standard_errors['diffusion']:.4f}")
+    return f"Control, 1000 wrapped, 10 ps, independent steps of D = {diffusion}: estimated {', '.join(found)}"
 
 
 def main(arguments: list[str]) -> None:
-    """Print one part, or all: argon, trap, timing."""
-    parts = arguments or ["argon", "trap", "timing"]
+    """Print one part, or all: few, argon, trap, timing."""
+    parts = arguments or ["few", "argon", "trap", "timing"]
+    if "few" in parts:
+        print(few_particles(), flush=True)
     if "argon" in parts:
-        print("Argon with hidden labels; D in Å²/ps; medians over draws; shares of right links; mean log probability")
         argon()
     if "trap" in parts:
         inside = trap_recovery(100)
         for name, held in inside.items():
-            print(f"Trap, 300 unlabelled particles: the 95 % interval of the {name} holds the truth in {sum(held)} of {len(held)}")
+            print(
+                f"Trap, 300 unlabelled particles: the 95 % interval of {name} holds the truth in {sum(held)} of {len(held)}"
+            )
     if "timing" in parts:
         timing(100)  # compiles
         for count in (5_000, 100_000):

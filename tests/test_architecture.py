@@ -27,19 +27,30 @@ MAY_IMPORT = {
     "lineage": FOUNDATION | {"bridges", "snapshots", "priors"},
     "assessment": FOUNDATION | {"bridges", "snapshots", "priors", "kernels", "schrodinger"},
     "sweep": FOUNDATION,
-    "report": FOUNDATION | {"assessment", "lineage", "links", "bridges", "snapshots", "priors", "kernels", "schrodinger"},
+    "report": FOUNDATION
+    | {"assessment", "lineage", "links", "bridges", "snapshots", "priors", "kernels", "schrodinger"},
     "estimator": FOUNDATION | {"bridges", "snapshots", "priors"},
     "study_problems": {"checks"},
-    "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems", "quantities"},
+    "study_links": FOUNDATION | {"priors", "quantities", "study_problems"},
+    "link_results": FOUNDATION | {"study", "links", "report", "snapshots"},
+    "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems", "study_links"},
     "overview": FOUNDATION | {"snapshots", "priors", "report"},
     "results": FOUNDATION | {"study", "overview", "report", "bridges", "schrodinger"},
     "assess": FOUNDATION | {"study", "report", "assessment", "bridges"},
-    "cli": FOUNDATION | {"study", "overview", "results", "assess", "report", "bridges", "snapshots", "priors"},
+    "cli": FOUNDATION
+    | {"study", "overview", "results", "link_results", "assess", "report", "bridges", "snapshots", "priors"},
     "__main__": {"cli"},
     # The names of the public contract are looked up there, on first use; they are held by tests/test_setup.py.
     "__init__": None,
 }
-HEAVY = {"matplotlib": {"report"}, "numba": {"kernels"}, "pandas": set(), "anndata": set(), "dask": set(), "pint": set()}
+HEAVY = {
+    "matplotlib": {"report"},
+    "numba": {"kernels"},
+    "pandas": set(),
+    "anndata": set(),
+    "dask": set(),
+    "pint": set(),
+}
 """Slow imports, and the rooms that may do them at the top of a file; everywhere else inside a function."""
 
 

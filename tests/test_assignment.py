@@ -122,7 +122,9 @@ def test_scaling_of_weights_and_order_do_not_matter():
     log_weights = problem(rng, 0.7, 15)
     order = rng.permutation(15)
     plain = propagate_beliefs(AssignmentGraph.dense(log_weights), tolerance=1e-9)
-    moved = propagate_beliefs(AssignmentGraph.dense(log_weights[:, order] + rng.normal(size=(15, 1)) * 50), tolerance=1e-9)
+    moved = propagate_beliefs(
+        AssignmentGraph.dense(log_weights[:, order] + rng.normal(size=(15, 1)) * 50), tolerance=1e-9
+    )
     assert_allclose(moved.probabilities.reshape(15, 15), plain.probabilities.reshape(15, 15)[:, order], atol=1e-7)
 
 

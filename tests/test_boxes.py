@@ -24,7 +24,13 @@ def cosine_density(x: float, y: float, sigma: float, length: float) -> float:
     total = mpmath.mpf(1) / length
     for k in range(1, 4000):
         factor = mpmath.exp(-((k * mpmath.pi * sigma / length) ** 2) / 2)
-        total += 2 / mpmath.mpf(length) * factor * mpmath.cos(k * mpmath.pi * x / length) * mpmath.cos(k * mpmath.pi * y / length)
+        total += (
+            2
+            / mpmath.mpf(length)
+            * factor
+            * mpmath.cos(k * mpmath.pi * x / length)
+            * mpmath.cos(k * mpmath.pi * y / length)
+        )
         if factor < mpmath.mpf(10) ** -45:
             break
     return total
@@ -40,7 +46,9 @@ def test_image_sums_against_series(sigma, boundary, reference):
     with mpmath.workdps(60):
         expected = [float(mpmath.log(reference(x, y, sigma, length))) for x, y in zip(starts, ends)]
     found, _ = axis_log_kernel(AxisWalls(boundary, length / sigma), starts / sigma, ends / sigma)
-    assert_allclose(found - np.log(sigma * np.sqrt(2 * np.pi)), expected, rtol=0, atol=1e-12 * max(1.0, np.abs(expected).max()))
+    assert_allclose(
+        found - np.log(sigma * np.sqrt(2 * np.pi)), expected, rtol=0, atol=1e-12 * max(1.0, np.abs(expected).max())
+    )
 
 
 @pytest.mark.parametrize("boundary", ["periodic", "reflecting", "open"])
@@ -66,7 +74,7 @@ def boxed_bridge(boundary, diffusion=0.3, dimension=2, seed=0):
 
 @pytest.mark.parametrize("boundary", ["periodic", "reflecting"])
 def test_a_boxed_coupling_has_its_marginals_and_mass_one(boundary):
-    box, _, bridge = boxed_bridge(boundary)
+    _, _, bridge = boxed_bridge(boundary)
     coupling = bridge.coupling(0).matrix()
     assert_allclose(coupling.sum(axis=1), 1 / 40, atol=1e-10)
     assert_allclose(coupling.sum(axis=0), 1 / 50, atol=1e-10)
@@ -178,7 +186,10 @@ def test_whitened_coordinates_start_at_the_lower_wall():
         (lambda: ensembles.Box([0.0, 0.0], [1.0]), "d numbers each"),
         (lambda: ensembles.Box([0.0], [1.0], "periodc"), "unknown boundary.*periodic"),
         (lambda: ensembles.Brownian([[1.0, 0.2], [0.2, 1.0]], box=ensembles.Box([0, 0], [1, 1])), "independent"),
-        (lambda: ensembles.Brownian(1.0, drift=[0.0, 1.0], box=ensembles.Box([0, 0], [1, 1], "reflecting")), "no images"),
+        (
+            lambda: ensembles.Brownian(1.0, drift=[0.0, 1.0], box=ensembles.Box([0, 0], [1, 1], "reflecting")),
+            "no images",
+        ),
         (lambda: ensembles.Brownian(1.0, box={"lower": [0], "uper": [1]}), "unknown key of a box.*upper"),
     ],
 )
@@ -190,7 +201,9 @@ def test_bad_boxes(make, message):
 def test_positions_outside_the_box_are_refused():
     series = ensembles.SnapshotSeries.from_arrays([0, 1], [[[0.2], [0.4]], [[0.1], [1.2]]])
     prior = ensembles.Brownian(1.0, box=ensembles.Box([0.0], [1.0]))
-    with pytest.raises(ensembles.InputError, match=r"positions must lie in the box; particle 1 has 1.2.*snapshot t = 1"):
+    with pytest.raises(
+        ensembles.InputError, match=r"positions must lie in the box; particle 1 has 1.2.*snapshot t = 1"
+    ):
         ensembles.fit_bridge(series, prior)
     with pytest.raises(ensembles.InputError, match="positions must lie in the box"):
         ensembles.link_particles(series, prior)

@@ -10,7 +10,7 @@ import ensembles
 from ensembles import InputError
 from ensembles.assessment.entropy import neighbour_entropy
 from ensembles.assessment.floors import replicate_floor, snapshot_floor
-from ensembles.assessment.hold_out import HELD_OUT_SCORES
+from ensembles.assessment.hold_out import HELD_OUT_SCORES, HoldOut
 from ensembles.assessment.pairwise import Comparison, multinomial_weights
 from ensembles.assessment.predictions import PREDICTIONS, neighbours_of
 from ensembles.assessment.scores import SCORES, energy_distance, kernel_discrepancy
@@ -27,7 +27,7 @@ def spreading(n: int = 150, d: int = 1, frames: int = 3, seed: int = 0, **extra)
 
 
 @pytest.fixture(scope="module")
-def held() -> ensembles.assessment.hold_out.HoldOut:
+def held() -> HoldOut:
     return ensembles.hold_out(spreading(d=2), PRIOR, repeats=100)
 
 

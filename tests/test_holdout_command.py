@@ -61,7 +61,7 @@ def test_it_writes_tables_pictures_and_a_verdict(study, tmp_path):
     found = run("holdout", study, "--out", tmp_path / "out")
     assert found.exit_code == 0, found.output
     assert {path.name for path in (tmp_path / "out").iterdir()} == {
-        "holdout.csv", "holdout.png", "noise.csv", "noise.png", "prior_check.csv", "prior_check.png",
+        "bands.csv", "bands.png", "holdout.csv", "holdout.png", "noise.csv", "noise.png", "prior_check.csv", "prior_check.png",
         "effective_sizes.csv", "verdict.txt", "study.toml", "summary.json",
     }  # fmt: skip
     table = pd.read_csv(tmp_path / "out" / "holdout.csv")

@@ -68,7 +68,9 @@ def test_fuerth(time):
     tau = 1 / 1.7
     # The formula, and the velocity autocorrelation ⟨v(0) v(s)⟩ = D γ e^{-γ s} integrated twice.
     formula = 2 * 0.6 * (time + tau * np.expm1(-time / tau))
-    integral = quad(lambda s: 2 * (time - s) * 0.6 * 1.7 * np.exp(-1.7 * s), 0, time, epsabs=0, epsrel=1e-12, limit=500)[0]
+    integral = quad(
+        lambda s: 2 * (time - s) * 0.6 * 1.7 * np.exp(-1.7 * s), 0, time, epsabs=0, epsrel=1e-12, limit=500
+    )[0]
     assert_allclose(prior.displacement_variance(time), integral, rtol=1e-9)
     assert_allclose(formula, integral, rtol=1e-8)
 
@@ -120,7 +122,9 @@ def test_sampled_paths_have_the_moments():
 
 def test_chains_and_other_priors_are_refused():
     series = ensembles.SnapshotSeries.from_arrays([0, 1, 2], [[0.0, 1.0]] * 3)
-    with pytest.raises(ensembles.InputError, match="joins two snapshots; there are 3; positions do not show the velocity"):
+    with pytest.raises(
+        ensembles.InputError, match="joins two snapshots; there are 3; positions do not show the velocity"
+    ):
         ensembles.fit_kinetic_bridge(series, ensembles.Kinetic(1.0, 1.0))
     with pytest.raises(ensembles.InputError, match="prior must be Kinetic; it is Brownian"):
         ensembles.fit_kinetic_bridge(series.subset([0, 1]), ensembles.Brownian(1.0))

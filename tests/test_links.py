@@ -8,7 +8,7 @@ from numpy.testing import assert_allclose
 from scipy.optimize import linear_sum_assignment
 
 import ensembles
-from ensembles.links.candidates import LinkOptions, linked_posterior
+from ensembles.links.candidates import LinkOptions
 from ensembles.links.law import link_law
 from ensembles.schrodinger.exact_assignment import exact_assignment
 
@@ -242,7 +242,11 @@ def series_of(*clouds, weights=None):
     ("series", "keywords", "message"),
     [
         (series_of([[0.0], [1.0]], [[0.0]]), {}, "there are 2 at t = 0 and 1 at t = 1; give a detection probability"),
-        (series_of([[0.0], [1.0], [0.0]], [[0.0], [1.0], [2.0]]), {}, "two particles are at one position; particles 0 and 2"),
+        (
+            series_of([[0.0], [1.0], [0.0]], [[0.0], [1.0], [2.0]]),
+            {},
+            "two particles are at one position; particles 0 and 2",
+        ),
         (series_of([[0.0], [1.0]], [[0.0], [2.0]], weights=[[1, 2], None]), {}, "must all count alike"),
         (series_of([[0.0], [1.0]], [[0.0], [2.0]]), {"detection": 1.5}, "detection must be a probability; it is 1.5"),
         (series_of([[0.0], [1.0]], [[0.0], [2.0]]), {"birth_density": 1.0}, "needs a detection probability"),

@@ -9,7 +9,8 @@ from numpy.testing import assert_allclose
 
 import ensembles
 from ensembles import InputError
-from ensembles.assessment.noise import _interval
+from ensembles.assessment.interval import profile_interval
+from ensembles.assessment.noise import NoiseProfile
 from ensembles.assessment.parameters import with_parameters
 from ensembles.assessment.profile import climb, quadratic_around
 
@@ -30,7 +31,7 @@ def two_blobs(n: int = 120, frames: int = 3, seed: int = 0, prior=None, d: int =
 
 
 @pytest.fixture(scope="module")
-def profile() -> ensembles.assessment.noise.NoiseProfile:
+def profile() -> NoiseProfile:
     return ensembles.choose_noise(two_blobs(), ensembles.Brownian(9.0), LEVELS, repeats=30)
 
 
@@ -81,6 +82,8 @@ def test_the_rate_and_the_diffusion_of_a_trap_jointly():
     assert len(found.levels) == 9
     assert set(found.interval) == {"rate", "diffusion"}
     assert found.resampled.shape == (10, 2)
+    apart = abs(np.corrcoef(np.log(found.resampled).T)[0, 1]) <= 0.8
+    assert apart != any("told together rather than apart" in sentence for sentence in found.warnings)
     assert not any("one left-out snapshot" in sentence for sentence in found.warnings)
 
 
@@ -132,9 +135,9 @@ def test_a_quadratic_is_found_exactly():
 def test_the_interval_is_where_the_profile_loses_less_than_allowed():
     axis = np.linspace(-3.0, 3.0, 25)
     # A loss of ½ z² is 0.5 at ±1; values on a plain scale, since some levels are negative.
-    found = _interval({"centre": axis}, np.array([0.0]), 0.0, -0.5 * axis**2, 0.5)
+    found = profile_interval({"centre": axis}, np.array([0.0]), 0.0, -0.5 * axis**2, 0.5)
     assert_allclose(found["centre"], (-1.0, 1.0), atol=1e-12)
-    assert _interval({"centre": axis}, np.array([0.0]), 0.0, -0.5 * axis**2, 50.0)["centre"] == (-3.0, 3.0)
+    assert profile_interval({"centre": axis}, np.array([0.0]), 0.0, -0.5 * axis**2, 50.0)["centre"] == (-3.0, 3.0)
 
 
 def test_parameters_are_replaced_or_scaled():

@@ -12,6 +12,7 @@ import numpy as np
 from .. import checks
 from ..priors.base import LinearGaussianPrior, require_prior
 from .hold_out import require_interior
+from .interval import coordinate, from_coordinate, profile_interval
 from .pairwise import Comparison, multinomial_weights
 from .parameters import level_grid
 from .profile import Cell, Profile, climb, quadratic_around
@@ -28,6 +29,7 @@ _ENERGY_DRAWS = 600
 _ENERGY_PARTICLES = 2000
 _BOOTSTRAP_TOLERANCE = 1e-4  # L1 error of the marginals; resampled weights themselves move by far more
 _CHANCE = 0.9
+_RIDGE = 0.8  # correlation of two parameters beyond which it is worth a sentence
 
 
 @dataclass(frozen=True)
@@ -165,7 +167,7 @@ def choose_noise(
     log_scores = _resampled_log_scores(profile, cells, repeats, resampling)
     energies = _energy_distances(profile, cells, repeats, energy)
     rows = tuple(_levels(grid, cells, cells.index(best), log_scores, energies))
-    axes = [_coordinate(name, values) for name, values in grid.items()]
+    axes = [coordinate(values) for values in grid.values()]
     around = quadratic_around(profile.score, best, axes)
     estimate = around.maximum()
 
@@ -176,27 +178,18 @@ def choose_noise(
     refitted = np.array(run_repeats(refit, repeats, refitting, workers))
     maxima, losses = refitted[:, :-1], refitted[:, -1]
     scores = np.array([profile.score(cell) for cell in cells]).reshape(profile.shape)
-    interval = _interval(grid, estimate, around.at(estimate), scores, float(np.quantile(losses, _CHANCE)))
+    interval = profile_interval(grid, estimate, around.at(estimate), scores, float(np.quantile(losses, _CHANCE)))
     names = tuple(grid)
     return NoiseProfile(
         names,
         rows,
         rows[cells.index(best)].values,
         _smallest(rows, names[0]).values,
-        {name: _back(name, grid[name], value) for name, value in zip(names, estimate)},
+        {name: from_coordinate(grid[name], value) for name, value in zip(names, estimate)},
         interval,
-        np.array([[_back(n, grid[n], v) for n, v in zip(names, row)] for row in maxima]),
+        np.array([[from_coordinate(grid[n], v) for n, v in zip(names, row)] for row in maxima]),
         tuple(_warnings(grid, rows, maxima, axes, interval, series)),
     )
-
-
-def _coordinate(name: str, values: np.ndarray) -> np.ndarray:
-    """Positive parameters are compared on a logarithmic scale."""
-    return np.log(values) if (values > 0).all() else values
-
-
-def _back(name: str, values: np.ndarray, coordinate: float) -> float:
-    return float(np.exp(coordinate)) if (values > 0).all() else float(coordinate)
 
 
 def _resampled_log_scores(profile: Profile, cells: list[Cell], repeats: int, rng: np.random.Generator) -> np.ndarray:
@@ -268,37 +261,6 @@ def _refitted(
     return np.append(maximum, max(loss, 0.0))
 
 
-def _interval(
-    grid: dict[str, np.ndarray], estimate: np.ndarray, top: float, scores: np.ndarray, loss: float
-) -> dict[str, tuple[float, float]]:
-    """Per parameter the values whose score, the best over the other parameter, lies less than `loss` below the top."""
-    found = {}
-    for position, (name, values) in enumerate(grid.items()):
-        others = tuple(axis for axis in range(len(grid)) if axis != position)
-        axis = _coordinate(name, values)
-        profile = np.sqrt(np.maximum(top - scores.max(axis=others), 0.0))
-        limits = []
-        for side in (-1.0, 1.0):
-            beyond = side * (axis - estimate[position]) > 0
-            # The root of the loss is straight for a quadratic profile, so it is interpolated along lines.
-            z = np.concatenate([[0.0], np.sort(np.abs(axis[beyond] - estimate[position]))])
-            order = np.argsort(np.abs(axis[beyond] - estimate[position]))
-            height = np.maximum.accumulate(np.concatenate([[0.0], profile[beyond][order]]))
-            limits.append(estimate[position] + side * _crossing(z, height, np.sqrt(loss)))
-        found[name] = (_back(name, values, limits[0]), _back(name, values, limits[1]))
-    return found
-
-
-def _crossing(z: np.ndarray, height: np.ndarray, wanted: float) -> float:
-    """Where a non-decreasing broken line first reaches `wanted`; its end if it never does."""
-    above = np.flatnonzero(height >= wanted)
-    if not above.size or above[0] == 0:
-        return float(z[-1] if not above.size else z[0])
-    i = int(above[0])
-    share = (wanted - height[i - 1]) / (height[i] - height[i - 1])
-    return float(z[i - 1] + share * (z[i] - z[i - 1]))
-
-
 def _warnings(
     grid: dict[str, np.ndarray],
     rows: Sequence[NoiseLevel],
@@ -316,11 +278,21 @@ def _warnings(
                     f"the data do not bound {name} from {side}: {100 * share:.0f} % of the resamples have their best "
                     f"value at the edge {grid[name][end]:g} of the levels; take wider levels, or measure {name} another way"
                 )
-        inside = [float(v) for v in grid[name] if interval[name][0] <= v <= interval[name][1]]
-        if len(inside) < 2 and low <= 0.05 and high <= 0.05:
+        limits = coordinate(np.array(interval[name]))
+        nearest = int(np.argmin(np.abs(axis - limits.mean())))
+        step = float(np.mean(np.diff(axis[max(0, nearest - 1) : nearest + 2])))
+        if np.ptp(limits) < step and low <= 0.05 and high <= 0.05:
             found.append(
                 f"the levels of {name} are too coarse for its interval, {interval[name][0]:.3g} to {interval[name][1]:.3g}, "
                 "which was interpolated between them; profile again with levels around it"
+            )
+    if len(grid) == 2 and np.ptp(maxima, axis=0).all():
+        correlation = float(np.corrcoef(maxima.T)[0, 1])
+        if abs(correlation) > _RIDGE:
+            first, second = grid
+            found.append(
+                f"{first} and {second} are told together rather than apart: their best values correlate {correlation:.2f} "
+                "over the resamples; fix one of them from elsewhere to learn the other"
             )
     if all(row.deficit <= 2.0 * row.deficit_error for row in rows if row.deficit > 0):
         found.append(

@@ -3,7 +3,8 @@
 To add a quantity, you must
 1. write a frozen dataclass with `evaluate(bridge) -> (q,) array`, a pure function of the bridge (fixed random numbers),
 2. give `labels(bridge) -> list of q dicts`, the same keys in each, which become columns of the table,
-3. give `scale`: "linear", or "log" for positive numbers and "logit" for probabilities, on which intervals are formed,
+3. give `scales`, on which intervals are formed: "linear", "log" for positive numbers, "variance" for second moments (the
+   logarithm, and wider limits in small samples), "logit" for probabilities,
 4. list it in `QUANTITIES`.
 tests/test_uncertainty.py runs the laws of a quantity on every listed one.
 """
@@ -41,7 +42,7 @@ class Moments:
     """Mean and variance of every coordinate of the population at `times` (lengths and lengths²)."""
 
     times: Sequence[float]
-    scales: ClassVar[tuple[str, ...]] = ("linear", "log")
+    scales: ClassVar[tuple[str, ...]] = ("linear", "variance")
 
     def evaluate(self, bridge: Bridge) -> np.ndarray:
         """Mean and variance, alternating over coordinates and times."""

@@ -207,7 +207,7 @@ class Bridge:
         """
         chosen = self._gap_number(gap)
         if isinstance(chosen, BoxGap):
-            return BoxCoupling(None, chosen.log_p, chosen.log_q, int(gap), int(gap) + 1, chosen)
+            return BoxCoupling(chosen.kernel, chosen.log_p, chosen.log_q, int(gap), int(gap) + 1, chosen)
         return Coupling(chosen.kernel, chosen.log_p, chosen.log_q, int(gap), int(gap) + 1)
 
     def conditional_end(self, points: np.ndarray, start: float | None = None) -> ConditionalEnd:

@@ -15,9 +15,7 @@ from ..priors.box import Box
 __all__ = ["BoxLaw", "draw_images"]
 
 
-def draw_images(
-    box: Box, step: Transition, start: np.ndarray, end: np.ndarray, rng: np.random.Generator
-) -> np.ndarray:
+def draw_images(box: Box, step: Transition, start: np.ndarray, end: np.ndarray, rng: np.random.Generator) -> np.ndarray:
     """An image of each row of `end` (n, d), in the box, for a path from `start` (n, d), in unbounded space.
 
     The noise of an axis with a boundary is independent of the others, so that each axis is drawn on its own.

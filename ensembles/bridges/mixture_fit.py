@@ -45,7 +45,7 @@ def fit_mixture(
     clouds: WhitenedClouds, components: int | None, ends: MixtureEnds, warm: Callable[[Likelihood], np.ndarray] | None
 ) -> MixtureFit:
     """Fit the terminal potential; `warm` gives parameters to begin with, from another fit."""
-    walk = _Walk(clouds, ends)
+    walk = _Walk(clouds, ends, components or 1)
     tried = np.empty((0, 3))
     notes: tuple[str, ...] = ()
     count = components
@@ -64,11 +64,12 @@ def fit_mixture(
 class _Walk:
     """Fits with a rising number of components on parts of the data; each begins at the one before among others."""
 
-    def __init__(self, clouds: WhitenedClouds, ends: MixtureEnds) -> None:
+    def __init__(self, clouds: WhitenedClouds, ends: MixtureEnds, wanted: int) -> None:
         self.clouds, self.ends, self.floor = clouds, ends, stated_floor(clouds)
         folds = split_folds(len(clouds.u), len(clouds.v), ends.rng)
         self.parts = [(clouds.subset(*train), clouds.subset(*rest)) for train, rest in folds]
-        self.most = min(ends.most, *(distinct_rows(train.v, ends.most) for train, _ in self.parts))
+        self.different = min(distinct_rows(train.v, max(ends.most, wanted)) for train, _ in self.parts)
+        self.most = min(ends.most, self.different)
         coupled = ends.begin != "clusters"
         self.plans = [coupled_starts(train, ends.rng) if coupled else None for train, _ in self.parts]
         self.fits: dict[tuple[int, int], Ascent] = {}
@@ -104,7 +105,7 @@ class _Walk:
         count = model.kind.count
         if count == 1:
             return start_from_clusters(model, np.zeros(len(model.clouds.v), dtype=np.int64))
-        if count > self.most:
+        if count > self.different:
             return start_from_clusters(model, cluster_labels(model.clouds.v, model.clouds.b, count, self.ends.rng))
         if (0, count) not in self.fits:  # the number was given: walk up to it
             for fewer in candidates(count - 1):

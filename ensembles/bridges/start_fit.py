@@ -86,7 +86,7 @@ def _begin(model: StartLikelihood, seed: int) -> np.ndarray:
     """Bumps from clusters: those that give the clusters' moments once φ_0 is multiplied in, were it one Gaussian."""
     count, d, diagonal = model.kind.count, model.kind.dimension, model.kind.diagonal
     labels = cluster_labels(model.points, model.weights, count, seed)
-    tilted: QuadraticMixture = model._tilted()
+    tilted: QuadraticMixture = model.tilted()
     shares, means, covariances = [], [], []
     pooled = model.weights @ (model.points - np.stack([_mean(model, labels == k) for k in range(count)])[labels]) ** 2
     for k in range(count):
@@ -119,7 +119,7 @@ def _begin(model: StartLikelihood, seed: int) -> np.ndarray:
         means.append(centre)
         covariances.append(wide)
     start = Tilted(np.log(np.maximum(shares, 1e-12)), np.array(means), np.array(covariances))
-    logs = log_sum_exp(model._pairs(start, tilted)[0] - start.log_alpha[:, None], axis=1)
+    logs = log_sum_exp(model.pairs(start, tilted)[0] - start.log_alpha[:, None], axis=1)
     return model.pack(Tilted(start.log_alpha - logs, start.r, start.c))
 
 

@@ -83,15 +83,15 @@ class StartLikelihood:
         """log ρ_0 at every point (n,), in the frame."""
         bumps = self.unpack(theta)
         behind = log_sums(self.points, coefficients(bumps)[0])
-        tilted = self._tilted()
+        tilted = self.tilted()
         ahead = log_sum_exp(tilted.log_components(self.points), axis=1)
-        return behind + ahead - float(log_sum_exp(self._pairs(bumps, tilted)[0], axis=None))
+        return behind + ahead - float(log_sum_exp(self.pairs(bumps, tilted)[0], axis=None))
 
     def value_and_gradient(self, theta: np.ndarray) -> tuple[float, np.ndarray]:
         """Mean log ρ_0 up to a constant, with the stated prior, and its gradient."""
         bumps = self.unpack(theta)
         sums, (mass, first, second) = statistics(self.points, self.weights, coefficients(bumps)[0])
-        logs, pair_means, pair_spreads = self._pairs(bumps, self._tilted())
+        logs, pair_means, pair_spreads = self.pairs(bumps, self.tilted())
         log_mass = float(log_sum_exp(logs, axis=None))
         shares = np.exp(logs - log_mass)
         p, c, diagonal = bumps.r, bumps.c, self.kind.diagonal
@@ -121,12 +121,12 @@ class StartLikelihood:
         packed = theta[self.kind.count * (1 + self.kind.dimension) :]
         return value, np.concatenate([net_mass, by_p.ravel(), self.kind.pulled_back(packed, by_c)])
 
-    def _tilted(self) -> QuadraticMixture:
+    def tilted(self) -> QuadraticMixture:
         """exp(β_k + (η_k - η̄)·z - ½ zᵀ (U + Λ_k) z)."""
         bound, slope = self.tilt
         return QuadraticMixture(self.ahead.log_weights, self.ahead.linear - slope, self.ahead.precision + bound)
 
-    def _pairs(self, bumps: Tilted, tilted: QuadraticMixture) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    def pairs(self, bumps: Tilted, tilted: QuadraticMixture) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """log mass (J, K), mean (J, K, d) and spread (J, K, d) or (J, K, d, d) of every pair of bump and component."""
         logs, means, spreads = [], [], []
         for j in range(bumps.count):

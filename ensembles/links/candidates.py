@@ -143,7 +143,7 @@ def _from_trees(
     law: LinkLaw, log_alone: tuple[np.ndarray, np.ndarray], options: LinkOptions
 ) -> tuple[AssignmentPosterior, float]:
     """Near pairs from search trees; the radius grows until the pairs of the next shell are negligible."""
-    n, m = law.shape
+    m = law.shape[1]
     source_tree, target_tree = law.trees()
     radius = _RADIUS
     edges = _near(source_tree, target_tree, radius)
@@ -183,4 +183,3 @@ def _near(sources, targets, radius: float) -> np.ndarray:  # type: ignore[no-unt
         )
     found = sources.sparse_distance_matrix(targets, radius, output_type="ndarray")
     return np.sort(found["i"].astype(np.int64) * targets.n + found["j"])
-

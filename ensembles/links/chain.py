@@ -19,10 +19,10 @@ import numpy as np
 from scipy.sparse import csr_matrix, identity
 
 from .. import checks
+from ..bridges.images import draw_images
 from ..bridges.paths import Paths
 from ..priors.base import LinearGaussianPrior
 from ..priors.pinned import pinned_steps
-from ..bridges.images import draw_images
 from .particle_links import ParticleLinks
 
 if TYPE_CHECKING:
@@ -197,7 +197,9 @@ def _draw(links: ParticleLinks, rows: np.ndarray, rng: np.random.Generator) -> n
     goal = low + rng.random(rows.size) * (high - low + links.probability_left[rows])
     edge = np.searchsorted(sums, goal, side="right") - 1
     edge = np.clip(edge, graph.starts[rows], graph.starts[rows + 1] - 1)
-    return np.where(goal < high, graph.columns[edge], np.where(links.probability_left[rows] > 0, -1, graph.columns[edge]))
+    return np.where(
+        goal < high, graph.columns[edge], np.where(links.probability_left[rows] > 0, -1, graph.columns[edge])
+    )
 
 
 def chain_links(series: SnapshotSeries, prior: LinearGaussianPrior, links: list[ParticleLinks]) -> LinkChain:

@@ -79,7 +79,7 @@ class Evidence:
             clouds = (self.series.clouds[k], self.series.clouds[k + 1])
             duration = float(self.series.times[k + 1] - self.series.times[k])
 
-            def law(parameters: np.ndarray, duration: float = duration, clouds: tuple = clouds):  # type: ignore[no-untyped-def, type-arg]
+            def law(parameters: np.ndarray, duration: float = duration, clouds: tuple = clouds):  # type: ignore[no-untyped-def]
                 prior, localisation = self.family.build(parameters)
                 return link_law(prior, duration, clouds, localisation)
 
@@ -123,7 +123,11 @@ class Evidence:
                 jac=True,
                 method="L-BFGS-B",
                 bounds=[(x - _REACH, x + _REACH) for x in best],
-                options={"gtol": self.options.gradient_tolerance, "maxiter": self.options.iteration_limit, "ftol": 1e-12},
+                options={
+                    "gtol": self.options.gradient_tolerance,
+                    "maxiter": self.options.iteration_limit,
+                    "ftol": 1e-12,
+                },
             )
             inside = bool((np.abs(found.x - best) < 0.99 * _REACH).all())
             best = found.x

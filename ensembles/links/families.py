@@ -61,7 +61,9 @@ class PriorFamily:
                 "an Ornstein-Uhlenbeck prior has no constant drift; drift = True; its centre plays that part: leave drift out"
             )
         if self.kind == "ornstein-uhlenbeck" and self.box is not None:
-            raise checks.InputError("only a Brownian prior can live in a box; the family is 'ornstein-uhlenbeck'; leave one out")
+            raise checks.InputError(
+                "only a Brownian prior can live in a box; the family is 'ornstein-uhlenbeck'; leave one out"
+            )
 
     @property
     def _blocks(self) -> list[tuple[str, int]]:
@@ -149,7 +151,9 @@ class PriorFamily:
         for name, _ in self._blocks:
             if name == "diffusion":
                 value = self._diffusion(parts[name])
-                values.append(value[np.tril_indices(self.dimension)] if self.diffusion == "matrix" else np.atleast_1d(value))
+                values.append(
+                    value[np.tril_indices(self.dimension)] if self.diffusion == "matrix" else np.atleast_1d(value)
+                )
             elif name == "drift":
                 values.append(self.speed * parts[name])
             elif name == "centre":

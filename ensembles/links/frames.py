@@ -36,7 +36,9 @@ def require_same_particles(series: SnapshotSeries, prior: LinearGaussianPrior, d
     if detection is not None:
         value = checks.positive_number(detection, "detection", "give a probability above 0 and up to 1")
         if value > 1.0:
-            raise checks.InputError(f"detection must be a probability; it is {value:g}; give a number above 0 and up to 1")
+            raise checks.InputError(
+                f"detection must be a probability; it is {value:g}; give a number above 0 and up to 1"
+            )
     counts = [len(cloud) for cloud in series.clouds]
     if detection is None and len(set(counts)) > 1:
         k = next(i for i, count in enumerate(counts) if count != counts[0])

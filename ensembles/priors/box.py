@@ -41,8 +41,9 @@ class Box:
     boundary: tuple[str, ...]
 
     def __init__(self, lower: Any, upper: Any, boundary: str | Sequence[str] = "periodic") -> None:
-        low, high = np.atleast_1d(checks.as_float_array(lower, "lower")), np.atleast_1d(
-            checks.as_float_array(upper, "upper")
+        low, high = (
+            np.atleast_1d(checks.as_float_array(lower, "lower")),
+            np.atleast_1d(checks.as_float_array(upper, "upper")),
         )
         for name, edge in (("lower", low), ("upper", high)):
             checks.require_finite(edge, name, "give the edges of the box in length")
@@ -130,6 +131,10 @@ def read_box(value: Any) -> Box | None:
         if unknown:
             raise checks.unknown_name("key of a box", unknown[0], ["lower", "upper", "boundary"])
         if "lower" not in value or "upper" not in value:
-            raise checks.InputError(f"a box needs both edges; it has {', '.join(value) or 'none'}; give lower and upper")
+            raise checks.InputError(
+                f"a box needs both edges; it has {', '.join(value) or 'none'}; give lower and upper"
+            )
         return Box(**value)
-    raise checks.InputError(f"box must be a Box; it is {type(value).__name__}; use ensembles.Box(lower, upper, boundary)")
+    raise checks.InputError(
+        f"box must be a Box; it is {type(value).__name__}; use ensembles.Box(lower, upper, boundary)"
+    )

@@ -63,9 +63,7 @@ class Kinetic:
 
     def __init__(self, friction: float, diffusion: float) -> None:
         object.__setattr__(self, "friction", checks.positive_number(friction, "friction", "give it in 1/time"))
-        object.__setattr__(
-            self, "diffusion", checks.positive_number(diffusion, "diffusion", "give it in length²/time")
-        )
+        object.__setattr__(self, "diffusion", checks.positive_number(diffusion, "diffusion", "give it in length²/time"))
 
     @property
     def velocity_variance(self) -> float:

@@ -95,6 +95,10 @@ def _number(value: Any) -> str:
 
 
 def _parameter(value: Any) -> str:
+    if isinstance(value, dict):  # a box
+        return "; ".join(f"{name} {_parameter(item)}" for name, item in value.items())
+    if isinstance(value, str):
+        return value
     return ", ".join(_parameter(item) for item in value) if isinstance(value, (list, tuple)) else _number(value)
 
 

@@ -61,9 +61,7 @@ class AssignmentGraph:
         return cls(starts, columns[order].astype(np.int64), log_weights[order].astype(float), *log_alone)
 
     @classmethod
-    def dense(
-        cls, log_weights: np.ndarray, log_alone: tuple[np.ndarray, np.ndarray] | None = None
-    ) -> AssignmentGraph:
+    def dense(cls, log_weights: np.ndarray, log_alone: tuple[np.ndarray, np.ndarray] | None = None) -> AssignmentGraph:
         """Every pair of a matrix (n, m) whose log-weight is finite; nothing may stay alone by default."""
         n, m = log_weights.shape
         rows, columns = np.nonzero(np.isfinite(log_weights))
@@ -100,7 +98,8 @@ class AssignmentCertificate:
     Attributes
     ----------
     converged : whether row and column error met the tolerance.
-    message_change : largest change of a log-message in the last iteration, over edges that are not yet decided.
+    message_change : largest change of a log-message in the last iteration, over edges with a probability between
+        0.1 % and 99.9 %; those of decided edges may grow without end.
     row_error, column_error : largest |Σ probabilities - 1| of a row and of a column, loners included.
     evidence_difference : |log Z_B from the beliefs - log Z_B from the messages|: 0 at a stationary point.
     iterations : rounds of messages.
@@ -286,7 +285,16 @@ def _posterior(graph: AssignmentGraph, run: _Propagation, iterations: int, toler
         tolerance=tolerance,
     )
     return AssignmentPosterior(
-        graph, beliefs, alone_rows, alone_columns, from_messages, certificate, run.to_row, to_column, row_sums, column_sums
+        graph,
+        beliefs,
+        alone_rows,
+        alone_columns,
+        from_messages,
+        certificate,
+        run.to_row,
+        to_column,
+        row_sums,
+        column_sums,
     )
 
 
@@ -304,7 +312,7 @@ def _free_energy(
 
 
 def _require_edges(graph: AssignmentGraph) -> None:
-    n, m = graph.shape
+    m = graph.shape[1]
     for name, counts, alone in (
         ("row", np.diff(graph.starts), graph.log_alone_rows),
         ("column", np.bincount(graph.columns, minlength=m), graph.log_alone_columns),

@@ -10,6 +10,7 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
 from ...writing import atomic_path
+from .bands import draw_bands
 from .holdout import draw_hold_out
 from .noise import draw_noise
 from .prior_check import draw_prior_check
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
     from ...assessment.hold_out import HoldOut
     from ...assessment.noise import NoiseProfile
     from ...assessment.surprise import PriorCheck
+    from ...assessment.uncertainty import Bands
 
 __all__ = ["save_assessment_figures"]
 
@@ -29,9 +31,10 @@ def save_assessment_figures(
     hold_out: HoldOut | None = None,
     noise: NoiseProfile | None = None,
     prior_check: PriorCheck | None = None,
+    bands: Bands | None = None,
     dpi: int = 200,
 ) -> list[tuple[str, str]]:
-    """Draw what is given into `folder` as holdout.png, noise.png and prior_check.png.
+    """Draw what is given into `folder` as holdout.png, noise.png, prior_check.png and bands.png (of `Moments`).
 
     Returns
     -------
@@ -41,6 +44,7 @@ def save_assessment_figures(
         ("holdout.png", draw_hold_out, hold_out),
         ("noise.png", draw_noise, noise),
         ("prior_check.png", draw_prior_check, prior_check),
+        ("bands.png", draw_bands, bands),
     ]
     saved = []
     for name, draw, result in wanted:

@@ -9,7 +9,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
 from ..wording import axis_name
-from .style import ACCENT, GREY, INK, MARKERS, SECOND, WIDTH, plain
+from .style import ACCENT, GREY, INK, MARKERS, SECOND, WIDTH, plain, set_title
 
 if TYPE_CHECKING:
     from ...assessment.hold_out import HeldOutTime, HoldOut
@@ -42,12 +42,14 @@ def draw_hold_out(figure: Figure, result: HoldOut, score: str = "energy_distance
         ax = figure.add_subplot(grid[0, column], sharex=top, sharey=top)
         top = top or ax
         _draw_scores(ax, result, time.time, score, first=column == 0)
-        ax.set_title(plain(f"left out: {time.time:g} {result.time_unit}".rstrip()), loc="left")
+        set_title(ax, f"left out: {time.time:g} {result.time_unit}".rstrip())
     first: Axes | None = None
     for column, time in enumerate(times):
         ax = figure.add_subplot(grid[1, column], sharex=first, sharey=first)
         _draw_clouds(ax, result, time, first=first is None)
         first = first or ax
+    handles, labels = figure.axes[-1].get_legend_handles_labels()
+    figure.legend(handles, labels, loc="outside lower center", ncols=2, markerscale=1.6, handletextpad=0.3)
     unit = {"covariance_error": f"{result.length_unit}²" if result.length_unit else "", "log_density": "nats",
             "kernel_discrepancy": ""}.get(score, result.length_unit)  # fmt: skip
     figure.axes[0].set_xlabel(plain(axis_name(score.replace("_", " "), unit)))
@@ -103,5 +105,3 @@ def _draw_clouds(ax: Axes, result: HoldOut, time: HeldOutTime, *, first: bool) -
         if first:
             ax.set_ylabel(plain(axis_name(result.names[1], result.length_unit)))
     ax.tick_params(labelleft=first)
-    if first:
-        ax.legend(loc="best", markerscale=1.6, handletextpad=0.3)

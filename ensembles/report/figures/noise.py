@@ -5,7 +5,9 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 import numpy as np
+from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 
 from .style import ACCENT, DENSITY, GREY, INK, SECOND, WIDTH, plain
 
@@ -39,7 +41,7 @@ def _draw_curve(figure: Figure, result: NoiseProfile) -> str:
         ax.axvspan(*result.interval[name], color=GREY, alpha=0.25, lw=0)
         ax.axvline(result.estimate[name], color=GREY, lw=0.8)
         if (x > 0).all():
-            ax.set_xscale("log")
+            _logarithmic(ax, "x")
         ax.set_xlabel(plain(name))
     cut = "" if span[0] == scores.min() else " The lowest scores lie below the axis."
     return (
@@ -70,9 +72,9 @@ def _draw_contours(figure: Figure, result: NoiseProfile) -> str:
     ax.plot(
         result.best[first], result.best[second], "*", ms=11, color=SECOND, mec=INK, mew=0.6, zorder=4, clip_on=False
     )
-    for axis, values in ((ax.set_xscale, x), (ax.set_yscale, y)):
+    for which, values in (("x", x), ("y", y)):
         if (values > 0).all():
-            axis("log")
+            _logarithmic(ax, which)
     ax.set_xlabel(plain(first))
     ax.set_ylabel(plain(second))
     bar = figure.colorbar(filled, ax=ax)
@@ -81,3 +83,13 @@ def _draw_contours(figure: Figure, result: NoiseProfile) -> str:
         f"Held-out log score over {first} and {second}. Colour: how far it lies below the best; lines: where that is one "
         "and two standard errors; star: the best level; dots: the best of bootstrap resamples."
     )
+
+
+def _logarithmic(ax: Axes, which: str) -> None:
+    """A logarithmic axis with plain numbers at 1, 2 and 5, since levels seldom span many decades."""
+    (ax.set_xscale if which == "x" else ax.set_yscale)("log")
+    axis = ax.xaxis if which == "x" else ax.yaxis
+    low, high = sorted(ax.get_xlim() if which == "x" else ax.get_ylim())
+    axis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0) if high < 200 * low else (1.0,)))
+    axis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
+    axis.set_minor_formatter(NullFormatter())

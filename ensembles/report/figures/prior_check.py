@@ -9,7 +9,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
 from ..wording import axis_name
-from .style import ACCENT, GREY, SECOND, WIDTH, plain
+from .style import ACCENT, GREY, SECOND, WIDTH, plain, set_title
 
 if TYPE_CHECKING:
     from ...assessment.surprise import GapSurprise, PriorCheck
@@ -28,6 +28,8 @@ def draw_prior_check(figure: Figure, result: PriorCheck) -> str:
     for column, gap in enumerate(gaps):
         _draw_clouds(axes[0, column], result, gap, first=column == 0)
         _draw_simulated(axes[1, column], gap, first=column == 0)
+    handles, labels = axes[0, 0].get_legend_handles_labels()
+    figure.legend(handles, labels, loc="outside upper center", ncols=2, markerscale=1.6, handletextpad=0.3)
     figure.supxlabel(plain(axis_name("energy distance to the prior's prediction", result.length_unit)))
     shown = "" if len(gaps) == len(result.gaps) else f" {len(gaps)} of {len(result.gaps)} gaps are shown."
     return (
@@ -53,15 +55,13 @@ def _draw_clouds(ax: Axes, result: PriorCheck, gap: GapSurprise, *, first: bool)
         ax.set_xlabel(plain(axis_name(result.names[0], result.length_unit)))
         if first:
             ax.set_ylabel(plain(axis_name(result.names[1], result.length_unit)))
-    ax.set_title(f"{gap.start:g} to {gap.end:g}", loc="left")
-    if first:
-        ax.legend(loc="upper right", markerscale=1.6, handletextpad=0.3)
+    set_title(ax, f"{gap.start:g} to {gap.end:g}")
 
 
 def _draw_simulated(ax: Axes, gap: GapSurprise, *, first: bool) -> None:
     ax.hist(gap.simulated_energy, 20, color=GREY, alpha=0.6)
     ax.axvline(gap.energy_distance, color=SECOND, lw=1.6)
     entropy = f"\n{gap.entropy_p_value:.2g} by relative entropy" if gap.entropy else ""
-    ax.set_title(f"p = {gap.energy_p_value:.2g}{entropy}", loc="left")
+    set_title(ax, f"p = {gap.energy_p_value:.2g}{entropy}")
     if first:
         ax.set_ylabel("simulations")

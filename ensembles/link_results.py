@@ -1,0 +1,172 @@
+"""Link the same particles of a study's frames, estimate the prior from them, and write everything into one folder."""
+
+from __future__ import annotations
+
+import platform
+import warnings
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from . import __version__, writing
+from .study import Study
+
+if TYPE_CHECKING:
+    import pandas
+
+    from .links.estimated_prior import PriorEstimate
+    from .links.particle_links import ParticleLinks
+    from .snapshots.series import SnapshotSeries
+
+__all__ = ["write_links"]
+
+Say = Callable[[str, float], None]
+
+
+def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]:
+    """Write links.csv, particles.csv, estimate.csv, profile.png, paths.csv, summary.json and the study file into `folder`.
+
+    Returns
+    -------
+    list of the names of the files written, sorted.
+
+    Raises
+    ------
+    InputError
+        If the frames cannot hold the same particles.
+    """
+    from .links.chain import chain_links
+    from .links.estimate import EstimateOptions, estimate_prior
+    from .links.link import link_particles
+
+    series = study.read_series()
+    settings = study.links
+    said: list[str] = []
+    with warnings.catch_warnings(record=True) as caught:
+        warnings.simplefilter("always", RuntimeWarning)
+        say("Estimating the prior from unlabelled frames", 0.05)
+        options = EstimateOptions(detection=settings.detection, birth_density=settings.birth_density)
+        estimate = estimate_prior(
+            series, study.prior.kind, localisation=settings.localisation, box=study.box.build(), options=options
+        )
+        prior = estimate.prior if settings.prior == "estimated" else study.build_prior()
+        say("Linking particles", 0.5)
+        links = link_particles(
+            series, prior, detection=settings.detection, birth_density=settings.birth_density,
+            localisation=settings.localisation,
+        )  # fmt: skip
+        chain = chain_links(series, prior, links)
+        said += list(dict.fromkeys(str(w.message) for w in caught))
+    say("Writing tables", 0.7)
+    writing.write_table(folder / "links.csv", _links_table(series, links, settings.alternatives))
+    writing.write_table(folder / "particles.csv", _particles_table(series, links))
+    writing.write_table(folder / "estimate.csv", estimate.to_frame())
+    times = np.union1d(np.linspace(series.times[0], series.times[-1], study.output.path_times), series.times)
+    paths = chain.sample_paths(study.output.paths, times, rng=seed)
+    writing.write_table(folder / "paths.csv", paths.to_frame().rename(columns={"time": series.time_name}))
+    say("Drawing the profile", 0.8)
+    caption = _draw_profile(folder, estimate)
+    writing.write_text(folder / "study.toml", study.text)
+    # Last: the folder is known as a complete output by this file.
+    summary = _summary(study, series, (estimate, prior, links), said, seed)
+    writing.write_json(folder / writing.MARKER, {**summary, "figures": {"profile.png": caption}})
+    return sorted(path.name for path in folder.iterdir())
+
+
+def _links_table(series: SnapshotSeries, links: list[ParticleLinks], count: int) -> pandas.DataFrame:
+    """The most probable later particles of every particle, with the distance to each and whether it is assigned."""
+    import pandas
+
+    unit = f" [{series.length_unit}]" if series.length_unit else ""
+    parts = []
+    for found in links:
+        table = found.top_alternatives(count)
+        k = found.source
+        source, target = table["source"].to_numpy(), table["target"].to_numpy()
+        moved = series.clouds[k + 1][target] - series.clouds[k][source]
+        columns: dict[str, Any] = {
+            "gap": k, "source_row": series.rows[k][source], "target_row": series.rows[k + 1][target],
+            "rank": table["rank"], "probability": table["probability"], "assigned": found.assignment[source] == target,
+        }  # fmt: skip
+        columns |= {f"moved_{name}{unit}": moved[:, axis] for axis, name in enumerate(series.position_names)}
+        parts.append(pandas.DataFrame(columns))
+    return pandas.concat(parts, ignore_index=True)
+
+
+def _particles_table(series: SnapshotSeries, links: list[ParticleLinks]) -> pandas.DataFrame:
+    """One row an earlier particle of every gap: its entropy, the probability of having left, and its assigned link."""
+    import pandas
+
+    parts = []
+    for found in links:
+        k, assigned = found.source, found.assignment
+        rows = series.rows[k + 1]
+        target = pandas.array([int(rows[j]) if j >= 0 else None for j in assigned], dtype="Int64")
+        parts.append(pandas.DataFrame({
+            "gap": k, "source_row": series.rows[k], "assigned_row": target,
+            "assigned_probability": found.probability_of(assigned), "probability_left": found.probability_left,
+            "entropy [nats]": found.entropy,
+        }))  # fmt: skip
+    return pandas.concat(parts, ignore_index=True)
+
+
+def _draw_profile(folder: Path, estimate: PriorEstimate) -> str:
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    from .report.figures.profile import draw_profiles
+    from .report.figures.style import polish
+
+    names = list(estimate.values)
+    figure = Figure(layout="constrained", facecolor="white")
+    FigureCanvasAgg(figure)
+    profiles = {name: estimate.profile(name, points=9) for name in names[:6]}
+    caption = draw_profiles(figure, profiles, estimate.to_frame(), estimate.drop_at())
+    polish(figure)
+    with writing.atomic_path(folder / "profile.png") as temporary:
+        figure.savefig(temporary, dpi=200, format="png")
+    return caption
+
+
+def _summary(
+    study: Study, series: SnapshotSeries, found: tuple[Any, Any, list[ParticleLinks]], said: list[str], seed: int
+) -> dict[str, Any]:
+    estimate, prior, links = found
+    rows = estimate.to_frame().to_dict(orient="records")
+    gaps = [
+        {
+            "particles": list(link.shape),
+            "expected_right_links": link.expected_right_links,
+            "mean_entropy_nats": float(link.entropy.mean()),
+            "expected_left": float(link.probability_left.sum()),
+            "expected_new": float(link.probability_new.sum()),
+            "log_evidence": link.log_evidence,
+            "log_evidence_error": link.log_evidence_error,
+            "method": link.method,
+            "certificate": {
+                "converged": link.certificate.converged,
+                "message_change": link.certificate.propagation.message_change,
+                "row_error": link.certificate.propagation.row_error,
+                "column_error": link.certificate.propagation.column_error,
+                "evidence_difference": link.certificate.propagation.evidence_difference,
+                "left_out": link.certificate.left_out,
+            },
+        }
+        for link in links
+    ]
+    return {
+        "program": "ensembles",
+        "versions": {"ensembles": __version__, "python": platform.python_version()},
+        "study": {
+            "file": study.path.name, "title": study.title, "seed": seed, "identity": "same",
+            "data": {"file": study.data.file, "fingerprint": series.fingerprint()},
+        },
+        "prior": {"kind": prior.kind, "parameters": prior.parameters(), "taken": study.links.prior},
+        "estimate": {
+            "parameters": rows, "log_evidence": estimate.log_evidence, "identified": estimate.identified
+        },
+        "links": gaps,
+        "warnings": said,
+    }  # fmt: skip

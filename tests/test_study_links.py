@@ -1,0 +1,110 @@
+"""Study files about the same particles: identity, boxes, units; what `solve` then writes."""
+
+import json
+
+import numpy as np
+import pandas
+import pytest
+from numpy.testing import assert_allclose
+from typer.testing import CliRunner
+
+import ensembles
+from ensembles.cli import app
+from ensembles.study import read_study
+
+
+def write_study(folder, *, identity="same", diffusion='"0.2 um^2/s"', box="", links="", seed=0, counts=(40, 40)):
+    rng = np.random.default_rng(seed)
+    start = rng.random((40, 2)) * 20.0
+    end = start + np.sqrt(2 * 0.2 * 0.5) * rng.standard_normal(start.shape)
+    rows = [(0.0, *x) for x in start[: counts[0]]] + [
+        (0.5, *np.clip(x, 0, 20)) for x in rng.permutation(end)[: counts[1]]
+    ]
+    pandas.DataFrame(rows, columns=["t_s", "x", "y"]).to_csv(folder / "data.csv", index=False)
+    study = folder / "study.toml"
+    study.write_text(
+        f"""
+[study]
+title = "Tracers"
+identity = "{identity}"
+[data]
+file = "data.csv"
+time = "t_s"
+position = ["x", "y"]
+[units]
+time = "s"
+length = "µm"
+[prior]
+kind = "brownian"
+diffusion = {diffusion}
+{box}
+{links}
+""",
+        encoding="utf-8",
+    )
+    return study
+
+
+def run(study, out):
+    return CliRunner().invoke(app, ["solve", str(study), "--out", str(out)])
+
+
+def test_solve_links_the_same_particles(tmp_path):
+    result = run(write_study(tmp_path), tmp_path / "out")
+    assert result.exit_code == 0, result.output
+    out = tmp_path / "out"
+    assert sorted(p.name for p in out.iterdir()) == [
+        "estimate.csv", "links.csv", "particles.csv", "paths.csv", "profile.png", "study.toml", "summary.json",
+    ]  # fmt: skip
+    links = pandas.read_csv(out / "links.csv")
+    assert {"moved_x [µm]", "moved_y [µm]", "probability", "assigned"} <= set(links.columns)
+    assert links.groupby("source_row")["probability"].sum().max() <= 1 + 1e-6
+    assert links.loc[links["assigned"], "target_row"].is_unique
+    estimate = pandas.read_csv(out / "estimate.csv")
+    assert estimate["unit"].tolist() == ["µm²/s"]
+    assert estimate["lower"][0] < 0.2 < estimate["upper"][0]
+    particles = pandas.read_csv(out / "particles.csv")
+    assert len(particles) == 40 and "entropy [nats]" in particles
+    summary = json.loads((out / "summary.json").read_text(encoding="utf-8"))
+    assert summary["links"][0]["certificate"]["converged"]
+    assert_allclose(summary["prior"]["parameters"]["diffusion"], 0.2)
+
+
+def test_a_box_and_the_estimated_prior(tmp_path):
+    box = '[box]\nlower = [0, "0 um"]\nupper = [20, 20.0]\nboundary = "reflecting"'
+    study = write_study(tmp_path, box=box, links='[links]\nprior = "estimated"\ndetection = 0.9')
+    assert read_study(study).build_prior().box.boundary == ("reflecting", "reflecting")
+    result = run(study, tmp_path / "out")
+    assert result.exit_code == 0, result.output
+    summary = json.loads((tmp_path / "out" / "summary.json").read_text(encoding="utf-8"))
+    assert summary["prior"]["taken"] == "estimated"
+    assert summary["prior"]["parameters"]["box"]["upper"] == [20.0, 20.0]
+
+
+def test_a_box_in_the_population_bridge(tmp_path):
+    study = write_study(tmp_path, identity="lost", box='[box]\nlower = [0, 0]\nupper = [20, 20]\nboundary = "periodic"')
+    result = run(study, tmp_path / "out")
+    assert result.exit_code == 0, result.output
+    assert (tmp_path / "out" / "bridge.npz").is_file()
+    assert ensembles.load_bridge(tmp_path / "out" / "bridge.npz").prior.box.boundary == ("periodic", "periodic")
+
+
+@pytest.mark.parametrize(
+    ("changes", "message"),
+    [
+        ({"diffusion": '"0.2 um/s"'}, "prior.the unit of diffusion does not match its quantity; it is '0.2 um/s'"),
+        ({"diffusion": '"0.2 foo"'}, "unit that is not known"),
+        ({"identity": "other"}, "identity"),
+        ({"box": "[box]\nlower = [0, 0]"}, "a box needs both edges"),
+        ({"box": "[box]\nlower = [0]\nupper = [20]"}, "the box has the wrong dimension"),
+        ({"box": '[box]\nlower = [0, 0]\nupper = [20, 20]\nboundary = "periodc"'}, "unknown boundary"),
+        ({"box": "[box]\nlower = [0, 0]\nupper = [10, 10]"}, "positions must lie in the box"),
+        ({"links": "[links]\ndetecton = 0.5"}, "detection"),
+        ({"counts": (40, 38)}, "the same particles must be in every frame; there are 40 at t = 0 and 38"),
+    ],
+)
+def test_bad_study_files(tmp_path, changes, message):
+    result = run(write_study(tmp_path, **changes), tmp_path / "out")
+    assert result.exit_code == 2
+    assert message in result.output.replace("\n", " ")
+    assert not (tmp_path / "out").exists()
