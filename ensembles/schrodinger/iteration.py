@@ -18,6 +18,7 @@ from .solution import State
 __all__ = ["Start", "Strategy", "level_states", "solver_states", "sweep_states"]
 
 _NEWTON_ENTRY = 45.0  # nanoseconds that a second-order step takes for an entry of the sparse coupling
+_PASS = 1e5  # nanoseconds of a pass over the kernel apart from its entries
 _RETRY = 60  # sweeps between two questions whether second-order steps pay
 
 Start = Callable[[float], tuple[np.ndarray, np.ndarray]]
@@ -157,5 +158,5 @@ def _entries_worth(kernel: Kernel, sweeps: float, error: float, goal: float, str
     spared = sweeps - steps * strategy.newton_after
     if spared <= 0.0:
         return 0
-    saved = spared * kernel.entry_time * kernel.shape[0] * kernel.shape[1]
+    saved = spared * (_PASS + kernel.entry_time * kernel.shape[0] * kernel.shape[1])
     return int(min(saved / (_NEWTON_ENTRY * steps), strategy.entry_limit))
