@@ -216,8 +216,8 @@ def timing(count: int) -> str:
     c = links.certificate
     own = np.asarray(links.sparse()[np.arange(count), np.argsort(order)]).ravel()
     return (
-        f"{count} x {count}: {took:.1f} s ({busy:.1f} s of processors), {links.graph.edges} links kept, {c.propagation.iterations} rounds, certified: "
-        f"{c.converged}; sums off by {c.propagation.row_error:.1e}, after balancing {c.row_error:.1e}; two formulas for the "
+        f"{count} x {count}: {took:.1f} s ({busy:.1f} s of processors), {links.graph.edges} links kept, "
+        f"{c.propagation.iterations} rounds, certified: {c.converged}; sums off by {c.propagation.row_error:.1e}, after balancing {c.row_error:.1e}; two formulas for the "
         f"log evidence ({links.log_evidence:.1f}) differ by {c.propagation.evidence_difference:.1e}; left out {c.left_out:.1e}; "
         f"right links: mean probability of the true one {own.mean():.4f}"
         + (f", {right} right in the most expected assignment" if right >= 0 else "")
