@@ -206,22 +206,22 @@ def timing(count: int) -> str:
 
     rng = np.random.default_rng(0)
     start = rng.random((count, 2)) * 3.0 * np.sqrt(count)
-    end = start + rng.standard_normal((count, 2))
+    moved = start + rng.standard_normal((count, 2))
     order = rng.permutation(count)
-    series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [start, end[order]])
+    series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [start, moved[order]])
     began, busy = time.perf_counter(), time.process_time()
     links = ensembles.link_particles(series, ensembles.Brownian(diffusion=0.5))[0]
     took, busy = time.perf_counter() - began, time.process_time() - busy
     right = int((links.expected_assignment == np.argsort(order)).sum()) if count <= 20_000 else -1
     c = links.certificate
     own = np.asarray(links.sparse()[np.arange(count), np.argsort(order)]).ravel()
+    rounds, end = c.propagation.iterations, "" if right < 0 else f", {right} right in the most expected assignment"
     return (
-        f"{count} x {count}: {took:.1f} s ({busy:.1f} s of processors), {links.graph.edges} links kept, {c.propagation.iterations} rounds, certified: "
-        f"{c.converged}; sums off by {c.propagation.row_error:.1e}, after balancing {c.row_error:.1e}; two formulas for the "
-        f"log evidence ({links.log_evidence:.1f}) differ by {c.propagation.evidence_difference:.1e}; left out {c.left_out:.1e}; "
-        f"right links: mean probability of the true one {own.mean():.4f}"
-        + (f", {right} right in the most expected assignment" if right >= 0 else "")
-        + f"; peak memory {resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e6:.2f} GB"
+        f"{count} x {count}: {took:.1f} s ({busy:.1f} s of processors), {links.graph.edges} links kept, {rounds} rounds, "
+        f"certified: {c.converged}; sums off by {c.propagation.row_error:.1e}, after balancing {c.row_error:.1e}; two formulas "
+        f"for the log evidence ({links.log_evidence:.1f}) differ by {c.propagation.evidence_difference:.1e}; left out "
+        f"{c.left_out:.1e}; mean probability of the true link {own.mean():.4f}{end}; peak memory "
+        f"{resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e6:.2f} GB"
     )
 
 
