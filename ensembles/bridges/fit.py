@@ -20,7 +20,7 @@ from .bridge import Bridge
 from .choose_ends import chosen_ends
 from .smooth import KernelEnds, MixtureEnds, SmoothSolution
 from .smooth_fit import fit_smooth_gap
-from .warm import gap_start, history_of
+from .warm import GapProblem, gap_start, history_of
 
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
@@ -110,6 +110,8 @@ def fit_bridge(
             prior.box.require_inside(cloud, f" in snapshot t = {time:g}")
     if not isinstance(chosen, str):
         return _fit_smooth(series, prior, chosen, components, start, reason)
+    if start is not None:
+        _require_same_snapshots(start, series)
     solutions = []
     for k in range(len(series.times) - 1):
         solution = _solve_gap(series, prior, k, tolerance, start, options)
@@ -175,9 +177,9 @@ def _solve_gap(
     if prior.box is not None:
         kernel = gap_kernel(prior, transition, series.clouds[k], series.clouds[k + 1])
         return solve(kernel, weights, tolerance=tolerance, sweep_limit=options.sweep_limit, observe=observe)
-    start_values, strategy = gap_start(
-        (u, v), weights, transition, start, series, k, gaussian_kernel, options.memory, tolerance, options.strategy
-    )
+    problem = GapProblem(k, (u, v), weights, transition, tolerance)
+    coarse = 4.0 * len(u) * len(v) > options.memory
+    start_values, strategy = gap_start(problem, start, gaussian_kernel, options.strategy, coarse=coarse)
     return solve(
         gaussian_kernel(u, v, options.memory),
         weights,
@@ -187,6 +189,15 @@ def _solve_gap(
         strategy=strategy,
         observe=observe,
     )
+
+
+def _require_same_snapshots(start: Bridge, series: SnapshotSeries) -> None:
+    counts, wanted = ([len(cloud) for cloud in given.clouds] for given in (start.series, series))
+    if counts != wanted or start.series.dimension != series.dimension:
+        raise checks.InputError(
+            f"start is a bridge through other snapshots; they hold {counts} particles where {wanted} are needed; "
+            "start from a fit of the same snapshots"
+        )
 
 
 def _require_enough_noise(

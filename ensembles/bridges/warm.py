@@ -8,12 +8,11 @@ last few fits are therefore extrapolated (Lagrange's polynomial in log ε), and 
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .. import checks
 from ..kernels.base import Kernel
 from ..priors.base import Transition
 from ..schrodinger.coarse import coarse_potentials, gaussian_start
@@ -21,10 +20,9 @@ from ..schrodinger.iteration import Start, Strategy
 from ..schrodinger.relaxation import best_factor
 
 if TYPE_CHECKING:
-    from ..snapshots.series import SnapshotSeries
     from .bridge import Bridge
 
-__all__ = ["gap_start", "history_of"]
+__all__ = ["GapProblem", "gap_start", "history_of"]
 
 Pair = tuple[np.ndarray, np.ndarray]
 
@@ -40,31 +38,39 @@ def history_of(start: Bridge | None) -> tuple[Bridge, ...]:
     return (*start.earlier, replace(start, earlier=()))[-_REMEMBERED:]
 
 
+@dataclass(frozen=True)
+class GapProblem:
+    """One gap to be solved: its number, whitened clouds (n, d), (m, d), weights that sum to 1, transition, and L1 error."""
+
+    number: int
+    clouds: Pair
+    weights: Pair
+    transition: Transition
+    tolerance: float
+
+
 def gap_start(
-    clouds: Pair,
-    weights: Pair,
-    transition: Transition,
+    problem: GapProblem,
     warm: Bridge | None,
-    series: SnapshotSeries,
-    k: int,
     make_kernel: Callable[[np.ndarray, np.ndarray], Kernel],
-    memory: float,
-    tolerance: float,
     strategy: Strategy,
+    *,
+    coarse: bool,
 ) -> tuple[Start | Pair, Strategy]:
-    """Potentials to start gap k from, and the strategy that goes with them."""
+    """Potentials to start a gap from, and the strategy that goes with them; `coarse` begins with coarser clouds."""
     if warm is not None:
-        found = _from_fits(warm, series, k, transition)
+        found = _from_fits(warm, problem.number, problem.transition)
         if found is not None:
             potentials, factor = found
             return potentials, replace(strategy, first_factor=factor)
-    if 4.0 * clouds[0].shape[0] * clouds[1].shape[0] <= memory:
+    clouds, weights = problem.clouds, problem.weights
+    if not coarse:
         return gaussian_start(clouds, weights), strategy
     chosen = [np.flatnonzero(weight) for weight in weights]
     potentials, factor = coarse_potentials(
         (clouds[0][chosen[0]], clouds[1][chosen[1]]),
         (weights[0][chosen[0]], weights[1][chosen[1]]),
-        tolerance,
+        problem.tolerance,
         make_kernel,
         strategy,
     )
@@ -74,13 +80,7 @@ def gap_start(
     return full, replace(strategy, first_factor=factor)
 
 
-def _from_fits(warm: Bridge, series: SnapshotSeries, k: int, transition: Transition) -> tuple[Pair, float] | None:
-    counts = [len(cloud) for cloud in warm.series.clouds]
-    if counts != [len(cloud) for cloud in series.clouds] or warm.series.dimension != series.dimension:
-        raise checks.InputError(
-            f"start is a bridge through other snapshots; they hold {counts} particles where "
-            f"{[len(cloud) for cloud in series.clouds]} are needed; start from a fit of the same snapshots"
-        )
+def _from_fits(warm: Bridge, k: int, transition: Transition) -> tuple[Pair, float] | None:
     noise = _log_noise(transition)
     latest = warm.gaps[k]
     step = noise - _log_noise(latest.transition)
@@ -89,7 +89,7 @@ def _from_fits(warm: Bridge, series: SnapshotSeries, k: int, transition: Transit
     fits = [latest]
     for bridge in reversed(warm.earlier):
         gap = bridge.gaps[k]
-        if bridge.series is not series or warm.series is not series:
+        if bridge.series is not warm.series:
             break
         if abs(_log_noise(fits[-1].transition) - _log_noise(gap.transition)) * _REACH < abs(step) or step == 0.0:
             break
@@ -120,5 +120,5 @@ def _lagrange(nodes: np.ndarray, place: float) -> np.ndarray:
 def _carried_factor(factor: float, step: float) -> float:
     """The best relaxation factor after a change of log ε by `step`: 1 - θ = (2 / ω - 1)² goes with ε."""
     if factor <= 1.0:
-        return 1.0
+        return factor
     return best_factor(1.0 - min((2.0 / factor - 1.0) ** 2 * np.exp(step), 1.0))

@@ -17,7 +17,7 @@ from .solution import State
 
 __all__ = ["Start", "Strategy", "level_states", "solver_states", "sweep_states"]
 
-_NEWTON_ENTRY = 45.0  # nanoseconds that a second-order step takes for an entry of the sparse coupling
+_NEWTON_ENTRY = 30.0  # nanoseconds that a second-order step takes for an entry of the sparse coupling
 _PASS = 1e5  # nanoseconds of a pass over the kernel apart from its entries
 _RETRY = 60  # sweeps between two questions whether second-order steps pay
 
@@ -34,7 +34,8 @@ class Strategy:
     ladder_top : mean cost at the top of the ladder; above it the kernel is too sharp to start on.
     level_sweeps, level_error : a level above the last ends after that many sweeps, or at that error.
     relaxation : whether sweeps are over-relaxed.
-    first_factor : relaxation factor of the first sweeps at the problem's own noise, where one is known.
+    first_factor : relaxation factor of the first sweeps at the problem's own noise, where one is known; 0 where sweeps are
+        known to be slow.
     newton : whether second-order steps are taken.
     newton_after : sweeps that a second-order step costs apart from its entries.
     entry_limit : entries the sparsified coupling of a second-order step may have.

@@ -99,7 +99,7 @@ class Solution:
     certificate : `Certificate`.
     history : (passes, 4) array: scale, row error, column error, Hilbert step of each pass.
     unreachable : row numbers of targets that no source reaches in floating point.
-    relaxation : factor of the last sweeps at the problem's own noise, for a later solve to begin with.
+    relaxation : factor of the last sweeps, for a later solve to begin with; 0 if second-order steps finished this one.
     """
 
     log_f: np.ndarray

@@ -124,8 +124,8 @@ class _Run:
 
     def ends(self, state: State) -> bool:
         self.history.append((state.scale, state.row_error, state.column_error, state.hilbert_step))
-        if state.scale == 1.0 and state.stage == "sweep":
-            self.relaxation = state.relaxation
+        if state.scale == 1.0:
+            self.relaxation = state.relaxation if state.stage == "sweep" else 0.0
         last, self._last = self._last, state
         if last and last.stage == state.stage == "sweep" and last.relaxation == state.relaxation == 1.0:
             rounding = 1e-9 * max(1.0, float(np.abs(state.log_g).max()))
