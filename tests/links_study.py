@@ -23,6 +23,7 @@ DATA = Path(__file__).resolve().parents[1] / "data" / "argon_diffusion.npz"
 FRAME = 10.0  # ps between frames
 START_STEP = 8  # frames between the starts of two draws, so that draws of all atoms differ too
 UNITS = {"time": "ps", "length": "Å"}
+DIFFUSION = 0.205  # Å²/ps: data/README.md
 FLOOR = 1e-4  # probability below which a log score counts no further
 
 
@@ -57,14 +58,19 @@ def read_positions() -> tuple[np.ndarray, np.ndarray]:
         return archive["unwrapped_A"].astype(float), archive["box_A"].mean(axis=0)
 
 
-def study(count: int, steps: int, seed: int, *, wrapped: bool = False) -> Draw:
-    """Tag `count` atoms, forget which is which, and compare `steps` frames later; `wrapped` keeps only the place in the box."""
+def study(count: int, steps: int, seed: int, *, wrapped: bool = False, independent: bool = False) -> Draw:
+    """Tag `count` atoms, forget which is which, and compare `steps` frames later.
+
+    `wrapped` keeps only the place in the box; `independent` replaces the atoms' moves by independent Gaussian ones.
+    """
     positions, edges = read_positions()
     rng = np.random.default_rng(seed)
     tagged = rng.choice(positions.shape[1], count, replace=False)
     first = START_STEP * seed
     start, end = positions[first, tagged], positions[first + steps, tagged]
     gap = FRAME * steps
+    if independent:
+        end = start + rng.normal(size=start.shape) * np.sqrt(2.0 * DIFFUSION * gap)
     true = float(((end - start) ** 2).mean() / (2.0 * gap))
     box = None
     if wrapped:
@@ -206,22 +212,22 @@ def timing(count: int) -> str:
 
     rng = np.random.default_rng(0)
     start = rng.random((count, 2)) * 3.0 * np.sqrt(count)
-    end = start + rng.standard_normal((count, 2))
+    moved = start + rng.standard_normal((count, 2))
     order = rng.permutation(count)
-    series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [start, end[order]])
+    series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [start, moved[order]])
     began, busy = time.perf_counter(), time.process_time()
     links = ensembles.link_particles(series, ensembles.Brownian(diffusion=0.5))[0]
     took, busy = time.perf_counter() - began, time.process_time() - busy
     right = int((links.expected_assignment == np.argsort(order)).sum()) if count <= 20_000 else -1
     c = links.certificate
     own = np.asarray(links.sparse()[np.arange(count), np.argsort(order)]).ravel()
+    rounds, end = c.propagation.iterations, "" if right < 0 else f", {right} right in the most expected assignment"
     return (
-        f"{count} x {count}: {took:.1f} s ({busy:.1f} s of processors), {links.graph.edges} links kept, {c.propagation.iterations} rounds, certified: "
-        f"{c.converged}; sums off by {c.propagation.row_error:.1e}, after balancing {c.row_error:.1e}; two formulas for the "
-        f"log evidence ({links.log_evidence:.1f}) differ by {c.propagation.evidence_difference:.1e}; left out {c.left_out:.1e}; "
-        f"right links: mean probability of the true one {own.mean():.4f}"
-        + (f", {right} right in the most expected assignment" if right >= 0 else "")
-        + f"; peak memory {resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e6:.2f} GB"
+        f"{count} x {count}: {took:.1f} s ({busy:.1f} s of processors), {links.graph.edges} links kept, {rounds} rounds, "
+        f"certified: {c.converged}; sums off by {c.propagation.row_error:.1e}, after balancing {c.row_error:.1e}; two formulas "
+        f"for the log evidence ({links.log_evidence:.1f}) differ by {c.propagation.evidence_difference:.1e}; left out "
+        f"{c.left_out:.1e}; mean probability of the true link {own.mean():.4f}{end}; peak memory "
+        f"{resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e6:.2f} GB"
     )
 
 
@@ -237,33 +243,31 @@ def argon(draws: int = 10) -> None:
         if steps == 10 or wrapped:
             chosen = [draw for draws in groups.values() for draw in draws]
             print(f"\nReliability of all links so far ({len(chosen)} draws)\n{reliability_table(chosen)}\n", flush=True)
-    print(independent_control())
 
 
-def independent_control(diffusion: float = 0.205) -> str:
-    """The wrapped box again with steps that are independent: what the estimate gives when its assumption holds."""
-    positions, edges = read_positions()
-    box = ensembles.Box(np.zeros(3), edges)
-    found = []
-    for seed in range(3):
-        rng = np.random.default_rng(seed)
-        start = box.fold(positions[START_STEP * seed])
-        end = box.fold(start + rng.normal(size=start.shape) * np.sqrt(2.0 * diffusion * FRAME))
-        series = ensembles.SnapshotSeries.from_arrays([0.0, FRAME], [start, rng.permutation(end)], units=UNITS)
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore", RuntimeWarning)
-            estimate = ensembles.estimate_prior(series, "brownian", box=box)
-        found.append(f"{float(estimate.prior.diffusion):.4f} ± {estimate.standard_errors['diffusion']:.4f}")
-    return f"Control, 1000 wrapped, 10 ps, independent steps of D = {diffusion}: estimated {', '.join(found)}"
+def control(draws: int = 10) -> None:
+    """Print the same for independent Gaussian moves from the same places: what holds when the prior does."""
+    groups = {
+        f"{count} {'wrapped' if wrapped else 'simulated'}, {FRAME * steps:g} ps": [
+            study(count, steps, seed, wrapped=wrapped, independent=True) for seed in range(repeats)
+        ]
+        for count, steps, wrapped, repeats in ((200, 1, False, draws), (200, 3, False, draws), (1000, 1, True, 3))
+    }
+    print("Control: independent Gaussian moves from the same places")
+    print(estimate_table(groups))
+    pooled = [draw for draws in groups.values() for draw in draws]
+    print(f"\nReliability, control ({len(pooled)} draws)\n{reliability_table(pooled)}\n", flush=True)
 
 
 def main(arguments: list[str]) -> None:
-    """Print one part, or all: few, argon, trap, timing."""
-    parts = arguments or ["few", "argon", "trap", "timing"]
+    """Print one part, or all: few, argon, control, trap, timing."""
+    parts = arguments or ["few", "argon", "control", "trap", "timing"]
     if "few" in parts:
         print(few_particles(), flush=True)
     if "argon" in parts:
         argon()
+    if "control" in parts:
+        control()
     if "trap" in parts:
         inside = trap_recovery(100)
         for name, held in inside.items():

@@ -113,24 +113,40 @@ def test_a_trap_is_recovered():
 
 
 def test_argon_with_hidden_labels():
-    # Real data: data/README.md. scripts/links prints all groups with 10 draws each.
-    near = [links_study.study(200, 1, seed) for seed in range(3)]
-    ratios = np.array([draw.estimated / draw.true for draw in near])
-    assert np.median(np.abs(ratios - 1)) < 0.03
-    for draw in near:
-        assert draw.right["most expected"] > draw.right["nearest"] + 0.03
-        assert draw.log_score["links"] > draw.log_score["coupling"] > draw.log_score["nearest"]
-        assert abs(np.log(draw.estimated / draw.true)) < 3 * draw.error / draw.estimated
-    mean = {name: np.mean([draw.log_score[name] for draw in near]) for name in near[0].log_score}
-    assert mean["links"] > mean["propagation"]
-    far = links_study.study(200, 3, 1)
-    assert abs(far.estimated / far.true - 1) < 0.2
-    assert far.entropy > 3 * near[0].entropy
-    # Reliability: bins with at least 100 pooled links.
-    table = links_study.reliability([*near, far], "links", bins=5)
-    filled = table[:, 0] >= 100
-    assert filled.sum() >= 3
-    assert (np.abs(table[filled, 1] - table[filled, 2]) < 0.1).all()
+    # Real data: data/README.md. scripts/links prints all groups; these are its two of 200 atoms, 10 draws each.
+    near, far = ([links_study.study(200, steps, seed) for seed in range(10)] for steps in (1, 3))
+    for draws, largest in ((near, 0.03), (far, 0.10)):
+        ratios = np.array([draw.estimated / draw.true for draw in draws])
+        assert np.median(np.abs(ratios - 1)) < largest
+        errors = np.array([draw.error / draw.estimated for draw in draws])
+        assert (np.abs(np.log(ratios)) < 3 * errors).all()
+        for name in ("right", "log_score"):
+            mean = {key: np.mean([getattr(draw, name)[key] for draw in draws]) for key in getattr(draws[0], name)}
+            if name == "right":
+                assert mean["most expected"] > mean["nearest"] + 0.08
+                assert mean["most expected"] > mean["most probable"] - 0.01
+            else:
+                assert mean["links"] > max(mean["propagation"], mean["coupling"]) > mean["nearest"]
+    # Reliability over some 7,000 links: better than the coupling's, but the middle bins are off by up to 0.1 (they say
+    # too little), with labelled D and with clusters of 12 too: neighbouring atoms do not move independently.
+    pooled = [*near, *far]
+    table, coupling = (links_study.reliability(pooled, name) for name in ("links", "coupling"))
+    assert table[:, 0].sum() > 5_000 and (table[:, 0] > 0).all()
+    off, far_off = (np.abs(t[:, 2] - t[:, 1]) for t in (table, coupling))
+    assert off.max() < 0.15
+    assert far_off.max() > 1.5 * off.max()
+    assert table[:, 0] @ off < 0.01 * table[:, 0].sum()
+
+
+def test_links_are_reliable_where_the_prior_holds():
+    # Independent Gaussian moves from the places of argon atoms: every bin within 0.05 or three standard errors.
+    draws = [links_study.study(200, steps, seed, independent=True) for steps in (1, 3) for seed in range(10)]
+    table = links_study.reliability(draws, "links")
+    assert table[:, 0].sum() > 5_000 and (table[:, 0] > 100).all()
+    errors = np.sqrt(table[:, 1] * (1 - table[:, 1]) / table[:, 0])
+    assert (np.abs(table[:, 2] - table[:, 1]) < np.maximum(0.05, 3 * errors)).all()
+    coupling = links_study.reliability(draws, "coupling")
+    assert np.abs(coupling[:, 2] - coupling[:, 1]).max() > 0.15
 
 
 def test_frames_that_tell_nothing_say_so():

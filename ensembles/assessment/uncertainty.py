@@ -99,7 +99,7 @@ def bootstrap(
     in the result; that the prior could be wrong is not. On the scale of the quantity (logarithm for positive numbers)
     with estimate θ, bias b and standard deviation s of the resamples, the limits are θ - b ± t s, t of Student's law. Its
     degrees of freedom are n - 1 of the smallest snapshot, and (n - 1)/7 for variances: Satterthwaite's 2 n/(κ - 1) with the
-    kurtosis κ of what a particle adds, 3 for the mean and 15 for the variance of a normal population.
+    kurtosis κ of what a particle adds, 3 for the mean and 15 for the variance of a normal population; few refits take more.
 
     Parameters
     ----------
@@ -250,13 +250,16 @@ def _back(value: float, scale: str) -> float:
 def _limits(
     estimate: np.ndarray, resampled: np.ndarray, scales: Sequence[str], chance: float, count: int
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    repeats = len(resampled)
     degrees = {scale: max((count - 1) / (7.0 if scale == "variance" else 1.0), 1.0) for scale in scales}
+    # The spread of few refits is uncertain as well, and so is their mean, by which the bias is known.
+    degrees = {scale: 1.0 / (1.0 / freedom + 1.0 / (repeats - 1)) for scale, freedom in degrees.items()}
     width = {scale: stats.t.ppf(0.5 * (1.0 + chance), freedom) for scale, freedom in degrees.items()}
     lower, upper = np.empty_like(estimate), np.empty_like(estimate)
     for i, scale in enumerate(scales):
         draws = _forward(resampled[:, i], scale)
         middle = 2.0 * float(_forward(estimate[i : i + 1], scale)[0]) - draws.mean()
-        reach = width[scale] * draws.std(ddof=1)
+        reach = width[scale] * draws.std(ddof=1) * np.sqrt(1.0 + 1.0 / repeats)
         lower[i], upper[i] = _back(middle - reach, scale), _back(middle + reach, scale)
     return lower, upper, resampled.mean(axis=0) - estimate
 

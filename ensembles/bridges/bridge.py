@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -43,6 +43,7 @@ class Bridge:
     notes : sentences worth knowing: why these ends, what was chosen.
     gap_weights : the weights of both snapshots in the coupling of each gap, where growth makes them others than the
         series' own; otherwise None.
+    earlier : the last fits of a sweep that this one started from, for the next to start from; not saved.
     """
 
     series: SnapshotSeries
@@ -52,6 +53,7 @@ class Bridge:
     ends: str = "atoms"
     notes: tuple[str, ...] = ()
     gap_weights: tuple[tuple[np.ndarray, np.ndarray], ...] | None = None
+    earlier: tuple[Bridge, ...] = field(default=(), repr=False)
 
     @cached_property
     def gaps(self) -> tuple[Gap, ...]:

@@ -4,16 +4,15 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Callable
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from .. import checks
 from ..kernels.choose import MEMORY, evaluation_kernel, gaussian_kernel
-from ..priors.base import LinearGaussianPrior, Transition, require_prior
-from ..schrodinger.coarse import coarse_potentials, gaussian_start
-from ..schrodinger.iteration import Start, Strategy
+from ..priors.base import LinearGaussianPrior, require_prior
+from ..schrodinger.iteration import Strategy
 from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
 from ..schrodinger.solve import SWEEP_LIMIT, solve
 from .boxed import gap_kernel
@@ -22,6 +21,7 @@ from .choose_ends import chosen_ends
 from .growing import growing_weights, growth_notes, require_particles, solve_growing, unbalanced_start
 from .smooth import KernelEnds, MixtureEnds, SmoothSolution
 from .smooth_fit import fit_smooth_gap
+from .warm import GapProblem, gap_start, history_of
 
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
@@ -29,7 +29,6 @@ if TYPE_CHECKING:
 __all__ = ["SolverOptions", "fit_bridge"]
 
 _LARGEST_RATIO = 1e6  # mean squared whitened distance; beyond it the noise ladder is not known to arrive
-_WARM_RATIO = 8.0  # change of noise variance up to which another fit's potentials beat the closed-form start
 
 
 @dataclass(frozen=True)
@@ -114,6 +113,8 @@ def fit_bridge(
     if not isinstance(chosen, str):
         require_particles(series, "smooth")
         return _fit_smooth(series, prior, chosen, components, start, reason)
+    if start is not None:
+        _require_same_snapshots(start, series)
     solutions, weights = [], []
     for k in range(len(series.times) - 1):
         found, solution = _solve_gap(series, prior, k, tolerance, start, options)
@@ -127,9 +128,15 @@ def fit_bridge(
             warnings.warn(message, RuntimeWarning, stacklevel=2)
         solutions.append(solution)
         weights.append(found)
-    notes = (*reason, *growth_notes(series))
-    kept = None if series.growth is None else tuple(weights)
-    return Bridge(series, prior, tuple(solutions), float(tolerance), notes=notes, gap_weights=kept)
+    return Bridge(
+        series,
+        prior,
+        tuple(solutions),
+        float(tolerance),
+        notes=(*reason, *growth_notes(series)),
+        gap_weights=None if series.growth is None else tuple(weights),
+        earlier=history_of(start),
+    )
 
 
 def _fit_smooth(
@@ -193,7 +200,9 @@ def _solve_gap(
         )
     if boxed is not None:
         return weights, solve(boxed, weights, tolerance=tolerance, sweep_limit=options.sweep_limit, observe=observe)
-    start_values, strategy = _start((u, v), weights, transition, start, series, k, tolerance, options)
+    problem = GapProblem(k, (u, v), weights, transition, tolerance)
+    coarse = 4.0 * len(u) * len(v) > options.memory
+    start_values, strategy = gap_start(problem, start, gaussian_kernel, options.strategy, coarse=coarse)
     return weights, solve(
         gaussian_kernel(u, v, options.memory),
         weights,
@@ -205,44 +214,13 @@ def _solve_gap(
     )
 
 
-def _start(
-    clouds: tuple[np.ndarray, np.ndarray],
-    weights: tuple[np.ndarray, np.ndarray],
-    transition: Transition,
-    warm: Bridge | None,
-    series: SnapshotSeries,
-    k: int,
-    tolerance: float,
-    options: SolverOptions,
-) -> tuple[Start | tuple[np.ndarray, np.ndarray], Strategy]:
-    """Where gap k starts: another bridge's potentials, those of coarser clouds, or the closed form for Gaussians."""
-    if warm is not None:
-        counts = [len(cloud) for cloud in warm.series.clouds]
-        if counts != [len(cloud) for cloud in series.clouds] or warm.series.dimension != series.dimension:
-            raise checks.InputError(
-                f"start is a bridge through other snapshots; they hold {counts} particles where "
-                f"{[len(cloud) for cloud in series.clouds]} are needed; start from a fit of the same snapshots"
-            )
-        old = warm.gaps[k].transition
-        ratio = float(np.exp(2.0 * (transition.log_normaliser - old.log_normaliser) / series.dimension))
-        if 1.0 / _WARM_RATIO <= ratio <= _WARM_RATIO:
-            # Potentials times noise variance are lengths², nearly the same at neighbouring noise levels.
-            solution = warm.gaps[k].coupled
-            return (solution.log_f * ratio, solution.log_g * ratio), options.strategy
-    if 4.0 * clouds[0].shape[0] * clouds[1].shape[0] <= options.memory:
-        return gaussian_start(clouds, weights), options.strategy
-    chosen = [np.flatnonzero(weight) for weight in weights]
-    potentials, factor = coarse_potentials(
-        (clouds[0][chosen[0]], clouds[1][chosen[1]]),
-        (weights[0][chosen[0]], weights[1][chosen[1]]),
-        tolerance,
-        gaussian_kernel,
-        options.strategy,
-    )
-    full = (np.zeros(weights[0].size), np.zeros(weights[1].size))
-    for values, rows, found in zip(full, chosen, potentials, strict=True):
-        values[rows] = found
-    return full, replace(options.strategy, first_factor=factor)
+def _require_same_snapshots(start: Bridge, series: SnapshotSeries) -> None:
+    counts, wanted = ([len(cloud) for cloud in given.clouds] for given in (start.series, series))
+    if counts != wanted or start.series.dimension != series.dimension:
+        raise checks.InputError(
+            f"start is a bridge through other snapshots; they hold {counts} particles where {wanted} are needed; "
+            "start from a fit of the same snapshots"
+        )
 
 
 def _require_enough_noise(

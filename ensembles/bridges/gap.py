@@ -213,7 +213,13 @@ class Gap:
         return ends
 
     def fill_path(
-        self, start: float, begin: np.ndarray, end: np.ndarray, times: np.ndarray, rng: np.random.Generator, out: np.ndarray
+        self,
+        start: float,
+        begin: np.ndarray,
+        end: np.ndarray,
+        times: np.ndarray,
+        rng: np.random.Generator,
+        out: np.ndarray,
     ) -> None:
         """Write pinned paths from `begin` at `start` to `end` into out (count, T, d), at times strictly in between."""
         laws = pinned_steps(self.prior, start, self.times[1], times, self.dimension)

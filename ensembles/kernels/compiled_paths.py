@@ -59,7 +59,7 @@ def walk(
         noise = rng.standard_normal((part.stop - first, length, d))
         starts, ends, view = np.ascontiguousarray(begin[part]), np.ascontiguousarray(end[part]), out[part]
 
-        def task(block: int, start: int, stop: int, noise=noise, starts=starts, ends=ends, view=view) -> None:  # type: ignore[no-untyped-def]
+        def task(block: int, start: int, stop: int, noise=noise, starts=starts, ends=ends, view=view) -> None:
             _walk_block(keep, pull, shift, spread, starts, ends, noise, diagonal, start, stop, view)
 
         run_blocks(task, block_bounds(part.stop - first, _BLOCKS), float(noise.size))

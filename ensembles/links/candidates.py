@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -122,21 +122,23 @@ def _from_matrix(
         best = square >= -np.partition(-square, count, axis=axis).take([count], axis=axis)
         kept |= best.ravel()
     start = rough.to_row[kept]
+    rounds = rough.certificate.iterations
     for _ in range(_ROUNDS):
         graph = AssignmentGraph.from_edges(rows[kept], columns[kept], weights[kept], log_alone)
         posterior = _propagate(graph, options, start)
+        rounds += posterior.certificate.iterations
         absent = ~kept
         log_odds = _absent_log_odds(posterior, rows[absent], columns[absent], weights[absent])
         left_out = _largest_share(rows[absent], columns[absent], log_odds)
         if left_out <= _LEFT_OUT:
-            return posterior, left_out
+            break
         full = np.full(weights.size, np.nan)
         full[kept] = posterior.to_row
         added = np.flatnonzero(absent)[log_odds > np.log(_KEPT)]
         full[added] = -posterior.log_column_sums[columns[added]]
         kept[added] = True
         start = full[kept]
-    return posterior, left_out
+    return _counted(posterior, rounds), left_out
 
 
 def _from_trees(
@@ -153,10 +155,12 @@ def _from_trees(
         edges = np.concatenate([edges, own * m + near.ravel() if first else near.ravel() * m + own])
     edges = np.unique(edges)
     start = None
+    rounds = 0
     for _ in range(_ROUNDS):
         rows, columns = np.divmod(edges, m)
         graph = AssignmentGraph.from_edges(rows, columns, law.log_weights(rows, columns), log_alone)
         posterior = _propagate(graph, options, start)
+        rounds += posterior.certificate.iterations
         radius += _STEP
         shell = np.setdiff1d(_near(source_tree, target_tree, radius), edges, assume_unique=True)
         shell_rows, shell_columns = np.divmod(shell, m)
@@ -170,7 +174,12 @@ def _from_trees(
         start = -posterior.log_column_sums[merged % m]
         start[np.searchsorted(merged, edges)] = posterior.to_row
         edges = merged
-    return posterior, left_out
+    return _counted(posterior, rounds), left_out
+
+
+def _counted(posterior: AssignmentPosterior, rounds: int) -> AssignmentPosterior:
+    """The posterior with the rounds over all graphs on the way to it."""
+    return replace(posterior, certificate=replace(posterior.certificate, iterations=rounds))
 
 
 def _near(sources, targets, radius: float) -> np.ndarray:  # type: ignore[no-untyped-def]

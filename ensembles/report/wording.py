@@ -6,6 +6,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from ..schrodinger.solution import Solution
+
 if TYPE_CHECKING:
     from ..bridges.bridge import Bridge
     from ..snapshots.series import SnapshotSeries
@@ -162,7 +164,7 @@ def warning_sentences(bridge: Bridge) -> list[str]:
         title = gap_title(bridge.series, gap)
         if solution.outcome.value != "converged":
             found.append(f"{title}: not converged. {solution.message}")
-        elif solution.unreachable:
+        elif isinstance(solution, Solution) and solution.unreachable:
             rows = bridge.series.rows[gap + 1][list(solution.unreachable)]
             shown = ", ".join(map(str, rows[:5])) + (" and others" if len(rows) > 5 else "")
             found.append(f"{title}: {len(rows)} particle(s) cannot be reached under the prior: row(s) {shown}.")

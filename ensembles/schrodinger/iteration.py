@@ -17,7 +17,8 @@ from .solution import State
 
 __all__ = ["Start", "Strategy", "level_states", "solver_states", "sweep_states"]
 
-_NEWTON_ENTRY = 50.0  # nanoseconds that they take for an entry of the sparse coupling
+_NEWTON_ENTRY = 30.0  # nanoseconds that a second-order step takes for an entry of the sparse coupling
+_PASS = 1e5  # nanoseconds of a pass over the kernel apart from its entries
 _RETRY = 60  # sweeps between two questions whether second-order steps pay
 
 Start = Callable[[float], tuple[np.ndarray, np.ndarray]]
@@ -33,9 +34,10 @@ class Strategy:
     ladder_top : mean cost at the top of the ladder; above it the kernel is too sharp to start on.
     level_sweeps, level_error : a level above the last ends after that many sweeps, or at that error.
     relaxation : whether sweeps are over-relaxed.
-    first_factor : relaxation factor of the first sweeps at the problem's own noise, where one is known.
+    first_factor : relaxation factor of the first sweeps at the problem's own noise, where one is known; 0 where sweeps are
+        known to be slow.
     newton : whether second-order steps are taken.
-    newton_after : predicted further sweeps from which they may be: some four steps cost this many passes themselves.
+    newton_after : sweeps that a second-order step costs apart from its entries.
     entry_limit : entries the sparsified coupling of a second-order step may have.
     """
 
@@ -46,7 +48,7 @@ class Strategy:
     relaxation: bool = True
     first_factor: float = 1.0
     newton: bool = True
-    newton_after: float = 25.0
+    newton_after: float = 6.0
     entry_limit: int = 12_000_000
 
     def without_ladder(self) -> Strategy:
@@ -128,7 +130,7 @@ def level_states(
             yield swept
             if swept.error <= goal or (not last and swept.sweep - begun >= strategy.level_sweeps):
                 return swept
-            limit = _entries_worth(kernel, control.sweeps_to(swept.error, goal), strategy)
+            limit = _entries_worth(kernel, control.sweeps_to(swept.error, goal), swept.error, goal, strategy)
             if limit and control.settled and swept.sweep >= next_try:
                 state = swept
                 break
@@ -144,13 +146,18 @@ def level_states(
             control = RelaxationControl()
 
 
-def _entries_worth(kernel: Kernel, sweeps: float, strategy: Strategy) -> int:
+def _entries_worth(kernel: Kernel, sweeps: float, error: float, goal: float, strategy: Strategy) -> int:
     """Entries up to which second-order steps cost less than `sweeps` more sweeps; 0 where they are not used.
 
-    Counted in nanoseconds: some four steps, each of a few sweeps and, an entry of the sparse coupling, of building it and
-    of some thirty products.
+    Near the solution each step squares the error. A step costs a few sweeps and, for an entry of the sparse coupling, the
+    nanoseconds of building it and of some thirty products.
     """
-    if not strategy.newton or sweeps <= strategy.newton_after:
+    if not strategy.newton or not np.isfinite(error):
         return 0
-    saved = (sweeps - strategy.newton_after) * kernel.entry_time * kernel.shape[0] * kernel.shape[1]
-    return int(min(saved / _NEWTON_ENTRY, strategy.entry_limit))
+    digits = np.log(min(error, 0.3))
+    steps = 1.0 + max(float(np.log2(max(np.log(min(goal, 0.3)) / digits, 1.0))), 0.0)
+    spared = sweeps - steps * strategy.newton_after
+    if spared <= 0.0:
+        return 0
+    saved = spared * (_PASS + kernel.entry_time * kernel.shape[0] * kernel.shape[1])
+    return int(min(saved / (_NEWTON_ENTRY * steps), strategy.entry_limit))

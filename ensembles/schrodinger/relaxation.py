@@ -16,6 +16,7 @@ _PLAIN = 6
 _FEW = 3
 _BLOCK = 12
 _LARGEST = 1.97
+_SLOW = 0.97
 
 
 def best_factor(contraction: float) -> float:
@@ -37,10 +38,14 @@ class RelaxationControl:
         self.factor = 1.0
         self._known = min(first_factor, _LARGEST)
         self.rate = 1.0  # contraction a sweep at the present factor
-        self.settled = False  # whether a first block of sweeps has been seen
+        self.settled = False  # whether the rate is known
+        if self._known > 1.0:
+            self.rate, self.settled = max(self._known - 1.0, 0.1), True
+        elif self._known == 0.0:  # a like problem needed second-order steps: sweeps are slow
+            self.rate, self.settled = _SLOW, True
         self._errors: list[float] = []
         self._ceiling = _LARGEST
-        self._wait = _PLAIN if first_factor == 1.0 else _FEW
+        self._wait = _FEW if first_factor > 1.0 else _PLAIN
 
     def observe(self, error: float) -> None:
         """Take the error after a sweep made with `factor`, and renew `rate` and `factor` at the end of a block."""

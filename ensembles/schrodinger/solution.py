@@ -99,6 +99,7 @@ class Solution:
     certificate : `Certificate`.
     history : (passes, 4) array: scale, row error, column error, Hilbert step of each pass.
     unreachable : row numbers of targets that no source reaches in floating point.
+    relaxation : factor of the last sweeps, for a later solve to begin with; 0 if second-order steps finished this one.
     """
 
     log_f: np.ndarray
@@ -108,6 +109,7 @@ class Solution:
     certificate: Certificate
     history: np.ndarray = field(repr=False)
     unreachable: tuple[int, ...] = ()
+    relaxation: float = 1.0
 
     @property
     def message(self) -> str:

@@ -99,7 +99,15 @@ def solve(
         run.outcome = Outcome.STALLED
     log_f, log_g = _extended(kernel, (a, b), rows, columns, state)
     shift = 0.5 * (pair[1] @ log_g[columns] - pair[0] @ log_f[rows])
-    return Solution(log_f + shift, log_g - shift, state.sweep, run.outcome, certificate, np.array(run.history))
+    return Solution(
+        log_f + shift,
+        log_g - shift,
+        state.sweep,
+        run.outcome,
+        certificate,
+        np.array(run.history),
+        relaxation=run.relaxation,
+    )
 
 
 class _Run:
@@ -110,11 +118,14 @@ class _Run:
         self.outcome = Outcome.ITERATION_LIMIT
         self.history: list[tuple[float, float, float, float]] = []
         self.contraction = float("nan")
+        self.relaxation = 1.0
         self._last: State | None = None
         self._best, self._best_at = np.inf, 0
 
     def ends(self, state: State) -> bool:
         self.history.append((state.scale, state.row_error, state.column_error, state.hilbert_step))
+        if state.scale == 1.0:
+            self.relaxation = state.relaxation if state.stage == "sweep" else 0.0
         last, self._last = self._last, state
         if last and last.stage == state.stage == "sweep" and last.relaxation == state.relaxation == 1.0:
             rounding = 1e-9 * max(1.0, float(np.abs(state.log_g).max()))
