@@ -210,3 +210,16 @@ def test_refusals():
         broken.with_growth(Growth("t"))
     with pytest.raises(ensembles.InputError, match="growth needs ends of particles; ends are smooth"):
         ensembles.fit_bridge(growing(rate="net"), PRIOR, ends="mixture", components=1)
+
+
+def test_growth_in_a_box():
+    rng = np.random.default_rng(0)
+    series = ensembles.SnapshotSeries.from_arrays([0, 1], [rng.random((20, 2)), rng.random((30, 2))])
+    prior = ensembles.Brownian(diffusion=0.05, box=ensembles.Box([0, 0], [1, 1], "reflecting"))
+    bridge = ensembles.fit_bridge(series.with_growth(Growth(uncertainty=0.5)), prior)
+    pi = bridge.coupling(0).matrix()
+    assert max(np.abs(pi.sum(axis=1 - side) - bridge.gap_weights[0][side]).sum() for side in (0, 1)) < 1e-6
+    with pytest.raises(
+        ensembles.InputError, match="paths with growth are not available in a box; the series has growth"
+    ):
+        bridge.sample_paths(5, [0.0, 0.5, 1.0])

@@ -6,7 +6,8 @@ from numpy.testing import assert_allclose
 from scipy import stats
 
 import ensembles
-from ensembles.lineage.chain import ancestor_weights, draw_histories
+from ensembles.bridges.histories import draw_histories
+from ensembles.lineage.chain import ancestor_weights
 from ensembles.lineage.fates import flow_matrix
 from ensembles.lineage.labels import UNLABELLED, label_notes
 

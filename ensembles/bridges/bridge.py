@@ -16,6 +16,7 @@ from ..schrodinger.solution import Outcome, Solution
 from .boxed import BoxCoupling, BoxGap
 from .coupling import Coupling
 from .gap import Gap
+from .histories import history_paths
 from .paths import Paths
 from .smooth import SmoothSolution
 from .wording import bridge_html, bridge_text
@@ -166,7 +167,7 @@ class Bridge:
         count = checks.whole_number(count, "count")
         generator = checks.generator(rng)
         if self.gap_weights is not None:
-            return self._histories(count, times, generator)
+            return history_paths(self, count, self._path_times(times, float(self.series.times[0])), generator)
         starts, rows = self.gaps[0].draw_starts(count, generator)
         return self._continue_paths(starts, rows, 0, float(self.series.times[0]), times, generator)
 
@@ -205,22 +206,6 @@ class Bridge:
             members[:, k + 1] = rows
             begin, start = end, gap.times[1]
         return Paths(times, positions, members, self.series.position_names)
-
-    def _histories(self, count: int, times: np.ndarray, rng: np.random.Generator) -> Paths:
-        """Paths drawn backwards from the last snapshot, then filled in."""
-        times = self._path_times(times, float(self.series.times[0]))
-        last = self.gaps[-1].weights[1]
-        rows = [rng.choice(last.size, size=count, p=last)]
-        for k in range(len(self.gaps) - 1, -1, -1):
-            rows.insert(0, self.coupling(k).draw_sources(rows[0], rng))
-        positions = np.empty((count, times.size, self.series.dimension))
-        for k, gap in enumerate(self.gaps):
-            begin, end = gap.clouds[0][rows[k]], gap.clouds[1][rows[k + 1]]
-            inside = slice(*np.searchsorted(times, [np.nextafter(gap.times[0], np.inf), gap.times[1]]))
-            gap.fill_path(gap.times[0], begin, end, times[inside], rng, positions[:, inside])
-            positions[:, times == gap.times[0]] = begin[:, None]
-            positions[:, times == gap.times[1]] = end[:, None]
-        return Paths(times, positions, np.stack(rows, axis=1), self.series.position_names)
 
     def coupling(self, gap: int = 0) -> Coupling:
         """The coupling between snapshots `gap` and `gap + 1`: who became whom, as probabilities.

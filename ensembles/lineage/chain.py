@@ -13,7 +13,7 @@ import numpy as np
 if TYPE_CHECKING:
     from ..bridges.bridge import Bridge
 
-__all__ = ["ancestor_weights", "descendant_weights", "draw_histories", "expected_at_end", "expected_at_start"]
+__all__ = ["ancestor_weights", "descendant_weights", "expected_at_end", "expected_at_start"]
 
 
 def expected_at_end(bridge: Bridge, values: np.ndarray, start: int, end: int) -> np.ndarray:
@@ -66,11 +66,3 @@ def ancestor_weights(bridge: Bridge, weights: np.ndarray, start: int, end: int) 
         earlier = before[:, None] * bridge.coupling(gap).expectation(share)
         found.insert(0, earlier / earlier.sum(axis=0))
     return found
-
-
-def draw_histories(bridge: Bridge, last: np.ndarray, start: int, end: int, rng: np.random.Generator) -> np.ndarray:
-    """Row numbers (count, end - start + 1) of drawn ancestors of the particles `last` (count,) of snapshot `end`."""
-    members = [last]
-    for gap in range(end - 1, start - 1, -1):
-        members.insert(0, bridge.coupling(gap).draw_sources(members[0], rng))
-    return np.stack(members, axis=1)

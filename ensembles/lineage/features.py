@@ -8,7 +8,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from .. import checks
-from .chain import ancestor_weights, draw_histories, expected_at_end
+from ..bridges.histories import draw_histories
+from .chain import ancestor_weights, expected_at_end
 from .labels import labels_at, snapshot_pair
 
 if TYPE_CHECKING:
