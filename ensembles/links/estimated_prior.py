@@ -26,7 +26,7 @@ class PriorEstimate:
 
     Attributes
     ----------
-    log_evidence : of the Bethe permanent over all gaps, at the maximum, in nats.
+    log_evidence : over all gaps at the estimate, in nats: the Bethe permanent, corrected by exact sums over clusters.
     curvature : (p, p) negative second derivatives there, on the scales of the search.
     found : whether the search ended at a maximum.
     """
@@ -114,7 +114,8 @@ class PriorEstimate:
         for offset in np.linspace(-3.5, 3.5, points) * error:
             start = free.copy()
             start[i] = self.free[i] + offset
-            best, value, _ = self.evidence.maximise(start, held=i)
+            best, _, _ = self.evidence.maximise(start, held=i)
+            value, _ = self.evidence.at(best, clusters=True)
             rows.append((float(self.evidence.family.natural(best)[i]), value, max(self.log_evidence - value, 0.0)))
         return pandas.DataFrame(rows, columns=["value", "log_evidence", "below_maximum"])
 
