@@ -49,18 +49,20 @@ def best_of(run: Callable[[], object], repeats: int = 5) -> float:
 
 @numba.njit(nogil=True, fastmath=True)
 def _read(values, start, stop):  # type: ignore[no-untyped-def]
+    part = values[start:stop]
     total = np.float32(0.0)
-    for k in range(start, stop):
-        total += values[k]
+    for k in range(part.size):
+        total += part[k]
     return total
 
 
 @numba.njit(nogil=True, fastmath={"contract", "reassoc", "nsz", "arcp"})
 def _exponentials(values, start, stop, repeats):  # type: ignore[no-untyped-def]
+    part = values[start:stop]
     total = 0.0
     for _ in range(repeats):
-        for k in range(start, stop):
-            total += exponential(values[k])
+        for k in range(part.size):
+            total += exponential(part[k])
     return total
 
 

@@ -34,7 +34,7 @@ FRACTIONS = (0.5, 0.1, 0.02, 0.005)
 DIMENSIONS = (2, 10, 30)
 GOAL = 1e-6
 MOST_SWEEPS = {1000: 20_000, 2000: 20_000, 5000: 6_000, 10_000: 1_500, 20_000: 400}
-LIMIT = 20.0  # seconds that one POT run may take before it is extrapolated
+LIMIT = 8.0  # seconds that one POT run may take before it is extrapolated
 
 
 def clouds(n: int, d: int, seed: int = 0) -> tuple[np.ndarray, np.ndarray]:
