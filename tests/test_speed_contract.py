@@ -44,7 +44,7 @@ def test_a_problem_over_the_memory_limit_is_streamed_from_a_coarse_start_to_the_
     stored = ensembles.fit_bridge(series, prior, tolerance=1e-10)
     seen = []
     real = fit.gaussian_kernel
-    monkeypatch.setattr(fit, "gaussian_kernel", lambda *arguments: seen.append(real(*arguments)) or seen[-1])
+    monkeypatch.setattr(fit, "gaussian_kernel", lambda *given, **named: seen.append(real(*given, **named)) or seen[-1])
     options = ensembles.SolverOptions(memory=10_000)
     streamed = ensembles.fit_bridge(series, prior, tolerance=1e-10, options=options)
     assert {type(kernel) for kernel in seen if kernel.shape == (400, 350)} == {StreamedKernel}

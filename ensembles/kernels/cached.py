@@ -26,17 +26,17 @@ _FLOOR = 2e-7  # L1 error below which rounding in storage may show
 
 
 class CachedKernel(Kernel):
-    """exp(-½|u_i - v_j|²), stored as float32 at the first sweep; n m * 4 bytes."""
+    """exp(-½|u_i - v_j|²), stored as float32, n m * 4 bytes: after a few sweeps where distances are cheap, or `at_once`."""
 
     floor = _FLOOR
     entry_time = 0.15
 
-    def __init__(self, exact: StreamedKernel) -> None:
+    def __init__(self, exact: StreamedKernel, *, at_once: bool = False) -> None:
         self._exact = exact
         self.shape = exact.shape
         self._stored = np.empty((0, 0), dtype=np.float32)
         # Where a distance is cheap, a few passes cost less than storing: wait until the sweeps go on.
-        self._wait = _CHEAP_SWEEPS if exact.sources.shape[1] < _CHEAP_DIMENSION else 0
+        self._wait = _CHEAP_SWEEPS if exact.sources.shape[1] < _CHEAP_DIMENSION and not at_once else 0
         self._f = np.empty(0)
         self._q = np.empty(0)
 
