@@ -173,7 +173,8 @@ def run_pot(name: str, run: Callable[[int], tuple[np.ndarray, np.ndarray]], swee
             begun = time.perf_counter()
             log_u, log_v = run(count)
             times.append(time.perf_counter() - begun)
-        per_sweep = max((times[1] - times[0]) / (more - few), 1e-6)
+        # A few sweeps differ by less than the clock's noise where set-up is long: never below half the plain average.
+        per_sweep = max((times[1] - times[0]) / (more - few), 0.5 * times[1] / more)
         set_up = max(times[0] - few * per_sweep, 0.0)
         if not (np.isfinite(log_u).all() and np.isfinite(log_v).all()):
             return Timed(name, float("nan"), 0, float("nan"), float("nan"))

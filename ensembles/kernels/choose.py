@@ -23,8 +23,8 @@ def gaussian_kernel(
 ) -> Kernel:
     """exp(-½|u_i - v_j|²) between whitened clouds (n, d), (m, d).
 
-    Stored if it fits into `memory` bytes (at the first sweep if `at_once`); truncated where the clouds are large, of few dimensions and wide against the
-    noise; else streamed.
+    Stored if it fits into `memory` bytes (at the first sweep if `at_once`); truncated where the clouds are large, of few
+    dimensions and wide against the noise; else streamed.
     """
     entries = float(sources.shape[0]) * targets.shape[0]
     if _TINY < entries <= memory / 4:
