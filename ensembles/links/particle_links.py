@@ -7,12 +7,10 @@ from functools import cached_property
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.optimize import linear_sum_assignment
 from scipy.sparse import csr_matrix
-from scipy.sparse.csgraph import min_weight_full_bipartite_matching
 
 from .. import checks
-from ..kernels import compiled_links
+from ..kernels import compiled_links, compiled_matching
 from ..schrodinger.assignment import AssignmentCertificate, AssignmentGraph
 
 if TYPE_CHECKING:
@@ -21,7 +19,6 @@ if TYPE_CHECKING:
 __all__ = ["LinkCertificate", "ParticleLinks"]
 
 _LARGEST_MATRIX = 200_000_000  # entries, 1.6 GB
-_DENSE_ASSIGNMENT = 9_000_000
 _UNINFORMATIVE = 0.9  # share of log n above which the mean entropy means that next to nothing is known
 
 
@@ -190,26 +187,28 @@ def _best_assignment(
         - np.where(row_alone, alone_rows, 0.0)[graph.rows]
         - np.where(column_alone, alone_columns, 0.0)[graph.columns]
     )
-    if n == m and not row_alone.any() and n * m <= _DENSE_ASSIGNMENT:
-        cost = np.full((n, m), -2.0 * n * (np.abs(gain).max(initial=0.0) + 1.0))
-        cost[graph.rows, graph.columns] = gain
-        return linear_sum_assignment(cost, maximize=True)[1]
     rows, columns, entries = graph.rows, graph.columns, gain
     width = m
     if row_alone.any():  # a private column of worth 0 for every row that may stay alone
-        rows = np.concatenate([rows, np.flatnonzero(row_alone)])
-        columns = np.concatenate([columns, m + np.arange(int(row_alone.sum()))])
-        entries = np.concatenate([entries, np.zeros(int(row_alone.sum()))])
-        width += int(row_alone.sum())
-    # The sparse solver drops zeros: costs are shifted to start at 1, the same for every row.
-    costs = csr_matrix((entries.max() - entries + 1.0, (rows, columns)), shape=(n, width))
-    try:
-        found_rows, found = min_weight_full_bipartite_matching(costs)
-    except ValueError:
+        extra = np.flatnonzero(row_alone)
+        rows = np.concatenate([rows, extra])
+        columns = np.concatenate([columns, m + np.arange(extra.size)])
+        entries = np.concatenate([entries, np.zeros(extra.size)])
+        width += extra.size
+    order = np.argsort(rows, kind="stable")
+    starts = np.concatenate([[0], np.cumsum(np.bincount(rows, minlength=n))]).astype(np.int64)
+    costs, columns = entries.max() - entries[order], columns[order]
+    prices = np.full(width, np.inf)
+    np.minimum.at(prices, columns, costs)
+    # Rows compete at the least cost of a column only where every column is needed.
+    prices = np.where(np.isfinite(prices), prices, 0.0) if n == width else np.zeros(width)
+    found = np.full(n, -1, dtype=np.int64)
+    stuck = compiled_matching.match_rows(
+        starts, columns, costs, width, np.full(width, -1, dtype=np.int64), found, prices
+    )
+    if stuck >= 0:
         raise checks.ComputationError(
-            "the links that were kept hold no one-to-one assignment; some particles share all their candidates; "
+            f"the links that were kept hold no one-to-one assignment; particle {stuck} finds all its candidates taken; "
             "give a detection probability below 1, or more noise"
-        ) from None
-    out = np.empty(n, dtype=np.int64)
-    out[found_rows] = np.where(found < m, found, -1)
-    return out
+        )
+    return np.where(found < m, found, -1)

@@ -26,6 +26,7 @@ __all__ = ["AssignmentCertificate", "AssignmentGraph", "AssignmentPosterior", "p
 
 _BLOCKS = 8
 _HEAVY = 8.0  # work of one edge in kernel entries
+_FEW = 0.02  # share of edges still moving below which the others wait
 _BURST = 10  # rounds among what still moves, between two full ones; even, see where it is used
 
 
@@ -170,7 +171,10 @@ def propagate_beliefs(
             break
         done = min(_BURST if iteration > _BURST else 3, iteration_limit - iteration)
         before = run.to_column.copy()
-        run.partial_rounds(difference > 0.01 * tolerance, done)
+        moving = difference > 0.01 * tolerance
+        if moving.mean() > _FEW:  # to hold the rest still would slow down those that move together
+            moving[:] = True
+        run.partial_rounds(moving, done)
         iteration += done
         if done == _BURST:
             # Near-decided clusters converge like 1/t. A mode λ becomes 2 λ^10 - 1 at most, which never grows.
