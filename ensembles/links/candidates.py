@@ -20,6 +20,7 @@ _NEAREST = 6
 _ROUNDS = 12
 _KEPT = 1e-10  # odds below which a link is left out
 _LEFT_OUT = 1e-6  # probability of a particle that may be left out in all
+_ANY_ONE = 50.0
 _MOST_EDGES = 40_000_000
 
 
@@ -29,19 +30,20 @@ class LinkOptions:
 
     Attributes
     ----------
-    tolerance : largest |Σ probabilities - 1| of a particle under belief propagation.
+    tolerance : mean |Σ probabilities - 1| of a particle under belief propagation; that of any one particle may be 50
+        times as large.
     damping : share of the old message kept.
     iteration_limit : rounds of messages.
     cluster : particles of each frame in the exact sums around every particle, at most 12; 0 for belief propagation only.
     """
 
-    tolerance: float = 1e-3
+    tolerance: float = 2e-4
     damping: float = 0.0
     iteration_limit: int = 20_000
     cluster: int = 10
 
     def __post_init__(self) -> None:
-        checks.positive_number(self.tolerance, "tolerance", "give the error allowed, such as 1e-3")
+        checks.positive_number(self.tolerance, "tolerance", "give the error allowed, such as 2e-4")
         checks.whole_number(self.iteration_limit, "iteration_limit")
         if not 0.0 <= self.damping < 1.0:
             raise checks.InputError(f"damping must lie in [0, 1); it is {self.damping!r}; use 0 or 0.5")
@@ -86,7 +88,8 @@ def _propagate(
 ) -> AssignmentPosterior:
     return propagate_beliefs(
         graph,
-        tolerance=max(1e-2, options.tolerance) if rough else options.tolerance,
+        tolerance=options.tolerance,
+        largest=_ANY_ONE * options.tolerance,
         damping=options.damping,
         iteration_limit=min(8, options.iteration_limit) if rough else options.iteration_limit,
         start=start,

@@ -58,7 +58,7 @@ class EstimateOptions:
     rate: str = "scalar"
     detection: float | None = None
     birth_density: float | None = None
-    links: LinkOptions = field(default_factory=lambda: LinkOptions(tolerance=1e-3, iteration_limit=3_000, cluster=8))
+    links: LinkOptions = field(default_factory=lambda: LinkOptions(tolerance=2e-5, iteration_limit=3_000, cluster=8))
     gradient_tolerance: float = 3e-4
     iteration_limit: int = 60
 
