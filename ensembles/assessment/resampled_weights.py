@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from .. import checks
+from ..kernels.threads import one_blas_thread
 
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
@@ -51,12 +52,10 @@ def run_repeats(
 
     The generators are spawned before anything runs, so the results do not depend on the number of workers.
     """
-    from threadpoolctl import threadpool_limits
-
     workers = checks.whole_number(workers, "workers")
     streams = rng.spawn(repeats)
     # The solves of a repeat are small: threads inside each would only wait for one another.
-    with threadpool_limits(1, "blas"):
+    with one_blas_thread():
         if workers == 1:
             return [task(stream) for stream in streams]
         from joblib import Parallel, delayed

@@ -11,6 +11,7 @@ import numpy as np
 
 from .. import checks
 from ..kernels.choose import MEMORY, evaluation_kernel, gaussian_kernel
+from ..kernels.threads import one_blas_thread
 from ..priors.base import LinearGaussianPrior, require_prior
 from ..schrodinger.iteration import Strategy
 from ..schrodinger.solution import ConvergenceError, Outcome, Solution, State
@@ -117,7 +118,8 @@ def fit_bridge(
         _require_same_snapshots(start, series)
     solutions, weights = [], []
     for k in range(len(series.times) - 1):
-        found, solution = _solve_gap(series, prior, k, tolerance, start, options)
+        with one_blas_thread():
+            found, solution = _solve_gap(series, prior, k, tolerance, start, options)
         if solution.outcome is not Outcome.CONVERGED:
             message = (
                 f"the bridge did not converge between t = {series.times[k]:g} and t = {series.times[k + 1]:g}; "
@@ -160,9 +162,10 @@ def _fit_smooth(
     notes = list(reason)
     for k in range(count):
         warm = start.solutions[k] if start is not None else None
-        solution = fit_smooth_gap(
-            series, prior, k, ends, components, warm if isinstance(warm, SmoothSolution) else None
-        )
+        with one_blas_thread():
+            solution = fit_smooth_gap(
+                series, prior, k, ends, components, warm if isinstance(warm, SmoothSolution) else None
+            )
         place = f"gap {k}: " if count > 1 else ""
         notes += [place + note for note in solution.notes]
         solutions.append(solution)

@@ -59,7 +59,7 @@ def solve_growing(
     logs = np.log(fitted[0][rows]), np.log(fitted[1][columns])
     # The constant between the two pairs of potentials: one half step from the later one fixes it.
     start_f = -reduced.log_sum_targets(logs[1] + log_g[columns])
-    final_f, certificate = certify(reduced, logs, log_g[columns], start_f, float("nan"), tolerance)
+    final_f, certificate = certify(reduced, logs, start_f, log_g[columns], tolerance)
     log_f = log_f + float(np.median(final_f - log_f[rows]))
     log_f[rows] = final_f
     shift = 0.5 * float(fitted[1][columns] @ log_g[columns] - fitted[0][rows] @ final_f)

@@ -33,15 +33,12 @@ def fit_smooth_gap(
     components: int | None,
     warm: SmoothSolution | None,
 ) -> SmoothSolution:
-    """The potentials of gap k. BLAS keeps to one thread: the tiles themselves run on all."""
-    from threadpoolctl import threadpool_limits
-
+    """The potentials of gap k."""
     transition = prior.transition(float(series.times[k + 1] - series.times[k]), series.dimension)
     _require_usable(series, k, ends, components)
-    with threadpool_limits(1, user_api="blas"):
-        if isinstance(ends, MixtureEnds):
-            return _mixture(series, k, transition, ends, components, warm)
-        return _kernel(series, k, transition, ends, components)
+    if isinstance(ends, MixtureEnds):
+        return _mixture(series, k, transition, ends, components, warm)
+    return _kernel(series, k, transition, ends, components)
 
 
 def _mixture(

@@ -11,8 +11,9 @@ import math
 
 import numpy as np
 
-from .compiled import exponents, log_sum_of
-from .fast_exp import compiled, exponential
+from .compiled import log_sum_of
+from .compiled_tiles import TILE, exponents, tile_exponents
+from .fast_exp import compiled, exponential, wide_vectors
 
 __all__ = ["count_stored", "fill_stored", "sweep_matrix", "sweep_rows", "sweep_stored"]
 
@@ -20,6 +21,7 @@ __all__ = ["count_stored", "fill_stored", "sweep_matrix", "sweep_rows", "sweep_s
 @compiled
 def add_rows(buffer, factors, rows, ranges, columns):
     """columns_j += Σ_r factors_r buffer[r, c]."""
+    wide_vectors()
     packed = 0
     for part in range(ranges.shape[0]):
         target = columns[ranges[part, 0] : ranges[part, 1]]
@@ -44,7 +46,7 @@ def add_rows(buffer, factors, rows, ranges, columns):
 @compiled
 def safe_row(row, offset):
     """row_j ← exp(row_j - log Σ exp(row)) from exponents; returns log Σ exp(offset + row)."""
-    total = log_sum_of(row, row.size)
+    total = log_sum_of(row)
     if total == -np.inf:
         row[:] = 0.0
         return total
@@ -56,14 +58,16 @@ def safe_row(row, offset):
 @compiled
 def store_row(row, scale, kept):
     """kept = scale * row in single precision."""
+    wide_vectors()
     for j in range(row.size):
         kept[j] = np.float32(row[j] * scale)
 
 
 @compiled
 def sweep_rows(
-    x, vt, q, log_f, log_a, relaxation, bounds, pointers, ranges, first, last, buffer, new_f, excess, columns, stored
-):
+    x, vt, q, log_f, log_a, relaxation, bounds, pointers, ranges, first, last, tile, buffer, new_f, excess,
+    columns, stored,
+):  # fmt: skip
     """One pass over exp(log_f_i + q_j - ½|x_i - v_j|²); see base.Sweep for what it gives.
 
     `columns` gathers exp(log a_i + new_f_i + q_j - ½|x_i - v_j|²). If `stored` (n, m) is not empty, the rows scaled to
@@ -75,19 +79,15 @@ def sweep_rows(
         stop = bounds[chunk, 1]
         for begin in range(bounds[chunk, 0], stop, 4):
             rows = min(4, stop - begin)
-            count = exponents(x, vt, q, near, begin, rows, buffer)
+            count = exponential_rows(x, vt, q, log_f, near, begin, rows, tile, buffer, factors)
             for r in range(rows):
                 i = begin + r
                 offset = log_f[i]
                 row = buffer[r, :count]
-                total = 0.0
-                for j in range(count):
-                    value = exponential(offset + row[j])
-                    row[j] = value
-                    total += value
+                total = factors[r]
                 shift = 0.0
                 if not (total > 1e-200 and total < 1e200):
-                    exponents(x, vt, q, near, i, 1, buffer[r : r + 1])
+                    exponents(x, vt, q, near, i, row)
                     shift = safe_row(row, offset)
                     total = 1.0
                 excess[i] = shift + math.log(total)
@@ -99,8 +99,36 @@ def sweep_rows(
 
 
 @compiled
+def exponential_rows(x, vt, q, log_f, ranges, begin, rows, tile, buffer, totals):
+    """buffer[r, c] = exp(log_f_i + q_j - ½|x_i - v_j|²) and their sums over the c-th columns, i = begin + r; returns how many.
+
+    Exponents live in a tile that stays in the nearest cache, and are never written anywhere else.
+    """
+    wide_vectors()
+    packed = 0
+    totals[:] = 0.0
+    for part in range(ranges.shape[0]):
+        last = ranges[part, 1]
+        for j0 in range(ranges[part, 0], last, TILE):
+            width = min(TILE, last - j0)
+            tile_exponents(x, vt, q, j0, width, begin, rows, tile)
+            for r in range(rows):
+                offset = log_f[begin + r]
+                place, target, size = np.uintp(r * TILE), np.uintp(packed), np.uintp(width)
+                total = 0.0
+                for j in range(size):
+                    value = exponential(offset + tile[place + j])
+                    buffer[r, target + j] = value
+                    total += value
+                totals[r] += total
+            packed += width
+    return packed
+
+
+@compiled
 def sweep_matrix(log_kernel, q, log_f, log_a, relaxation, start, stop, buffer, new_f, excess, columns):
     """As sweep_rows, from a stored matrix of log k_ij, which may hold -inf."""
+    wide_vectors()
     m = q.size
     row = buffer[0]
     for i in range(start, stop):
@@ -132,6 +160,7 @@ def sweep_matrix(log_kernel, q, log_f, log_a, relaxation, start, stop, buffer, n
 def sweep_stored(stored, v, u, log_a, relaxation, start, stop, update, excess, columns):
     """One pass over u_i stored_ij v_j: excess_i = log of the row sums, update_i = -relaxation excess_i, and
     columns_j += a_i u_i exp(update_i) stored_ij. Single precision is stored, double precision is summed."""
+    wide_vectors()
     m = v.size
     factors = np.empty(4)
     for begin in range(start, stop, 4):

@@ -8,7 +8,7 @@ import numpy as np
 
 from .threads import block_bounds
 
-__all__ = ["Layout", "full_layout"]
+__all__ = ["Layout", "aligned", "full_layout"]
 
 BLOCKS = 8  # groups of rows with column sums of their own: fixed, so that the order of summation is fixed
 
@@ -55,3 +55,14 @@ def full_layout(rows: int, columns: int) -> Layout:
         np.tile(np.array([[0, columns]], dtype=np.int64), (chunks, 1)),
         [(c, c + 1) for c in range(chunks)],
     )
+
+
+_LINE = 8  # doubles of a line of cache, and of the widest vectors
+
+
+def aligned(rows: int, columns: int) -> np.ndarray:
+    """Zeros (rows, at least columns), every row beginning where a line of cache does: vectors are then loaded in one piece."""
+    width = -(-columns // _LINE) * _LINE
+    raw = np.zeros(rows * width + _LINE)
+    skipped = (-raw.ctypes.data // raw.itemsize) % _LINE
+    return raw[skipped : skipped + rows * width].reshape(rows, width)

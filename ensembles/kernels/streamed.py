@@ -10,11 +10,14 @@ from scipy.sparse import csr_matrix
 
 from . import compiled, compiled_sweeps
 from .base import Kernel, Sweep, lost_columns
-from .layout import Layout, full_layout
+from .compiled_tiles import TILE
+from .layout import Layout, aligned, full_layout
 from .threads import run_blocks
 
 __all__ = ["StreamedKernel", "pick_targets"]
 
+_PRODUCT_DIMENSIONS = 4  # from which scalar products are cheaper than differences
+_PRODUCT_RADIUS = 1e4  # largest |x|² for them: exponents are then right to about 1e-12
 _NOT_STORED = np.empty((0, 0), dtype=np.float32)
 
 
@@ -29,8 +32,8 @@ class StreamedKernel(Kernel):
         self.targets = np.ascontiguousarray(targets, dtype=float)
         self.shape = (self.sources.shape[0], self.targets.shape[0])
         self.layout = full_layout(*self.shape) if layout is None else layout
-        self.entry_time = 0.5 + 0.035 * self.sources.shape[1]
-        self._coordinates = np.ascontiguousarray(self.targets.T)
+        self.entry_time = 0.4 + 0.03 * self.sources.shape[1]
+        self._rows, self._coordinates, self._base, self._centre = _prepared(self.sources, self.targets)
 
     @property
     def reversed(self) -> StreamedKernel:
@@ -45,24 +48,32 @@ class StreamedKernel(Kernel):
         """The kernel between some rows of either cloud."""
         return StreamedKernel(self.sources[rows], self.targets[columns])
 
-    def _run(self, function: Callable[..., Any], inputs: tuple[Any, ...], outputs: tuple[Any, ...]) -> None:
+    def _run(
+        self, function: Callable[..., Any], log_weights: np.ndarray, inputs: tuple[Any, ...], outputs: tuple[Any, ...]
+    ) -> None:
         """Call a compiled loop on every group of chunks, on all threads."""
         layout = self.layout
         width = layout.width
+        base = self._weighted(log_weights)
 
         def task(group: int, first: int, last: int) -> None:
-            buffer = np.empty((1, width))
+            buffer = aligned(1, width)[0]
             function(
-                self.sources, self._coordinates, *inputs,
+                self._rows, self._coordinates, base, *inputs,
                 layout.bounds, layout.pointers, layout.ranges, first, last, buffer, *outputs,
             )  # fmt: skip
 
         run_blocks(task, layout.groups, layout.entries)
 
+    def _weighted(self, log_weights: np.ndarray) -> np.ndarray:
+        base = aligned(1, self.shape[1])[0]
+        np.add(log_weights, self._base, out=base[: self.shape[1]])
+        return base
+
     def log_sum_targets(self, log_weights: np.ndarray) -> np.ndarray:
         """log Σ_j exp(log_weights_j) k_ij, shape (n,)."""
         out = np.empty(self.shape[0])
-        self._run(compiled.log_sum_rows, (log_weights,), (out,))
+        self._run(compiled.log_sum_rows, log_weights, (), (out,))
         return out
 
     def log_sum_sources(self, log_weights: np.ndarray) -> np.ndarray:
@@ -73,13 +84,13 @@ class StreamedKernel(Kernel):
         """The log sum (n,) and the soft mean of the targets (n, d) for every source."""
         out = np.empty(self.shape[0])
         mean = np.empty_like(self.sources)
-        self._run(compiled.log_sum_and_mean, (log_weights,), (out, mean))
-        return out, mean
+        self._run(compiled.log_sum_and_mean, log_weights, (), (out, mean))
+        return out, mean + self._centre
 
     def expectation(self, log_weights: np.ndarray, values: np.ndarray) -> np.ndarray:
         """Average of values (m, k) over the targets with weights exp(log_weights_j) k_ij, for every source; (n, k)."""
         out = np.empty((self.shape[0], values.shape[1]))
-        self._run(compiled.expectation_rows, (log_weights, np.ascontiguousarray(values.T, dtype=float)), (out,))
+        self._run(compiled.expectation_rows, log_weights, (np.ascontiguousarray(values.T, dtype=float),), (out,))
         return out
 
     def sweep(self, log_f: np.ndarray, q: np.ndarray, log_a: np.ndarray, relaxation: float) -> Sweep:
@@ -93,18 +104,19 @@ class StreamedKernel(Kernel):
         n, m = self.shape
         layout = self.layout
         new_f, excess = np.empty(n), np.empty(n)
-        partial = np.zeros((len(layout.groups), m))
+        partial = aligned(len(layout.groups), m)
         width = layout.width
+        base = self._weighted(q)
 
         def task(group: int, first: int, last: int) -> None:
-            buffer = np.empty((4, width))
+            buffer, tile = aligned(4, width), aligned(1, 4 * TILE)[0]
             compiled_sweeps.sweep_rows(
-                self.sources, self._coordinates, q, log_f, log_a, relaxation, layout.bounds, layout.pointers,
-                layout.ranges, first, last, buffer, new_f, excess, partial[group], stored,
+                self._rows, self._coordinates, base, log_f, log_a, relaxation, layout.bounds, layout.pointers,
+                layout.ranges, first, last, tile, buffer, new_f, excess, partial[group], stored,
             )  # fmt: skip
 
         run_blocks(task, layout.groups, layout.entries)
-        sums = partial.sum(axis=0)
+        sums = partial.sum(axis=0)[:m]
         lost = lost_columns(sums, log_a + new_f - log_f, excess)
         return Sweep(new_f, excess, self.column_logs(sums, q, log_a + new_f, lost))
 
@@ -121,13 +133,13 @@ class StreamedKernel(Kernel):
         n, m = self.shape
         counts = np.zeros(n, dtype=np.int64)
         log_cutoff = float(np.log(cutoff))
-        self._run(compiled.count_entries, (p, q, log_cutoff), (counts,))
+        self._run(compiled.count_entries, q, (p, log_cutoff), (counts,))
         row_starts = np.concatenate([[0], np.cumsum(counts)])
         if row_starts[-1] > limit:
             return None
         columns = np.empty(row_starts[-1], dtype=np.int32)
         values = np.empty(row_starts[-1])
-        self._run(compiled.fill_entries, (p, q, log_cutoff), (row_starts, columns, values))
+        self._run(compiled.fill_entries, q, (p, log_cutoff), (row_starts, columns, values))
         return csr_matrix((values, columns, row_starts), shape=(n, m))
 
     def top_targets(self, log_weights: np.ndarray, count: int) -> tuple[np.ndarray, np.ndarray]:
@@ -135,20 +147,20 @@ class StreamedKernel(Kernel):
         count = min(count, self.shape[1])
         targets = np.empty((self.shape[0], count), dtype=np.int64)
         values = np.empty((self.shape[0], count))
-        self._run(compiled.top_entries, (log_weights,), (targets, values))
+        self._run(compiled.top_entries, log_weights, (), (targets, values))
         return targets, values
 
     def sample_targets(self, log_weights: np.ndarray, counts: np.ndarray, uniforms: np.ndarray) -> np.ndarray:
         """Draw counts[i] targets of source i with probability ∝ exp(log_weights_j) k_ij, by inverting cumulative sums."""
         row_starts = np.concatenate([[0], np.cumsum(counts)]).astype(np.int64)
         out = np.empty(row_starts[-1], dtype=np.int64)
-        self._run(compiled.sample_targets, (log_weights, uniforms, row_starts), (out,))
+        self._run(compiled.sample_targets, log_weights, (uniforms, row_starts), (out,))
         return out
 
     def nearest_costs(self) -> np.ndarray:
         """min_i ½|u_i - v_j|², shape (m,)."""
         out = np.empty(self.shape[1])
-        self.reversed._run(compiled.nearest_cost, (np.zeros(self.shape[0]),), (out,))
+        self.reversed._run(compiled.nearest_cost, np.zeros(self.shape[0]), (), (out,))
         return out
 
     def largest_cost(self) -> float:
@@ -169,6 +181,27 @@ class StreamedKernel(Kernel):
         by_axis = float(np.sum(np.ptp(u @ axes, axis=0) * np.ptp(v @ axes, axis=0)))
         by_radius = 4.0 * float(np.sqrt(np.max((u * u).sum(axis=1)) * np.max((v * v).sum(axis=1))))
         return min(by_axis, by_radius)
+
+
+def _prepared(sources: np.ndarray, targets: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Rows, coordinates (d, m), an addition to log-weights (m,), and what was taken off every point (d,).
+
+    By differences or products; see compiled_tiles.py. For products both clouds are moved to near the origin.
+    """
+    if sources.shape[1] >= _PRODUCT_DIMENSIONS and min(len(sources), len(targets)) > 0:
+        centre = 0.5 * (sources.mean(axis=0) + targets.mean(axis=0))
+        x, v = sources - centre, targets - centre
+        x_squares, v_squares = (np.einsum("ik,ik->i", cloud, cloud) for cloud in (x, v))
+        if max(x_squares.max(), v_squares.max()) <= _PRODUCT_RADIUS:
+            return np.column_stack([x, -0.5 * x_squares]), _coordinates(v), -0.5 * v_squares, centre
+    return sources, _coordinates(targets), np.zeros(len(targets)), np.zeros(targets.shape[1])
+
+
+def _coordinates(points: np.ndarray) -> np.ndarray:
+    """Coordinate after coordinate (d, at least m): what lies beyond the points belongs to no range of columns."""
+    rows = aligned(points.shape[1], points.shape[0])
+    rows[:, : points.shape[0]] = points.T
+    return rows
 
 
 def pick_targets(

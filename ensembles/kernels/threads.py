@@ -4,12 +4,15 @@ from __future__ import annotations
 
 import os
 import threading
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import AbstractContextManager, ExitStack, contextmanager
+from functools import cache
 from itertools import pairwise
+from typing import Any
 
 from .fast_exp import announce_compilation
 
-__all__ = ["block_bounds", "run_blocks", "thread_count"]
+__all__ = ["block_bounds", "one_blas_thread", "run_blocks", "thread_count"]
 
 _SMALL = 200_000  # kernel entries below which a second thread costs more than it saves
 
@@ -69,3 +72,41 @@ def run_blocks(task: Callable[[int, int, int], None], bounds: list[tuple[int, in
             thread.join()
     if failures:
         raise failures[0]
+
+
+_depth = 0
+_limit = ExitStack()
+_guard = threading.Lock()
+
+
+@contextmanager
+def one_blas_thread() -> Iterator[None]:
+    """Keep the linear algebra library to one thread meanwhile; may be entered again, and by several threads at once.
+
+    The matrices of a fit are small: a second thread there only waits, and takes a core from the loops over the kernel.
+    """
+    global _depth
+    with _guard:
+        if _depth == 0:
+            _limit.enter_context(_blas_limit())
+        _depth += 1
+    try:
+        yield
+    finally:
+        with _guard:
+            _depth -= 1
+            if _depth == 0:
+                _limit.close()
+
+
+def _blas_limit() -> AbstractContextManager[Any]:
+    return _blas_controller().limit(limits=1, user_api="blas")
+
+
+@cache
+def _blas_controller() -> Any:
+    """Looks through the libraries that the process has loaded, which takes some milliseconds: once."""
+    import scipy.linalg  # noqa: F401 - has a linear algebra library of its own, which must be there to be found
+    from threadpoolctl import ThreadpoolController
+
+    return ThreadpoolController()

@@ -14,51 +14,46 @@ from ..kernels.base import Kernel
 from ..logspace import birkhoff_contraction, hilbert_distance
 from .solution import Certificate
 
-__all__ = ["certify", "marginal_errors", "scaling_exists"]
-
-
-def marginal_errors(
-    kernel: Kernel, log_weights: tuple[np.ndarray, np.ndarray], log_f: np.ndarray, log_g: np.ndarray
-) -> tuple[float, float]:
-    """L1 errors of the row and column sums of a_i b_j exp(f_i + g_j) k_ij, from one exact pass.
-
-    A kernel that leaves out pairs adds its bound on what they may carry, so that the error stays a bound.
-    """
-    log_a, log_b = log_weights
-    sweep = kernel.sweep(log_f, log_b + log_g, log_a, 0.0)
-    with np.errstate(over="ignore"):
-        row_error = float(np.exp(log_a) @ np.abs(np.expm1(sweep.row_excess)))
-        column_error = float(np.exp(log_b) @ np.abs(np.expm1(log_g + sweep.column_log_sums)))
-    return row_error + kernel.left_out, column_error + kernel.left_out
+__all__ = ["certify", "scaling_exists"]
 
 
 def certify(
     kernel: Kernel,
     log_weights: tuple[np.ndarray, np.ndarray],
-    log_g: np.ndarray,
     log_f: np.ndarray,
-    contraction_seen: float,
+    log_g: np.ndarray,
     tolerance: float,
+    *,
+    contraction_seen: float = float("nan"),
+    step_before: float = float("nan"),
 ) -> tuple[np.ndarray, Certificate]:
     """The source potential that goes with log_g, and everything a certificate states about the pair.
 
-    One plain sweep of the exact kernel gives f and the Hilbert step, a second pass recomputes both marginals of the
-    pair; where the run has seen no plain sweeps (`contraction_seen` is NaN), a third one measures the contraction.
+    One plain sweep of the exact kernel divides the row sums by themselves, which gives the returned f and leaves an error
+    of rounding in the rows; the column sums that the same pass makes with this f are those of the returned pair. A kernel
+    that leaves out pairs adds its bound on what they may carry. Where the run has seen no two plain sweeps
+    (`contraction_seen` is NaN), the Hilbert step is compared with `step_before`, that of the sweep which gave log_g, and
+    with that of a further sweep where this is not known either.
     """
     log_a, log_b = log_weights
     sweep = kernel.sweep(log_f, log_b + log_g, log_a, 1.0)
-    log_f, next_g = sweep.log_f, -sweep.column_log_sums
-    row_error, column_error = marginal_errors(kernel, log_weights, log_f, log_g)
+    new_f, next_g = sweep.log_f, -sweep.column_log_sums
+    with np.errstate(over="ignore", invalid="ignore"):
+        row_error = float(np.exp(log_a) @ np.abs(np.expm1(sweep.row_excess + (new_f - log_f)))) + kernel.left_out
+        column_error = float(np.exp(log_b) @ np.abs(np.expm1(log_g - next_g))) + kernel.left_out
     step = hilbert_distance(next_g, log_g)
     # Below rounding the ratio of two steps says nothing about the contraction.
     rounding = 64.0 * np.finfo(float).eps * max(1.0, float(np.abs(log_g).max()))
     observed = contraction_seen
     if not np.isfinite(observed) and step > rounding:
-        second = kernel.sweep(log_f, log_b + next_g, log_a, 1.0)
-        observed = hilbert_distance(-second.column_log_sums, next_g) / step
+        if np.isfinite(step_before):
+            observed = step / step_before
+        else:
+            second = kernel.sweep(new_f, log_b + next_g, log_a, 1.0)
+            observed = hilbert_distance(-second.column_log_sums, next_g) / step
     observed = min(observed, 1.0)
     bound = birkhoff_contraction(kernel.diameter_bound())
-    return log_f, Certificate(
+    return new_f, Certificate(
         row_error=row_error,
         column_error=column_error,
         marginal_error=max(row_error, column_error),

@@ -82,7 +82,7 @@ def sweep_states(
             column_error = float(b @ np.abs(np.expm1(residual)))
         yield State(
             sweeps, "sweep", state.scale, sweep.log_f, log_g, row_error, column_error,
-            factor * float(np.ptp(residual)), factor,
+            factor * float(np.ptp(residual)), factor, -sweep.column_log_sums,
         )  # fmt: skip
         log_f, log_g = sweep.log_f, log_g - factor * residual
         control.observe(max(row_error, column_error))

@@ -64,7 +64,7 @@ def newton_states(
             return
         step = float(np.ptp(trial - log_g))
         log_g, log_f = trial, sweep.log_f
-        yield State(sweeps, "newton", state.scale, log_f, log_g, 0.0, trial_error, step, 1.0)
+        yield State(sweeps, "newton", state.scale, log_f, log_g, 0.0, trial_error, step, 1.0, -sweep.column_log_sums)
 
 
 def _column_error(b: np.ndarray, log_g: np.ndarray, column_log_sums: np.ndarray) -> float:

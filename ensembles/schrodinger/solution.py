@@ -69,6 +69,7 @@ class State:
     """Where an iteration stands after one pass over the kernel; states can be iterated, shown, or abandoned.
 
     `log_f`, `log_g` belong to the noise variance `scale` times the final one; errors are those of their coupling.
+    `next_g` is what a plain sweep makes of `log_g`, once a pass has been made.
     """
 
     sweep: int
@@ -80,6 +81,7 @@ class State:
     column_error: float
     hilbert_step: float
     relaxation: float
+    next_g: np.ndarray | None = None
 
     @property
     def error(self) -> float:

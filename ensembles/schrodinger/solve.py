@@ -10,6 +10,7 @@ import numpy as np
 from .. import checks
 from ..kernels.base import Kernel
 from ..kernels.dense import DenseKernel
+from ..logspace import hilbert_distance
 from .certificate import certify, scaling_exists
 from .iteration import Start, Strategy, level_states, solver_states
 from .solution import Certificate, Outcome, Solution, State
@@ -82,10 +83,14 @@ def solve(
     states = solver_states(reduced, pair, tolerance, begin, strategy)
     for _ in range(_ATTEMPTS):
         state = next(state for state in states if run.ends(state))
-        if state.scale != 1.0:
-            # Ended on the ladder: potentials times noise variance are lengths², alike at every noise.
-            state = replace(state, log_f=state.log_f * state.scale, log_g=state.log_g * state.scale, scale=1.0)
-        final_f, certificate = certify(reduced.exact, log_weights, state.log_g, state.log_f, run.contraction, tolerance)
+        last_g = state.next_g if state.next_g is not None else state.log_g
+        step = hilbert_distance(last_g, state.log_g) if state.scale == 1.0 and state.stage == "sweep" else float("nan")
+        # Where the run ended on the ladder: potentials times noise variance are lengths², alike at every noise.
+        state = replace(state, log_f=state.log_f * state.scale, log_g=last_g * state.scale, scale=1.0)
+        final_f, certificate = certify(
+            reduced.exact, log_weights, state.log_f, state.log_g, tolerance,
+            contraction_seen=run.contraction, step_before=step,
+        )  # fmt: skip
         state = replace(state, log_f=final_f)
         if certificate.marginal_error <= tolerance:
             run.outcome = Outcome.CONVERGED  # also where the run had given up or was stopped: this is what counts
