@@ -50,6 +50,30 @@ def test_log_sum_and_soft_mean(dimension):
     assert_allclose(mean, np.exp(exponents - expected[:, None]) @ y, rtol=1e-12, atol=1e-13)
 
 
+@pytest.mark.parametrize("dimension", [3, 4, 5, 7, 8, 11])
+@pytest.mark.parametrize("width", [2.0, 300.0])  # by products from four dimensions on; by differences where they are wide
+def test_distances_do_not_depend_on_where_the_clouds_lie(dimension, width):
+    rng = np.random.default_rng(dimension)
+    x = rng.normal(size=(30, dimension)) * width  # 30 rows: groups of four, and two left over
+    y = x[rng.integers(0, 30, 300)] + rng.normal(size=(300, dimension))
+    q = rng.normal(size=300)
+    exponents = q - 0.5 * ((x[:, None] - y[None]) ** 2).sum(axis=-1)
+    log_sums = logsumexp(exponents, axis=1)
+    zeros, moved = np.zeros(30), 1024.0  # a power of two: the shifted coordinates lose few digits
+    for offset, accuracy in ((0.0, 2e-12), (moved, 1e-8)):
+        kernel = StreamedKernel(x + offset, y + offset)
+        sweep = kernel.sweep(-log_sums, q, zeros, 1.0)
+        assert_allclose(sweep.row_excess, 0.0, atol=accuracy)
+        assert_allclose(sweep.column_log_sums, logsumexp(exponents - log_sums[:, None], axis=0) - q, atol=accuracy)
+        assert_allclose(kernel.log_sum_targets(q), log_sums, atol=accuracy)
+        mean = np.exp(exponents - log_sums[:, None]) @ y + offset
+        assert_allclose(kernel.log_sum_and_mean(q)[1], mean, atol=max(accuracy * width, 1e-10))
+    # What the choice guards against: products about the far origin, which lose the digits asked for above.
+    far_x, far_y = x + 1e6, y + 1e6
+    products = far_x @ far_y.T - 0.5 * (far_x**2).sum(axis=1)[:, None] - 0.5 * (far_y**2).sum(axis=1)
+    assert np.abs(products - (exponents - q)).max() > 1e-8
+
+
 def test_soft_mean_far_away_is_the_nearest_target():
     y = np.array([[0.0, 0.0], [1.0, 0.0]])
     log_sum, mean = StreamedKernel(np.array([[-1e4, 3.0]]), y).log_sum_and_mean(np.zeros(2))

@@ -207,7 +207,7 @@ def _solve_gap(
     coarse = 4.0 * len(u) * len(v) > options.memory
     start_values, strategy = gap_start(problem, start, gaussian_kernel, options.strategy, coarse=coarse)
     return weights, solve(
-        gaussian_kernel(u, v, options.memory, at_once=start is not None),
+        gaussian_kernel(u, v, options.memory),
         weights,
         tolerance=tolerance,
         sweep_limit=options.sweep_limit,

@@ -20,23 +20,27 @@ from .threads import block_bounds, run_blocks
 __all__ = ["CachedKernel"]
 
 _DRIFT = 30.0  # stored entries end at 1e-38, so what is missing stays below e^60 * 1e-38 of a row
-_CHEAP_DIMENSION = 8
-_CHEAP_SWEEPS = 2
 _FLOOR = 2e-7  # L1 error below which rounding in storage may show
 
 
+class _Storage:
+    """Memory for one stored kernel, and whose it is at present. Fresh memory costs more than filling it does."""
+
+    def __init__(self) -> None:
+        self.rows = np.empty((0, 0), dtype=np.float32)
+        self.owner: CachedKernel | None = None
+
+
 class CachedKernel(Kernel):
-    """exp(-½|u_i - v_j|²), stored as float32, n m * 4 bytes: after a few sweeps where distances are cheap, or `at_once`."""
+    """exp(-½|u_i - v_j|²), stored as float32 when first swept, n m * 4 bytes; levels of noise share them in turn."""
 
     floor = _FLOOR
     entry_time = 0.15
 
-    def __init__(self, exact: StreamedKernel, *, at_once: bool = False) -> None:
+    def __init__(self, exact: StreamedKernel, storage: _Storage | None = None) -> None:
         self._exact = exact
         self.shape = exact.shape
-        self._stored = np.empty((0, 0), dtype=np.float32)
-        # Where a distance is cheap, a few passes cost less than storing: wait until the sweeps go on.
-        self._wait = _CHEAP_SWEEPS if exact.sources.shape[1] < _CHEAP_DIMENSION and not at_once else 0
+        self._storage = _Storage() if storage is None else storage
         self._f = np.empty(0)
         self._q = np.empty(0)
 
@@ -46,8 +50,8 @@ class CachedKernel(Kernel):
         return self._exact
 
     def at_scale(self, scale: float) -> CachedKernel:
-        """The same clouds at `scale` times the noise variance, stored when first swept."""
-        return CachedKernel(self.exact.at_scale(scale))
+        """The same clouds at `scale` times the noise variance, stored in the same place when first swept."""
+        return CachedKernel(self.exact.at_scale(scale), self._storage)
 
     def restrict(self, rows: np.ndarray, columns: np.ndarray) -> CachedKernel:
         """The kernel between some sources and some targets."""
@@ -55,15 +59,14 @@ class CachedKernel(Kernel):
 
     def sweep(self, log_f: np.ndarray, q: np.ndarray, log_a: np.ndarray, relaxation: float) -> Sweep:
         """One pass over the stored kernel; over the exact one at first, and after a large change of potentials."""
-        if not self._stored.size and self._wait > 0:
-            self._wait -= 1
-            return self.exact.sweep(log_f, q, log_a, relaxation)
-        if not self._stored.size or self._drifted(log_f, q):
-            if not self._stored.size:
-                self._stored = np.empty(self.shape, dtype=np.float32)
-            sweep = self.exact.sweep_and_store(log_f, q, log_a, relaxation, self._stored)
+        storage = self._storage
+        if storage.owner is not self or self._drifted(log_f, q):
+            if storage.rows.shape != self.shape:
+                storage.rows = np.empty(self.shape, dtype=np.float32)
+            storage.owner = None  # an interruption leaves rows of two kinds
+            sweep = self.exact.sweep_and_store(log_f, q, log_a, relaxation, storage.rows)
             # Rows were stored at sum 1, whatever the update of f that the caller asked for.
-            self._f, self._q = log_f - sweep.row_excess, q.copy()
+            self._f, self._q, storage.owner = log_f - sweep.row_excess, q.copy(), self
             return sweep
         n, m = self.shape
         u, v = np.exp(log_f - self._f), np.exp(q - self._q)
@@ -73,7 +76,7 @@ class CachedKernel(Kernel):
 
         def task(block: int, start: int, stop: int) -> None:
             compiled_sweeps.sweep_stored(
-                self._stored, v, u, log_a, relaxation, start, stop, update, excess, partial[block]
+                storage.rows, v, u, log_a, relaxation, start, stop, update, excess, partial[block]
             )
 
         run_blocks(task, bounds, float(n) * m)
@@ -90,7 +93,7 @@ class CachedKernel(Kernel):
 
     def entries(self, p: np.ndarray, q: np.ndarray, cutoff: float, limit: int) -> csr_matrix | None:
         """Sparse exp(p_i + q_j) k_ij above `cutoff`, from the stored kernel where it holds."""
-        if not self._stored.size or np.abs(q - self._q).max() > _DRIFT:
+        if self._storage.owner is not self or np.abs(q - self._q).max() > _DRIFT:
             return self.exact.entries(p, q, cutoff, limit)
         n, m = self.shape
         factors, v = np.exp(p - self._f), np.exp(q - self._q)
@@ -98,7 +101,7 @@ class CachedKernel(Kernel):
         bounds = block_bounds(n, BLOCKS)
 
         def count(block: int, start: int, stop: int) -> None:
-            compiled_sweeps.count_stored(self._stored, v, factors, cutoff, start, stop, counts)
+            compiled_sweeps.count_stored(self._storage.rows, v, factors, cutoff, start, stop, counts)
 
         run_blocks(count, bounds, float(n) * m)
         row_starts = np.concatenate([[0], np.cumsum(counts)])
@@ -108,7 +111,9 @@ class CachedKernel(Kernel):
         values = np.empty(row_starts[-1])
 
         def fill(block: int, start: int, stop: int) -> None:
-            compiled_sweeps.fill_stored(self._stored, v, factors, cutoff, start, stop, row_starts, columns, values)
+            compiled_sweeps.fill_stored(
+                self._storage.rows, v, factors, cutoff, start, stop, row_starts, columns, values
+            )
 
         run_blocks(fill, bounds, float(n) * m)
         return csr_matrix((values, columns, row_starts), shape=(n, m))

@@ -18,17 +18,15 @@ _FEW_DIMENSIONS = 3  # beyond, boxes of neighbours overlap with most others
 _WIDE = 40.0  # mean cost of the balanced clouds from which most pairs can be left out
 
 
-def gaussian_kernel(
-    sources: np.ndarray, targets: np.ndarray, memory: float = MEMORY, *, at_once: bool = False
-) -> Kernel:
+def gaussian_kernel(sources: np.ndarray, targets: np.ndarray, memory: float = MEMORY) -> Kernel:
     """exp(-½|u_i - v_j|²) between whitened clouds (n, d), (m, d).
 
-    Stored if it fits into `memory` bytes (at the first sweep if `at_once`); truncated where the clouds are large, of few
+    Stored if it fits into `memory` bytes; truncated where the clouds are large, of few
     dimensions and wide against the noise; else streamed.
     """
     entries = float(sources.shape[0]) * targets.shape[0]
     if _TINY < entries <= memory / 4:
-        return CachedKernel(StreamedKernel(sources, targets), at_once=at_once)
+        return CachedKernel(StreamedKernel(sources, targets))
     return evaluation_kernel(sources, targets)
 
 
