@@ -146,6 +146,18 @@ def test_a_column_of_zeros_is_named():
     assert solution.unreachable == (1, 3)
 
 
+@pytest.mark.parametrize("share", [1e-3, 1e-6, 1e-8])
+def test_a_row_of_little_weight_does_not_count_as_missing(share):
+    kernel, weights = np.ones((3, 3)), np.array([share, 0.5, 0.5 - share])
+    kernel[2, 0] = 0.0
+    pi, solution = scaled(log(kernel), weights, np.ones(3))
+    assert solution.outcome is Outcome.CONVERGED
+    assert_allclose(pi.sum(axis=1), weights / weights.sum(), rtol=1e-5)
+    # With nothing but the light row to fill a column, no scaling exists.
+    kernel[1, 0] = 0.0
+    assert scaled(log(kernel), weights, np.ones(3))[1].outcome is Outcome.UNREACHABLE
+
+
 def test_many_unreachable_rows_are_counted():
     kernel = StreamedKernel(np.zeros((3, 2)), np.full((9, 2), 1e7))
     solution = solve(kernel, (np.ones(3), np.ones(9)))

@@ -17,6 +17,9 @@ from .solution import Certificate
 __all__ = ["certify", "scaling_exists"]
 
 
+_LEAST_SHARE = 1e-6  # of the independent coupling, that every allowed link must be able to carry
+
+
 def certify(
     kernel: Kernel,
     log_weights: tuple[np.ndarray, np.ndarray],
@@ -76,15 +79,16 @@ def scaling_exists(log_kernel: np.ndarray, a: np.ndarray, b: np.ndarray) -> bool
     """Whether a coupling with row sums a and column sums b is positive exactly where the kernel is.
 
     Only then do potentials exist (Sinkhorn and Knopp 1967 for square matrices; from memory). Linear programme: the
-    largest t such that some x with these sums has x_ij ≥ t wherever k_ij > 0.
+    largest t such that some coupling x_ij = a_i y_ij b_j has y_ij ≥ t wherever k_ij > 0; with y the size of a weight does
+    not matter.
     """
     rows, columns = np.nonzero(np.isfinite(log_kernel))
     count = rows.size
     n, m = log_kernel.shape
     ones, entry = np.ones(count), np.arange(count)
     sums = vstack([
-        coo_matrix((ones, (rows, entry)), shape=(n, count + 1)),
-        coo_matrix((ones, (columns, entry)), shape=(m, count + 1)),
+        coo_matrix((b[columns], (rows, entry)), shape=(n, count + 1)),
+        coo_matrix((a[rows], (columns, entry)), shape=(m, count + 1)),
     ]).tocsr()  # fmt: skip
     floor = coo_matrix(
         (
@@ -95,7 +99,5 @@ def scaling_exists(log_kernel: np.ndarray, a: np.ndarray, b: np.ndarray) -> bool
     ).tocsr()
     objective = np.zeros(count + 1)
     objective[-1] = -1.0
-    result = linprog(
-        objective, A_ub=floor, b_ub=np.zeros(count), A_eq=sums, b_eq=np.concatenate([a, b]), method="highs"
-    )
-    return bool(result.status == 0 and -result.fun > 1e-12)
+    result = linprog(objective, A_ub=floor, b_ub=np.zeros(count), A_eq=sums, b_eq=np.ones(n + m), method="highs")
+    return bool(result.status == 0 and -result.fun > _LEAST_SHARE)
