@@ -100,9 +100,13 @@ def limits(say: Say) -> None:
             cached.sweep(f, q, log_a, 1.0)
         per_cached = best_of(lambda: cached.sweep(f, q, log_a, 1.0), 9)  # noqa: B023
         per_streamed = best_of(lambda: streamed.sweep(f, q, log_a, 1.0))  # noqa: B023
+        out = np.empty((64, n))  # a part that stays in cache
+        per_products = best_of(lambda: np.matmul(u[:64], v.T, out=out), 20) * (n / 64)  # noqa: B023
+        both = n * n / throughput + per_products
         say(f"  d = {d:2d}: cached sweep {per_cached / n / n * 1e9:.3f} ns an entry, "
             f"{4 * n * n / per_cached / bandwidth:.0%} of bandwidth; streamed {per_streamed / n / n * 1e9:.3f} ns, "
-            f"{n * n / per_streamed / throughput:.0%} of the exponentials")  # fmt: skip
+            f"{n * n / per_streamed / throughput:.0%} of the exponentials, {both / per_streamed:.0%} of exponentials and "
+            f"scalar products at the speed of BLAS ({per_products / n / n * 1e9:.3f} ns)")  # fmt: skip
 
 
 def exponents(say: Say) -> None:

@@ -30,15 +30,16 @@ def tile_exponents(x, vt, base, j0, width, first, rows, tile):
     wide_vectors()
     d = vt.shape[0]
     begin, size = np.uintp(j0), np.uintp(width)
-    products = x.shape[1] > d
+    if x.shape[1] > d:
+        if rows == 4:
+            _products(x, vt, base, begin, size, first, tile)
+        else:
+            for r in range(rows):
+                _products_of_row(x, vt, base, begin, size, first + r, tile, np.uintp(r * TILE))
+        return
     for r in range(rows):
         i = first + r
         place = np.uintp(r * TILE)
-        if products:
-            c = x[i, d]
-            for j in range(size):
-                tile[place + j] = base[begin + j] + c
-            continue
         x0 = x[i, 0]
         if d == 1:
             for j in range(size):
@@ -55,34 +56,50 @@ def tile_exponents(x, vt, base, j0, width, first, rows, tile):
             for j in range(size):
                 e0 = x0 - vt[k, begin + j]
                 tile[place + j] -= 0.5 * e0 * e0
-    if products:
-        if rows == 4:
-            _add_products(x, vt, begin, size, first, tile)
-        else:
-            for r in range(rows):
-                _add_products_of_row(x, vt, begin, size, first + r, tile, np.uintp(r * TILE))
 
 
 @compiled
-def _add_products(x, vt, begin, size, i, tile):
-    """tile[r * TILE + c] += x_(i + r)·v_(begin + c) for four rows at once: each v_j is loaded once for the four."""
+def _products(x, vt, base, begin, size, i, tile):
+    """tile[r * TILE + c] = base_j + x_(i + r, d) + x_(i + r)·v_j, j = begin + c, for four rows at once.
+
+    Each v_j is loaded once for the four rows, and each pass over the tile takes four coordinates.
+    """
     wide_vectors()
     d = vt.shape[0]
     one, two, three = np.uintp(TILE), np.uintp(2 * TILE), np.uintp(3 * TILE)
-    k = 0
-    while k + 4 <= d:
+    for k in range(0, d - 3, 4):
         a0, a1, a2, a3 = x[i, k], x[i, k + 1], x[i, k + 2], x[i, k + 3]
         b0, b1, b2, b3 = x[i + 1, k], x[i + 1, k + 1], x[i + 1, k + 2], x[i + 1, k + 3]
         c0, c1, c2, c3 = x[i + 2, k], x[i + 2, k + 1], x[i + 2, k + 2], x[i + 2, k + 3]
         d0, d1, d2, d3 = x[i + 3, k], x[i + 3, k + 1], x[i + 3, k + 2], x[i + 3, k + 3]
+        if k == 0:
+            a, b, c, e = x[i, d], x[i + 1, d], x[i + 2, d], x[i + 3, d]
+            for j in range(size):
+                p0, p1, p2, p3 = vt[k, begin + j], vt[k + 1, begin + j], vt[k + 2, begin + j], vt[k + 3, begin + j]
+                p = base[begin + j]
+                tile[j] = (p + a) + ((a0 * p0 + a1 * p1) + (a2 * p2 + a3 * p3))
+                tile[j + one] = (p + b) + ((b0 * p0 + b1 * p1) + (b2 * p2 + b3 * p3))
+                tile[j + two] = (p + c) + ((c0 * p0 + c1 * p1) + (c2 * p2 + c3 * p3))
+                tile[j + three] = (p + e) + ((d0 * p0 + d1 * p1) + (d2 * p2 + d3 * p3))
+        else:
+            for j in range(size):
+                p0, p1, p2, p3 = vt[k, begin + j], vt[k + 1, begin + j], vt[k + 2, begin + j], vt[k + 3, begin + j]
+                tile[j] += (a0 * p0 + a1 * p1) + (a2 * p2 + a3 * p3)
+                tile[j + one] += (b0 * p0 + b1 * p1) + (b2 * p2 + b3 * p3)
+                tile[j + two] += (c0 * p0 + c1 * p1) + (c2 * p2 + c3 * p3)
+                tile[j + three] += (d0 * p0 + d1 * p1) + (d2 * p2 + d3 * p3)
+    k = d - d % 4
+    if k + 2 <= d:
+        a0, a1, b0, b1 = x[i, k], x[i, k + 1], x[i + 1, k], x[i + 1, k + 1]
+        c0, c1, d0, d1 = x[i + 2, k], x[i + 2, k + 1], x[i + 3, k], x[i + 3, k + 1]
         for j in range(size):
-            p0, p1, p2, p3 = vt[k, begin + j], vt[k + 1, begin + j], vt[k + 2, begin + j], vt[k + 3, begin + j]
-            tile[j] += (a0 * p0 + a1 * p1) + (a2 * p2 + a3 * p3)
-            tile[j + one] += (b0 * p0 + b1 * p1) + (b2 * p2 + b3 * p3)
-            tile[j + two] += (c0 * p0 + c1 * p1) + (c2 * p2 + c3 * p3)
-            tile[j + three] += (d0 * p0 + d1 * p1) + (d2 * p2 + d3 * p3)
-        k += 4
-    while k < d:
+            p0, p1 = vt[k, begin + j], vt[k + 1, begin + j]
+            tile[j] += a0 * p0 + a1 * p1
+            tile[j + one] += b0 * p0 + b1 * p1
+            tile[j + two] += c0 * p0 + c1 * p1
+            tile[j + three] += d0 * p0 + d1 * p1
+        k += 2
+    if k < d:
         a0, b0, c0, d0 = x[i, k], x[i + 1, k], x[i + 2, k], x[i + 3, k]
         for j in range(size):
             p0 = vt[k, begin + j]
@@ -90,26 +107,25 @@ def _add_products(x, vt, begin, size, i, tile):
             tile[j + one] += b0 * p0
             tile[j + two] += c0 * p0
             tile[j + three] += d0 * p0
-        k += 1
 
 
 @compiled
-def _add_products_of_row(x, vt, begin, size, i, tile, place):
-    """tile[place + c] += x_i·v_(begin + c)."""
+def _products_of_row(x, vt, base, begin, size, i, tile, place):
+    """As _products, for one row."""
     wide_vectors()
     d = vt.shape[0]
-    k = 0
-    while k + 4 <= d:
+    c = x[i, d]
+    for j in range(size):
+        tile[place + j] = base[begin + j] + c
+    for k in range(0, d - 3, 4):
         a0, a1, a2, a3 = x[i, k], x[i, k + 1], x[i, k + 2], x[i, k + 3]
         for j in range(size):
             first, second = a0 * vt[k, begin + j] + a1 * vt[k + 1, begin + j], a2 * vt[k + 2, begin + j]
             tile[place + j] += first + (second + a3 * vt[k + 3, begin + j])
-        k += 4
-    while k < d:
+    for k in range(d - d % 4, d):
         a0 = x[i, k]
         for j in range(size):
             tile[place + j] += a0 * vt[k, begin + j]
-        k += 1
 
 
 @compiled
