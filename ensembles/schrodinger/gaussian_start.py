@@ -43,6 +43,8 @@ def gaussian_potentials(
     curvature_start = gaussian_curvature(start_covariance, end_covariance)
     # ½|u - v|² in centred coordinates: ½|x|² + ½|y|² - x·y + (m - n)·(x - y) + constant
     shift = m - n
-    log_f = 0.5 * (x * x).sum(axis=1) - 0.5 * np.einsum("ij,jk,ik->i", x, curvature_start, x) + x @ shift
-    log_g = 0.5 * (y * y).sum(axis=1) - 0.5 * np.einsum("ij,jk,ik->i", y, curvature_end, y) - y @ shift
+    # and -½ xᵀ M x of the coupling's density: together ½ xᵀ (1 - M) x.
+    identity = np.eye(x.shape[1])
+    log_f = 0.5 * np.einsum("ij,ij->i", x @ (identity - curvature_start), x) + x @ shift
+    log_g = 0.5 * np.einsum("ij,ij->i", y @ (identity - curvature_end), y) - y @ shift
     return log_f, log_g
