@@ -59,6 +59,7 @@ _HOMES = {
     "implied_growth": "lineage.growth",
     "kept_weights": "lineage.growth",
     "masses": "lineage.growth",
+    "estimate_growth": "lineage.growth_estimate",
     "InputError": "checks",
     "ComputationError": "checks",
     "ConvergenceError": "schrodinger.solution",
@@ -100,6 +101,7 @@ if TYPE_CHECKING:
     from .lineage.growth import implied_growth as implied_growth
     from .lineage.growth import kept_weights as kept_weights
     from .lineage.growth import masses as masses
+    from .lineage.growth_estimate import estimate_growth as estimate_growth
     from .lineage.uncertainty import LineageProbabilities as LineageProbabilities
     from .lineage.uncertainty import lineage_errors as lineage_errors
     from .links.candidates import LinkOptions as LinkOptions

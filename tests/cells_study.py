@@ -122,15 +122,27 @@ def hsmm(folder):
 
 
 def calibration(_folder):
-    for seed in (0, 1):
-        truth = branching.simulate(2000, seed)
+    for count, seed in ((2000, 0), (2000, 1), (2000, 2), (500, 0), (500, 1), (500, 2), (500, 3)):
+        truth = branching.simulate(count, seed)
         nearest = branching.nearest_neighbours(truth.series)
         scores = {"true chance": truth.chance, "nearest neighbour": nearest} | branching.predictions(truth)
-        print(f"== branching cells, seed {seed}: {len(truth.series.clouds[0])} cells a snapshot")
+        print(f"== branching cells, seed {seed}: {count} cells a snapshot")
         for name, prediction in scores.items():
             said, seen, counted = branching.reliability(prediction, truth)
+            errors = branching.bin_errors(prediction, truth)
             off = ", ".join(f"{a:.2f}/{b:.2f}" if n else "-" for a, b, n in zip(said, seen, counted))
-            print(f"{name:18s} Brier {branching.brier(prediction, truth):.4f}   said/seen {off}")
+            print(
+                f"{name:23s} Brier {branching.brier(prediction, truth):.4f}   furthest off {np.nanmax(np.abs(said - seen)):.3f}"
+                f"   said/seen {off}   (standard errors at most {np.nanmax(errors[0]):.3f}/{np.nanmax(errors[1]):.3f})",
+                flush=True,
+            )
+        found = ensembles.estimate_growth(truth.series, ensembles.Brownian(diffusion=branching.DIFFUSION))
+        true = [branching.net_rate(cloud) for cloud in truth.series.clouds]
+        offset = np.concatenate(true[:-1]).mean()
+        z = np.concatenate([(r - t + offset) / e for r, t, e in zip(found.rates, true, found.errors)])
+        slope = np.polyfit(np.concatenate(true), np.concatenate(found.rates), 1)[0]
+        z = np.sqrt(np.mean(z**2))
+        print(f"{found}\nslope against the true rates {slope:.2f}; root mean square of (estimate - true) / error {z:.2f}")
 
 
 def scale(_folder, count=20_000, dimension=30):
