@@ -142,7 +142,9 @@ def calibration(_folder):
         z = np.concatenate([(r - t + offset) / e for r, t, e in zip(found.rates, true, found.errors)])
         slope = np.polyfit(np.concatenate(true), np.concatenate(found.rates), 1)[0]
         z = np.sqrt(np.mean(z**2))
-        print(f"{found}\nslope against the true rates {slope:.2f}; root mean square of (estimate - true) / error {z:.2f}")
+        print(
+            f"{found}\nslope against the true rates {slope:.2f}; root mean square of (estimate - true) / error {z:.2f}"
+        )
 
 
 def scale(_folder, count=20_000, dimension=30):

@@ -32,7 +32,6 @@ _TABLES = {
     "masses": "mass of every snapshot, measured and as the given growth makes it",
     "cells": "all of this by cell, for AnnData",
     "scaling": "the map from the file's coordinates to those of the fit, and back",
-    "original_paths": "the sampled paths in the file's own coordinates",
     "bridge": "the fitted bridge itself; read it with ensembles.load_bridge",
     "study": "the study file, as it was read",
     "summary": "everything of this page in numbers",
