@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from . import __version__, writing
-from .lineage_results import write_lineage
+from .lineage_results import label_rows, write_lineage
 from .overview import verdicts
 from .study import Study
 
@@ -108,6 +108,7 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
     figures += lineages
     summary = _summary(study, bridge, seed, back)
     summary["notes"] += [*bridge.notes, *sentences, *_scaling_notes(back)]
+    summary["labels"] = label_rows(bridge)
     write_page(folder, summary, figures)
     writing.write_text(folder / "study.toml", study.text)
     # Last: the folder is known as a complete output by this file.

@@ -72,9 +72,9 @@ def process_of(series):
     return growth_process.Process(made, made.typical_distance)
 
 
-@pytest.mark.parametrize("later", [0.0, 0.7])
-def test_the_gradient(later):
-    series = tilted(40, 1).with_growth(Growth(0.2, later=later))
+def test_the_gradient():
+    rates = [0.3 * np.sin(cloud[:, 0]) for cloud in tilted(40, 1).clouds]
+    series = tilted(40, 1, features={"r": rates}).with_growth(Growth("r"))
     process = process_of(series)
     c = np.random.default_rng(2).normal(size=process.root.shape[1])
     _, gradient = process.loss(c, 0.8)
@@ -134,18 +134,16 @@ def test_given_rates_are_where_it_starts():
     assert well.series.growth == Growth("estimated_rate")
 
 
-def test_contaminants_pull_less_where_later_weights_may_depart():
-    series = tilted(300, 3, slope=0.0)
-    late = series.clouds[1].copy()
-    late[:30] = 3.5 + 0.1 * late[:30]  # a tenth of the cells came from elsewhere
-    series = ensembles.SnapshotSeries.from_arrays([0, 1], [series.clouds[0], late])
-    pulled, robust = (
-        ensembles.estimate_growth(series.with_growth(Growth(later=later)), PRIOR, uncertainty=0.5)
-        for later in (0.0, 1.0)
-    )
-    spans = [np.ptp(found.rates[0]) for found in (pulled, robust)]
-    assert spans[1] < 0.7 * spans[0]
-    assert robust.series.growth.later == 1.0
+def test_a_drift_that_the_prior_lacks_is_taken_for_growth_and_said():
+    rng = np.random.default_rng(3)
+    clouds = [rng.normal(1.5 * k, np.sqrt(1 + 0.5 * k), 300) for k in range(3)]
+    series = ensembles.SnapshotSeries.from_arrays([0, 1, 2], clouds).with_growth(Growth(later=0.5))
+    found = ensembles.estimate_growth(series, PRIOR)
+    assert len(found.warnings) == 1 and "movement that the prior lacks (a drift, more noise)" in repr(found)
+    assert found.series.growth == Growth("estimated_rate", later=0.5)
+    # Negative control: with the drift in the prior nothing is left to explain.
+    mended = ensembles.estimate_growth(series, ensembles.Brownian(diffusion=DIFFUSION, drift=1.5))
+    assert mended.evidence < 3 and not mended.warnings
 
 
 def test_it_is_a_function_of_the_seed_and_of_state():

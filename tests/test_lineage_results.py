@@ -78,6 +78,12 @@ def test_tables_and_pictures_of_a_labelled_study(tmp_path):
     assert "label 'seed' is seen at t = 0 only" in summary["notes"]
     assert any("shows a cause" in note for note in summary["notes"])
     page = (out / "report.html").read_text(encoding="utf-8")
+    labels = pd.read_csv(out / "labels.csv")
+    assert labels[["time", "label"]].to_numpy().tolist() == [
+        [0.0, "seed"], [1.0, "left"], [1.0, "right"], [2.0, "left"], [2.0, "right"]
+    ]  # fmt: skip
+    assert_allclose(labels["kept"][1:], 1.0)
+    assert "Labels: what was shed, and what was forced" in page and "<td>seed</td>" in page
     assert "flow.png" in page and "descendants_errors.csv" in page and "not observed lineages" in page
 
 

@@ -48,6 +48,10 @@ RATE = "estimated_rate"
 
 _SPREADS = (0.06, 0.12, 0.25, 0.5, 1.0)  # s times the mean duration: standard deviation of log-numbers over a gap
 _LENGTHS = (0.5, 1.0, 2.0)  # ℓ over the median distance of two particles
+_TOO_MUCH = (
+    "numbers that change by a factor e or more over a gap explain the snapshots best: movement that the prior lacks (a drift, "
+    "more noise) may have been taken for growth, so mend the prior or give rates before trusting these"
+)
 
 
 @dataclass(frozen=True, eq=False)
@@ -63,6 +67,7 @@ class GrowthEstimate:
     length : ℓ, in the prior's standard deviations over a mean gap.
     evidence : log-evidence over that of the given rates, nats.
     tried : (s, ℓ, evidence) of everything tried.
+    warnings : sentences, such as that the rates are too large to be growth alone.
     """
 
     series: SnapshotSeries
@@ -72,6 +77,7 @@ class GrowthEstimate:
     length: float
     evidence: float
     tried: tuple[tuple[float, float, float], ...]
+    warnings: tuple[str, ...] = ()
 
     def to_frame(self) -> pandas.DataFrame:
         """One row a particle: time, particle, rate, standard_error, and label where there are any."""
@@ -91,7 +97,7 @@ class GrowthEstimate:
         return (
             f"GrowthEstimate: rates {every.min():.3g} to {every.max():.3g}, standard errors about "
             f"{np.median(np.concatenate(self.errors)):.2g}; {self.evidence:.3g} nats of evidence for growth "
-            f"(s = {self.uncertainty:.3g}, ℓ = {self.length:.3g})"
+            f"(s = {self.uncertainty:.3g}, ℓ = {self.length:.3g})" + "".join(f"; {text}" for text in self.warnings)
         )
 
 
@@ -113,8 +119,8 @@ def estimate_growth(
 
     Parameters
     ----------
-    series : its growth, if any, gives r₀ and `later`, which stays: later particles then count by b_j p_j^θ,
-        θ = later²/(1 + later²), as the penalised bridge weighs them, so that contaminants pull little.
+    series : its growth, if any, gives r₀ and the freedom `later` of later weights, which the bridge keeps; the estimate takes
+        all later particles as offspring.
     prior : the dynamics between snapshots, without a box.
     uncertainty : s, standard deviation of what is not known of the rate, 1/time; by default that of largest evidence.
     length : ℓ over which the rate varies, in the prior's standard deviations over a mean gap; by default likewise.
@@ -150,7 +156,11 @@ def estimate_growth(
     spreads = [s / mean_gap for s in _SPREADS] if uncertainty is None else [float(uncertainty)]
     lengths = [share * problem.typical_distance for share in _LENGTHS] if length is None else [float(length)]
     tried = [fit for ell in lengths for fit in fits(problem, ell, spreads)]
-    return _estimate(series, problem, max(tried, key=lambda fit: fit.evidence), tried)
+    best = max(tried, key=lambda fit: fit.evidence)
+    found = _estimate(series, problem, best, tried)
+    if uncertainty is None and found.uncertainty == spreads[-1]:
+        found = replace(found, warnings=(_TOO_MUCH,))
+    return found
 
 
 def _estimate(series: SnapshotSeries, problem: Problem, best: Fit, tried: list[Fit]) -> GrowthEstimate:

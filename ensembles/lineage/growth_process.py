@@ -29,7 +29,7 @@ _ROWS = 4096
 
 @dataclass(frozen=True, eq=False)
 class _Piece:
-    """One gap: the particles used at either end, their weights, kernel k_ij = kernel_ij exp(log_scale_j), τ, n_k and θ.
+    """One gap: the particles used at either end, their weights, kernel k_ij = kernel_ij exp(log_scale_j), τ and n_k.
 
     `ahead` (draws, n, d) are places, in whitened coordinates, that particles go to; `given` is ½ τ r₀ at the later particles
     and at these places, and `log_a` holds it at the earlier particles.
@@ -45,15 +45,6 @@ class _Piece:
     given: tuple[np.ndarray, np.ndarray]
     duration: float
     count: float
-    power: float
-
-    def score(self, log_p: np.ndarray) -> tuple[float, np.ndarray]:
-        """(1/θ) log Σ_j b_j p_j^θ, at θ = 0 Σ_j b_j log p_j, and its derivatives by log p_j, ∝ b_j p_j^θ of sum 1."""
-        if self.power == 0.0:
-            return float(self.b @ log_p), self.b
-        terms = np.log(self.b) + self.power * log_p
-        total = float(log_sum_exp(terms))
-        return total / self.power, np.exp(terms - total)
 
 
 class Problem:
@@ -80,12 +71,8 @@ class Problem:
             half = [0.5 * duration * rates for rates in (self.given[k][i], self.given[k + 1][j])]
             known = np.concatenate([self.place(k, i), self.place(k + 1, j)])
             given = (half[1], _nearest(known, np.concatenate(half), ahead))
-            count, power = 1.0 / float(a @ a + b @ b), growth.later**2 / (1.0 + growth.later**2)
-            self.pieces.append(
-                _Piece(
-                    i, j, np.log(a) + half[0], b, np.exp(logs - top), top, ahead, given, float(duration), count, power
-                )
-            )
+            kernel, count = np.exp(logs - top), 1.0 / float(a @ a + b @ b)
+            self.pieces.append(_Piece(i, j, np.log(a) + half[0], b, kernel, top, ahead, given, float(duration), count))
         early = np.concatenate([self.place(k, piece.rows) for k, piece in enumerate(self.pieces)])
         self.centres = early[np.sort(choosing.choice(len(early), min(_CENTRES, len(early)), replace=False))]
 
@@ -162,26 +149,26 @@ class Process:
         """-L and its gradient."""
         value, gradient = 0.5 * float(c @ c) / spread**2, c / spread**2
         for piece, (start, end, ahead) in zip(self.problem.pieces, self.halves):
-            score, counted, w, density, expected = self._density(piece, start, end, ahead, c)
-            found = w * (piece.kernel @ (counted / density))
+            score, w, density, expected = self._density(piece, start, end, ahead, c)
+            found = w * (piece.kernel @ (piece.b / density))
             value -= piece.count * score
-            gradient = gradient - piece.count * (start.T @ found + end.T @ counted - expected)
+            gradient = gradient - piece.count * (start.T @ found + end.T @ piece.b - expected)
         return value, gradient
 
     def information(self, c: np.ndarray) -> np.ndarray:
         """H = Σ_k n_k Σ_j b_j s_j s_jᵀ of the scores s_j = ∂ log p_k(y_j) / ∂c."""
         total = np.zeros((c.size, c.size))
         for piece, (start, end, ahead) in zip(self.problem.pieces, self.halves):
-            _, counted, w, density, expected = self._density(piece, start, end, ahead, c)
+            _, w, density, expected = self._density(piece, start, end, ahead, c)
             scores = (piece.kernel.T @ (w[:, None] * start)) / density[:, None] + end - expected
-            total += piece.count * (scores * counted[:, None]).T @ scores
+            total += piece.count * (scores * piece.b[:, None]).T @ scores
         return total
 
     @staticmethod
     def _density(
         piece: _Piece, start: np.ndarray, end: np.ndarray, ahead: np.ndarray, c: np.ndarray
-    ) -> tuple[float, np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-        """Score of a gap, weights of the later particles, w, Σ_i w_i kernel_ij and ∂ log Z / ∂c; w of sum 1."""
+    ) -> tuple[float, np.ndarray, np.ndarray, np.ndarray]:
+        """Σ_j b_j log p_j, w, Σ_i w_i kernel_ij and ∂ log Z / ∂c; w of sum 1."""
         logs = piece.log_a + start @ c
         logs = logs - log_sum_exp(logs)
         w = np.exp(logs)
@@ -190,8 +177,8 @@ class Process:
         log_z = float(log_sum_exp(at_draws.ravel()))
         share = np.exp(at_draws - log_z)
         expected = share.sum(axis=0) @ start + np.tensordot(share, ahead, axes=2)
-        score, counted = piece.score(np.log(density) + piece.log_scale + piece.given[0] + end @ c - log_z)
-        return score, counted, w, density, expected
+        score = float(piece.b @ (np.log(density) + piece.log_scale + piece.given[0] + end @ c)) - log_z
+        return score, w, density, expected
 
 
 @dataclass(frozen=True, eq=False)
