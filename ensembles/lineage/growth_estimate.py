@@ -115,7 +115,8 @@ def estimate_growth(
     The most probable rates r₀ + δ, δ ~ GP(s² exp(-½|x - x'|²/ℓ²)), given that each later snapshot is a sample of what the
     earlier one becomes as it wanders by the prior and grows; the module's docstring has the equations. What the prior does
     not explain is taken for growth: with a wrong drift or too little noise the rates are wrong, and a rate that changes with
-    time at one place is averaged (estimate such gaps one by one, with `series.subset`).
+    time at one place is averaged (estimate such gaps one by one, with `series.subset`). Error bars of a bridge through the result
+    take the rates as they are; how sure these are, `errors` says.
 
     Parameters
     ----------
