@@ -58,7 +58,9 @@ _HOMES = {
     "save_cells": "lineage.annotate",
     "implied_growth": "lineage.growth",
     "kept_weights": "lineage.growth",
+    "label_summary": "lineage.growth",
     "masses": "lineage.growth",
+    "estimate_growth": "lineage.growth_estimate",
     "InputError": "checks",
     "ComputationError": "checks",
     "ConvergenceError": "schrodinger.solution",
@@ -99,7 +101,9 @@ if TYPE_CHECKING:
     from .lineage.features import feature_trends as feature_trends
     from .lineage.growth import implied_growth as implied_growth
     from .lineage.growth import kept_weights as kept_weights
+    from .lineage.growth import label_summary as label_summary
     from .lineage.growth import masses as masses
+    from .lineage.growth_estimate import estimate_growth as estimate_growth
     from .lineage.uncertainty import LineageProbabilities as LineageProbabilities
     from .lineage.uncertainty import lineage_errors as lineage_errors
     from .links.candidates import LinkOptions as LinkOptions

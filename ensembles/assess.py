@@ -30,7 +30,8 @@ Say = Callable[[str, float], None]
 class Assessment:
     """Everything that judges a study.
 
-    `noise` is None where the study asks for no levels; `prior_check` and `effective_sizes` are None in a box.
+    `noise` is None where the study asks for no levels; `prior_check` and `effective_sizes` are None in a box; `scaling` says
+    in words which coordinates all of it is in, None for the file's own.
     """
 
     hold_out: HoldOut
@@ -38,6 +39,7 @@ class Assessment:
     prior_check: PriorCheck | None
     effective_sizes: EffectiveSizes | None
     bands: Bands
+    scaling: str | None = None
 
     @property
     def sentences(self) -> list[str]:
@@ -50,6 +52,11 @@ class Assessment:
             *(() if self.prior_check is None else (*self.prior_check.verdict, *self.prior_check.dropped)),
             *(() if self.effective_sizes is None else self.effective_sizes.warnings),
             *self.bands.warnings,
+            *(
+                ()
+                if self.scaling is None
+                else (f"scores, moments and pictures are in scaled coordinates: {self.scaling}",)
+            ),
         ]
 
 
@@ -77,9 +84,15 @@ def assess_study(study: Study, *, seed: int, say: Say) -> Assessment:
     from .assessment.surprise import prior_check
     from .assessment.uncertainty import bootstrap
     from .bridges.fit import fit_bridge
+    from .lineage.growth_estimate import estimate_growth
 
     say("Reading the snapshots", 0.0)
-    series, prior, asked = study.read_series(), study.build_prior(), study.holdout
+    original, prior, asked = study.read_original(), study.build_prior(), study.holdout
+    scaling = study.fit_scaling(original)
+    series = scaling.scale(original)
+    if study.growth is not None and study.growth.estimate:
+        say("Estimating growth", 0.0)
+        series = estimate_growth(series, prior, uncertainty=study.growth.uncertainty or None, rng=study.seed).series
     checks.generator(seed)
     if study.noise.levels:
         level_grid(prior, study.noise.levels, "diffusion")  # refused before any work is done
@@ -99,7 +112,7 @@ def assess_study(study: Study, *, seed: int, say: Say) -> Assessment:
     times = np.sort(np.concatenate([series.times, *middles])).tolist()
     bands = bootstrap(bridge, Moments(times), repeats=asked.repeats, replicates=asked.replicates, rng=seed + 4)
     sizes = effective_sizes(bridge, rng=seed + 3) if prior.box is None else None
-    return Assessment(held, noise, surprise, sizes, bands)
+    return Assessment(held, noise, surprise, sizes, bands, None if scaling.kind == "none" else scaling.sentence)
 
 
 def held_out_table(found: HoldOut) -> pd.DataFrame:

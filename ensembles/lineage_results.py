@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from itertools import pairwise
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -13,7 +13,7 @@ from . import checks, writing
 if TYPE_CHECKING:
     from .bridges.bridge import Bridge
 
-__all__ = ["write_lineage"]
+__all__ = ["label_rows", "write_lineage"]
 
 _LARGEST_REPEATED = 4_000_000  # pairs of particles in all gaps up to which resampling is done unasked
 
@@ -42,10 +42,11 @@ def write_lineage(
     if series.growth is not None:
         growth = tables.growth_table(bridge)
         writing.write_table(folder / "growth.csv", growth)
-        writing.write_table(folder / "kept.csv", tables.kept_table(bridge))
         writing.write_table(folder / "masses.csv", masses(bridge))
         if not series.growth.exact:
             pictures += save_lineage_figures(folder, series, growth=growth)
+    if series.growth is not None or series.labels is not None:
+        writing.write_table(folder / "kept.csv", tables.kept_table(bridge))
     labelled = [k for k in range(len(series)) if series.labels is not None and (series.labels[k] != "").any()]
     if series.labels is not None and len(labelled) < 2:
         notes.append("labels are missing at all times but one: no lineage tables were written")
@@ -59,11 +60,24 @@ def write_lineage(
     return pictures, notes
 
 
+def label_rows(bridge: Bridge) -> list[dict[str, Any]]:
+    """Rows of `label_summary` for the page and summary.json, None for what is not finite; none without labels."""
+    from .lineage.growth import label_summary
+
+    if bridge.series.labels is None:
+        return []
+    rows = label_summary(bridge).to_dict(orient="records")
+    return [
+        {str(k): None if isinstance(v, float) and not np.isfinite(v) else v for k, v in row.items()} for row in rows
+    ]
+
+
 def _write_labels(
     bridge: Bridge, folder: Path, labelled: list[int], repeats: int, seed: int
 ) -> tuple[list[tuple[str, str]], list[str]]:
     from .lineage.fates import label_flows
     from .lineage.features import CAVEAT, early_features, feature_trends
+    from .lineage.growth import label_summary
     from .lineage.labels import label_notes
     from .lineage.uncertainty import LineageProbabilities, lineage_errors
     from .report import lineage_tables as tables
@@ -71,6 +85,7 @@ def _write_labels(
 
     series, notes = bridge.series, list(label_notes(bridge.series))
     first, last = labelled[0], labelled[-1]
+    writing.write_table(folder / "labels.csv", label_summary(bridge))
     writing.write_table(folder / "descendants.csv", tables.descendants_table(bridge, last))
     writing.write_table(folder / "ancestors.csv", tables.ancestors_table(bridge, first))
     flows = label_flows(bridge) if any(b - a == 1 for a, b in pairwise(labelled)) else None

@@ -5,19 +5,21 @@ from __future__ import annotations
 import importlib.metadata
 import platform
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from . import __version__, writing
-from .lineage_results import write_lineage
+from .lineage_results import label_rows, write_lineage
 from .overview import verdicts
 from .study import Study
 
 if TYPE_CHECKING:
     from .bridges.bridge import Bridge
     from .bridges.paths import Paths
+    from .report.coordinates import Coordinates
     from .schrodinger.solution import State
 
 __all__ = ["fit_study", "write_results"]
@@ -44,6 +46,7 @@ def fit_study(study: Study, *, say: Say) -> Bridge:
         If a gap does not reach the tolerance.
     """
     from .bridges.fit import SolverOptions, fit_bridge
+    from .lineage.growth_estimate import estimate_growth
     from .schrodinger.solve import SWEEP_LIMIT
 
     writing.require_table_format(f".{study.output.format}")
@@ -54,12 +57,19 @@ def fit_study(study: Study, *, say: Say) -> Bridge:
     def observe(gap: int, state: State) -> None:
         say(f"Gap {gap + 1} of {gaps}: sweep {state.sweep}, L1 error {state.error:.2g}", _SOLVING * gap / gaps)
 
-    return fit_bridge(
+    prior = study.build_prior()
+    notes: tuple[str, ...] = ()
+    if study.growth is not None and study.growth.estimate:
+        say("Estimating growth", 0.0)
+        found = estimate_growth(series, prior, uncertainty=study.growth.uncertainty or None, rng=study.seed)
+        series, notes = found.series, (f"growth was estimated from the snapshots under the prior: {found}",)
+    bridge = fit_bridge(
         series,
-        study.build_prior(),
+        prior,
         tolerance=study.solve.tolerance,
         options=SolverOptions(sweep_limit=study.solve.sweeps or SWEEP_LIMIT, observe=observe),
     )
+    return replace(bridge, notes=(*bridge.notes, *notes))
 
 
 def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say: Say) -> list[str]:
@@ -86,7 +96,8 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
     times = np.union1d(np.linspace(snapshots[0], snapshots[-1], study.output.path_times), snapshots)
     paths = bridge.sample_paths(study.output.paths, times, rng=path_stream)
     say("Writing tables", 0.75)
-    _write_tables(study, bridge, paths, folder, cloud_stream)
+    back = _way_back(study, folder)
+    _write_tables(study, bridge, paths, folder, cloud_stream, back)
     bridge.save(folder / "bridge.npz")
     say("Drawing pictures", 0.85)
     figures = save_figures(bridge, folder, paths=paths, rng=picture_stream)
@@ -95,9 +106,9 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
         bridge, folder, repeats=study.output.repeats, seed=seed, annotated=study.data_file.suffix == ".h5ad"
     )
     figures += lineages
-    summary = _summary(study, bridge, seed)
-    summary["notes"] += [*bridge.notes, *sentences]
-    _write_scaling(study, paths, folder, summary)
+    summary = _summary(study, bridge, seed, back)
+    summary["notes"] += [*bridge.notes, *sentences, *_scaling_notes(back)]
+    summary["labels"] = label_rows(bridge)
     write_page(folder, summary, figures)
     writing.write_text(folder / "study.toml", study.text)
     # Last: the folder is known as a complete output by this file.
@@ -105,38 +116,53 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
     return sorted(path.name for path in folder.iterdir())
 
 
-def _write_tables(study: Study, bridge: Bridge, paths: Paths, folder: Path, rng: np.random.Generator) -> None:
+def _write_tables(
+    study: Study, bridge: Bridge, paths: Paths, folder: Path, rng: np.random.Generator, back: Coordinates | None
+) -> None:
     from .report import tables
     from .report.wording import intermediate_times
 
     times = intermediate_times(bridge.series.times, study.output.intermediate)
     count = min(int(bridge.series.counts.max()), _LARGEST_CLOUD)
     clouds = [bridge.sample(t, count, rng) for t in times]
-    writing.write_table(folder / "links.csv", tables.links_table(bridge, study.output.links))
-    writing.write_table(folder / f"paths.{study.output.format}", tables.paths_table(bridge, paths))
-    writing.write_table(folder / "clouds.csv", tables.clouds_table(bridge, times, clouds))
-    writing.write_table(folder / "drift.csv", tables.drift_table(bridge, times, clouds))
-    writing.write_table(folder / "moments.csv", tables.moments_table(bridge, paths.times))
+    writing.write_table(folder / "links.csv", tables.links_table(bridge, study.output.links, back))
+    writing.write_table(folder / f"paths.{study.output.format}", tables.paths_table(bridge, paths, back))
+    writing.write_table(folder / "clouds.csv", tables.clouds_table(bridge, times, clouds, back))
+    writing.write_table(folder / "drift.csv", tables.drift_table(bridge, times, clouds, back))
+    writing.write_table(folder / "moments.csv", tables.moments_table(bridge, paths.times, back))
     writing.write_table(folder / "certificate.csv", tables.certificate_table(bridge))
 
 
-def _write_scaling(study: Study, paths: Paths, folder: Path, summary: dict[str, Any]) -> None:
-    """The map of the coordinates, and the paths in the original ones."""
+def _way_back(study: Study, folder: Path) -> Coordinates | None:
+    """Where tables are taken back to if the study scales, with the map written into `folder`."""
+    from .report.coordinates import Coordinates
+
     if study.scaling.kind == "none":
-        return
-    from dataclasses import replace
-
-    _, scaling = study.read_scaled()
+        return None
+    original = study.read_original()
+    scaling = study.fit_scaling(original)
     writing.write_json(folder / "scaling.json", scaling.to_mapping())
-    original = replace(paths, positions=scaling.restore(paths.positions), names=scaling.original_names)
-    writing.write_table(folder / f"original_paths.{study.output.format}", original.to_frame())
-    summary["notes"].append(
-        f"positions, the prior and all tables but original_paths are in scaled coordinates ({scaling.kind}, "
-        f"{100 * scaling.kept:.4g} % of the variance); scaling.json maps them back"
-    )
+    return Coordinates(original, scaling)
 
 
-def _summary(study: Study, bridge: Bridge, seed: int) -> dict[str, Any]:
+def _scaling_notes(back: Coordinates | None) -> list[str]:
+    """What a reader must know of coordinates that were scaled for the fit and taken back."""
+    if back is None or back.scaling is None:
+        return []
+    scaling = back.scaling
+    notes = [
+        f"the fit is in scaled coordinates: {scaling.sentence}; tables are in the file's own coordinates, the prior, the "
+        "pictures of positions and bridge.npz in the scaled ones; scaling.json has the map between them"
+    ]
+    if len(scaling.names) < len(scaling.original_names):
+        notes.append(
+            f"paths, clouds, moments and velocities are those in the plane of the {len(scaling.names)} component(s) kept; what "
+            f"the cells vary out of it, {100 * (1 - scaling.kept):.4g} % of the variance, is not in them"
+        )
+    return notes
+
+
+def _summary(study: Study, bridge: Bridge, seed: int, back: Coordinates | None) -> dict[str, Any]:
     from .report import tables
 
     return {
@@ -150,7 +176,7 @@ def _summary(study: Study, bridge: Bridge, seed: int) -> dict[str, Any]:
             "solve": study.solve.model_dump(),
             "output": study.output.model_dump(),
         },
-        **tables.summary(bridge),
+        **tables.summary(bridge, back),
         "noise": list(verdicts(bridge.series, bridge.prior)),
     }
 

@@ -80,10 +80,11 @@ class Study:
         InputError
             If the file or one of its columns is missing, or a value in it cannot be used.
         """
-        return self.read_scaled()[0]
+        original = self.read_original()
+        return self.fit_scaling(original).scale(original)
 
-    def read_scaled(self) -> tuple[SnapshotSeries, Scaling]:
-        """The snapshots as `read_series` gives them, and the way from the file's coordinates to theirs and back."""
+    def read_original(self) -> SnapshotSeries:
+        """The snapshots in the file's own coordinates."""
         features = list(self.data.features)
         rates = () if self.growth is None else (self.growth.rate, self.growth.birth, self.growth.death)
         features += [name for name in rates if isinstance(name, str) and name not in features]
@@ -97,11 +98,14 @@ class Study:
             units={"time": self.units.time, "length": self.units.length},
         )
         if self.growth is not None:
-            series = series.with_growth(Growth(**self.growth.model_dump()))
-        scaling = fit_scaling(
-            series, self.scaling.kind, components=self.scaling.components, snapshots=self._fitted_on(series)
+            series = series.with_growth(Growth(**self.growth.model_dump(exclude={"estimate"})))
+        return series
+
+    def fit_scaling(self, original: SnapshotSeries) -> Scaling:
+        """The way from the file's coordinates to those of the fit, and back."""
+        return fit_scaling(
+            original, self.scaling.kind, components=self.scaling.components, snapshots=self._fitted_on(original)
         )
-        return scaling.scale(series), scaling
 
     def _fitted_on(self, series: SnapshotSeries) -> list[int] | None:
         """Numbers of the snapshots at the times of scaling.fit."""

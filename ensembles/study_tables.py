@@ -88,13 +88,18 @@ class ScalingTable(_Table):
 
 
 class GrowthTable(_Table):
-    """[growth]: net rate, or birth and death (a feature's name or a number), and how well they are known; see `Growth`."""
+    """[growth]: net rate, or birth and death (a feature's name or a number), and how well they are known; see `Growth`.
+
+    With `estimate` the rates are those of `estimate_growth`, which starts from the given ones; an uncertainty above 0 is then
+    its standard deviation, where otherwise the evidence chooses.
+    """
 
     rate: str | float | None = None
     birth: str | float | None = None
     death: str | float | None = None
     uncertainty: float = Field(default=0.0, ge=0, allow_inf_nan=False)
     later: float = Field(default=0.0, ge=0, allow_inf_nan=False)
+    estimate: bool = False
 
 
 class HoldOutTable(_Table):

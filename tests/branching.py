@@ -97,15 +97,35 @@ def nearest_neighbours(series):
     return (series.labels[-1][rows] == "right").astype(float)
 
 
-def predictions(truth, uncertainty=2.0):
-    """Probability of going right with growth known, unknown (unbalanced) and ignored."""
+def bin_errors(predicted, truth, bins=5):
+    """Standard errors of `said` and of `seen` in each bin: that of means over its cells, and for `seen` also of its clones."""
+    rows = np.minimum((predicted * bins).astype(int), bins - 1)
+    found = np.full((bins, 2), np.nan)
+    said, seen, counted = reliability(predicted, truth, bins)
+    for k in np.flatnonzero(counted):
+        w = truth.expected[rows == k] / truth.expected[rows == k].sum()
+        for side, values, mean in ((0, predicted, said[k]), (1, truth.chance, seen[k])):
+            found[k, side] = np.sqrt(np.sum((w * (values[rows == k] - mean)) ** 2))
+    return found[:, 0], found[:, 1]
+
+
+def growth_cases(truth):
+    """The series with growth known, unknown (a smooth function of state; or free for each cell) and ignored."""
     prior = ensembles.Brownian(diffusion=DIFFUSION)
-    cases = {
-        "known": ensembles.Growth("net"),
-        "unknown": ensembles.Growth(uncertainty=uncertainty),
-        "ignored": None,
-    }
+    series = truth.series
     return {
-        name: ensembles.descendants(ensembles.fit_bridge(truth.series.with_growth(growth), prior))["right"].to_numpy()
-        for name, growth in cases.items()
+        "known": series.with_growth(ensembles.Growth("net")),
+        "unknown, smooth": ensembles.estimate_growth(series, prior).series,
+        "unknown, each cell ± 2": series.with_growth(ensembles.Growth(uncertainty=2.0)),
+        "unknown, each cell ± 8": series.with_growth(ensembles.Growth(uncertainty=8.0)),
+        "ignored": series,
+    }
+
+
+def predictions(truth):
+    """Probability of going right in each of `growth_cases`."""
+    prior = ensembles.Brownian(diffusion=DIFFUSION)
+    return {
+        name: ensembles.descendants(ensembles.fit_bridge(series, prior))["right"].to_numpy()
+        for name, series in growth_cases(truth).items()
     }

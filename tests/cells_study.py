@@ -56,24 +56,12 @@ def hsmm_bridges(components=COMPONENTS, share=NOISE_SHARE):
     return ensembles.fit_bridge(series, prior), ensembles.fit_bridge(series.with_growth(growth), prior)
 
 
-def contaminants(balanced, unbalanced):
-    """What the two bridges say of the later cells of each label: origin forced, weight kept, distance to the first cells."""
-    kept = ensembles.kept_weights(unbalanced)
-    rows = []
-    for k in range(1, len(balanced.series)):
-        here = kept[kept["time"] == balanced.series.times[k]]
-        cloud, before = balanced.series.clouds[k], balanced.series.clouds[k - 1]
-        nearest = cdist(cloud, before).min(axis=1)
-        for label in np.unique(balanced.series.labels[k]):
-            chosen = balanced.series.labels[k] == label
-            rows.append({
-                "hours": balanced.series.times[k],
-                "label": label,
-                "cells": int(chosen.sum()),
-                "weight kept": here["kept"].to_numpy()[chosen].mean(),
-                "nearest earlier cell": nearest[chosen].mean(),
-            })  # fmt: skip
-    return pd.DataFrame(rows)
+def estimated_bridge(components=COMPONENTS, share=NOISE_SHARE):
+    """The bridge with rates estimated as one smooth function of state, and what `estimate_growth` says of them."""
+    series = hsmm_series(components)
+    prior = hsmm_prior(series, share)
+    found = ensembles.estimate_growth(series.with_growth(ensembles.Growth(0.0, later=LATER)), prior)
+    return ensembles.fit_bridge(found.series, prior), found
 
 
 def weight_kept(bridge):
@@ -97,16 +85,23 @@ def hsmm(folder):
         trends = ensembles.feature_trends(bridge, ["log2tpm_MYH3", "log2tpm_CDK1"], times=[0, 24, 48, 72])
         print("Expected log2(1 + TPM) along the histories of each label at 72 h:")
         print(trends.pivot_table(index=["feature", "label"], columns="time", values="mean").round(2).to_string(), "\n")
-    print("== later cells: weight kept by the unbalanced bridge, and how far the nearest earlier cell is")
-    print(contaminants(balanced, unbalanced).round(3).to_string(index=False))
-    implied = ensembles.implied_growth(unbalanced)
-    print("== implied net growth (1/h, relative) by label and time")
-    print(implied.pivot_table(index="label", columns="time", values="implied").round(4).to_string())
+    smooth, found = estimated_bridge()
+    names = (
+        "every cell placed",
+        "growth of each cell unknown, later cells may be shed",
+        "growth smooth, later cells may be shed",
+    )
+    for name, bridge in zip(names, (balanced, unbalanced, smooth)):
+        print(f"== by label: {name}")
+        print(ensembles.label_summary(bridge).round(3).to_string(index=False))
+    print(found)
     print("== does it depend on the choices? weight kept by contaminants / by the others at 24, 48, 72 h")
+    shown = lambda bridge: "   ".join(f"{own:.2f} / {rest:.2f}" for own, rest in weight_kept(bridge))  # noqa: E731
     for components, share in OTHERS:
-        pairs = weight_kept(hsmm_bridges(components, share)[1])
-        shown = "   ".join(f"{own:.2f} / {rest:.2f}" for own, rest in pairs)
-        print(f"{components:3d} components, noise share {share:4.2f}:   {shown}")
+        print(
+            f"{components:3d} components, noise share {share:4.2f}:  each cell  {shown(hsmm_bridges(components, share)[1])}"
+        )
+        print(f"{'':32s}  smooth     {shown(estimated_bridge(components, share)[0])}")
     early = ensembles.early_features(balanced, GENES)
     print("== early genes and later labels")
     print(early.round(4).to_string(index=False))
@@ -122,15 +117,29 @@ def hsmm(folder):
 
 
 def calibration(_folder):
-    for seed in (0, 1):
-        truth = branching.simulate(2000, seed)
+    for count, seed in ((2000, 0), (2000, 1), (2000, 2), (500, 0), (500, 1), (500, 2), (500, 3)):
+        truth = branching.simulate(count, seed)
         nearest = branching.nearest_neighbours(truth.series)
         scores = {"true chance": truth.chance, "nearest neighbour": nearest} | branching.predictions(truth)
-        print(f"== branching cells, seed {seed}: {len(truth.series.clouds[0])} cells a snapshot")
+        print(f"== branching cells, seed {seed}: {count} cells a snapshot")
         for name, prediction in scores.items():
             said, seen, counted = branching.reliability(prediction, truth)
+            errors = branching.bin_errors(prediction, truth)
             off = ", ".join(f"{a:.2f}/{b:.2f}" if n else "-" for a, b, n in zip(said, seen, counted))
-            print(f"{name:18s} Brier {branching.brier(prediction, truth):.4f}   said/seen {off}")
+            print(
+                f"{name:23s} Brier {branching.brier(prediction, truth):.4f}   furthest off {np.nanmax(np.abs(said - seen)):.3f}"
+                f"   said/seen {off}   (standard errors at most {np.nanmax(errors[0]):.3f}/{np.nanmax(errors[1]):.3f})",
+                flush=True,
+            )
+        found = ensembles.estimate_growth(truth.series, ensembles.Brownian(diffusion=branching.DIFFUSION))
+        true = [branching.net_rate(cloud) for cloud in truth.series.clouds]
+        offset = np.concatenate(true[:-1]).mean()
+        z = np.concatenate([(r - t + offset) / e for r, t, e in zip(found.rates, true, found.errors)])
+        slope = np.polyfit(np.concatenate(true), np.concatenate(found.rates), 1)[0]
+        z = np.sqrt(np.mean(z**2))
+        print(
+            f"{found}\nslope against the true rates {slope:.2f}; root mean square of (estimate - true) / error {z:.2f}"
+        )
 
 
 def scale(_folder, count=20_000, dimension=30):

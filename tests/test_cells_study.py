@@ -50,3 +50,22 @@ def test_contaminants_are_shed_where_they_stand_apart(bridges):
     few = cells_study.weight_kept(cells_study.hsmm_bridges(5, 0.1)[1])
     assert few[0, 0] > 1.0
     assert few[2, 0] < few[2, 1]
+
+
+def test_the_summary_by_label_shows_what_is_shed_and_what_is_forced(bridges):
+    placed, shed = (ensembles.label_summary(bridge).set_index(["time", "label"]) for bridge in bridges)
+    late = placed.index.get_level_values("time") > 0
+    # Every cell placed: all keep their weight, and all are further from their ancestors than the prior goes by itself.
+    assert_allclose(placed.loc[late, "kept"], 1.0)
+    assert (placed.loc[late, "displacement"] > 1.3).all()
+    # Shed: the contaminants of every time keep less, and nothing has to come as far as before.
+    assert (shed.xs("contaminant", level="label")["kept"] < 0.8).all()
+    assert (shed.loc[late, "displacement"] < placed.loc[late, "displacement"]).all()
+
+
+def test_smooth_growth_says_that_it_stands_for_movement_here():
+    # Under a prior without drift, differentiation is taken for growth: the estimate says so, and sheds no contaminant at 24 h.
+    bridge, found = cells_study.estimated_bridge()
+    assert len(found.warnings) == 1
+    own, rest = cells_study.weight_kept(bridge).T
+    assert own[0] > 0.9 and (own[1:] < 0.8 * rest[1:]).all()

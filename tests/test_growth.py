@@ -99,6 +99,31 @@ def test_contaminants_are_shed():
     assert_allclose(error, certificate.marginal_error, rtol=1e-3, atol=1e-13)
 
 
+def test_displacement_and_the_summary_by_label():
+    bridge = ensembles.fit_bridge(growing(rate="net", uncertainty=0.3, later=0.5), PRIOR, tolerance=1e-9)
+    series, kept = bridge.series, ensembles.kept_weights(bridge)
+    pi = bridge.coupling(1).matrix()
+    squared = ((series.clouds[1][:, None] - series.clouds[2]) ** 2).sum(axis=2) / (2 * 0.4 * 1.5)
+    expected = np.sqrt((pi * squared).sum(axis=0) / pi.sum(axis=0) / 2)
+    assert_allclose(kept.loc[kept["gap"] == 1, "displacement"], expected, rtol=1e-6)
+    table = ensembles.label_summary(bridge).set_index(["time", "label"])
+    right = series.labels[1] == "right"
+    row = table.loc[(1.0, "right")]
+    assert row["particles"] == right.sum()
+    assert_allclose(row["kept"], bridge.gap_weights[0][1][right].sum() / series.weights[1][right].sum(), rtol=1e-9)
+    factor = bridge.gap_weights[1][0][right].sum() / series.weights[1][right].sum()
+    assert_allclose(row["implied_growth"], np.log(factor) / 1.5, rtol=1e-9)
+    assert np.isnan(table.loc[(0.0, "left"), "kept"]) and np.isnan(table.loc[(2.5, "left"), "implied_growth"])
+    # What the prior itself does has displacement 1: each later particle the draw of one earlier one, 6 standard errors.
+    rng = np.random.default_rng(0)
+    early = np.linspace(0, 800, 101)[:, None] * np.ones(2)
+    late = early + rng.normal(0, np.sqrt(2 * 0.4), early.shape)
+    moved = ensembles.fit_bridge(ensembles.SnapshotSeries.from_arrays([0, 1], [early, late]), PRIOR)
+    assert abs((ensembles.kept_weights(moved)["displacement"] ** 2).mean() - 1) < 6 / np.sqrt(101)
+    with pytest.raises(ensembles.InputError, match="a summary by label needs labels; the series has none"):
+        ensembles.label_summary(moved)
+
+
 def test_descendants_over_two_gaps_count_by_their_own_descendants():
     bridge = ensembles.fit_bridge(growing(rate="net"), PRIOR, tolerance=1e-11)
     first, second = bridge.coupling(0).matrix(), bridge.coupling(1).matrix()

@@ -12,7 +12,8 @@ from ensembles.assessment.entropy import neighbour_entropy
 from ensembles.assessment.floors import replicate_floor, snapshot_floor
 from ensembles.assessment.hold_out import HELD_OUT_SCORES, HoldOut
 from ensembles.assessment.pairwise import Comparison, multinomial_weights
-from ensembles.assessment.predictions import PREDICTIONS, neighbours_of
+from ensembles.assessment.predictions import PREDICTIONS, neighbours_of, population_bridge
+from ensembles.assessment.profile import Profile
 from ensembles.assessment.scores import SCORES, energy_distance, kernel_discrepancy
 
 PRIOR = ensembles.Brownian(diffusion=1.0)
@@ -227,3 +228,29 @@ def test_bad_input_is_refused():
         neighbour_entropy(np.zeros((30, 2)))
     with pytest.raises(InputError, match=r"needs distinct positions; particle 0 has 3 or more duplicates"):
         neighbour_entropy(np.repeat(np.arange(10.0), 4)[:, None])
+
+
+def test_growth_up_to_the_left_out_time_counts_and_later_growth_does_not():
+    # Two far groups of 200; one of them quadruples over a time of 1: at its middle it is twice the other.
+    rng = np.random.default_rng(0)
+    group = lambda n, at: rng.normal(at, 1.0, n)  # noqa: E731
+    clouds = [np.concatenate([group(n, -20), group(m, 20)]) for n, m in ((200, 200), (100, 200), (80, 320))]
+    rates = [np.where(cloud > 0, np.log(4.0), 0.0) for cloud in clouds]
+    series = ensembles.SnapshotSeries.from_arrays([0.0, 0.5, 1.0], clouds, features={"r": rates})
+    grown = series.with_growth(ensembles.Growth("r"))
+    prior = ensembles.Brownian(diffusion=0.1)
+    near = neighbours_of(grown, prior, 1)
+    drawn = near.bridge.sample(0.5, 20_000, rng=1)
+    # Six standard errors of a share of 20,000 draws.
+    assert abs((drawn > 0).mean() - 2 / 3) < 6 * np.sqrt(2 / 9 / 20_000)
+    x = np.linspace(-30, 30, 6001)
+    density = np.exp(near.bridge.log_density(0.5, x))
+    assert_allclose([density.sum() * 0.01, density[x > 0].sum() * 0.01], [1.0, 2 / 3], rtol=1e-5)
+    # Negative control: the histories that reach the last snapshot are 4/5 of the growing group.
+    histories = ensembles.fit_bridge(grown.subset([0, 2]), prior)
+    assert abs(np.exp(histories.log_density(0.5, x[x > 0])).sum() * 0.01 - 0.8) < 1e-5
+    # Without growth nothing is changed, and the profile of the noise sees the same population.
+    plain = ensembles.fit_bridge(series.subset([0, 2]), prior)
+    assert population_bridge(plain, 0.5) is plain
+    profile = Profile(grown, prior, {"diffusion": np.array([0.1])}, tolerance=1e-6)
+    assert_allclose(profile.log_densities((0,), 1), near.bridge.log_density(0.5, clouds[1]), rtol=1e-9)

@@ -78,6 +78,12 @@ def test_tables_and_pictures_of_a_labelled_study(tmp_path):
     assert "label 'seed' is seen at t = 0 only" in summary["notes"]
     assert any("shows a cause" in note for note in summary["notes"])
     page = (out / "report.html").read_text(encoding="utf-8")
+    labels = pd.read_csv(out / "labels.csv")
+    assert labels[["time", "label"]].to_numpy().tolist() == [
+        [0.0, "seed"], [1.0, "left"], [1.0, "right"], [2.0, "left"], [2.0, "right"]
+    ]  # fmt: skip
+    assert_allclose(labels["kept"][1:], 1.0)
+    assert "Labels: what was shed, and what was forced" in page and "<td>seed</td>" in page
     assert "flow.png" in page and "descendants_errors.csv" in page and "not observed lineages" in page
 
 
@@ -86,19 +92,14 @@ def test_growth_and_scaling(tmp_path):
     found, out = solved(tmp_path, more=more, diffusion=0.3, repeats=0)
     assert found.exit_code == 0, found.stderr
     written = {path.name for path in out.iterdir()}
-    assert written >= {"growth.csv", "kept.csv", "masses.csv", "growth.png", "scaling.json", "original_paths.csv"}
+    assert written >= {"growth.csv", "kept.csv", "masses.csv", "growth.png", "scaling.json"}
     assert "descendants_errors.csv" not in written
     growth = pd.read_csv(out / "growth.csv")
     assert {"given", "implied", "row"} <= set(growth) and len(growth) == 65
     scaling = ensembles.Scaling.from_mapping(json.loads((out / "scaling.json").read_text(encoding="utf-8")))
-    scaled, original = pd.read_csv(out / "paths.csv"), pd.read_csv(out / "original_paths.csv")
     frame = table()
     first = frame[frame["t"] < 1.5][["x", "y", "z"]]
     assert_allclose(scaling.centre, first.mean(), rtol=1e-10)
-    # A path begins at a particle: in the original coordinates it stands where the table has it.
-    begins = scaled[scaled["t"] == 0]
-    assert_allclose(original[original["time"] == 0][["x", "y", "z"]].to_numpy(),
-                    frame.iloc[begins["row"].astype(int)][["x", "y", "z"]].to_numpy(), rtol=1e-9)  # fmt: skip
     cautions = json.loads((out / "summary.json").read_text(encoding="utf-8"))["cautions"]
     assert any("birth and death are as the study" in text for text in cautions)
 

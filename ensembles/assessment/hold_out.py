@@ -128,6 +128,7 @@ def hold_out(
     Baselines: the earlier and the later snapshot as they are; straight lines along the zero-noise coupling; ends paired
     at random with the prior pinned between them; the prior alone from the earlier snapshot. The floor is what a second
     snapshot of the same population and size would score; of log_density it is minus the entropy of the observed cloud.
+    Where particles grow, the bridge's prediction counts their growth up to the left-out time; the baselines know of none.
 
     Parameters
     ----------

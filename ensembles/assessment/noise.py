@@ -222,7 +222,7 @@ def _energy_distances(profile: Profile, cells: list[Cell], repeats: int, rng: np
         a = np.full(_ENERGY_DRAWS, 1.0 / _ENERGY_DRAWS)
         resampled = multinomial_weights(a, repeats, resampling), multinomial_weights(b, repeats, resampling)
         for column, cell in enumerate(cells):
-            drawn = profile.bridge(cell, k).sample(float(series.times[k]), _ENERGY_DRAWS, rng=seed)
+            drawn = profile.population(cell, k).sample(float(series.times[k]), _ENERGY_DRAWS, rng=seed)
             out[:, column] += Comparison(drawn, y, a, b, *resampled, 1.0).energy_distance() / len(used)
     return out
 

@@ -11,7 +11,7 @@ To add a prediction, you must
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -25,7 +25,7 @@ from .transport import EXACT_LIMIT, optimal_plan
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
 
-__all__ = ["GAUSSIAN_ONLY", "PREDICTIONS", "Neighbours", "Prediction", "neighbours_of"]
+__all__ = ["GAUSSIAN_ONLY", "PREDICTIONS", "Neighbours", "Prediction", "neighbours_of", "population_bridge"]
 
 _PAIRS = 40_000  # pairs of ends that stand for the independent coupling in its density
 _TILE = 2_000_000
@@ -74,7 +74,24 @@ def neighbours_of(
 ) -> Neighbours:
     """Leave out snapshot k, 0 < k < K - 1, and bridge its neighbours."""
     bridge = fit_bridge(series.subset([k - 1, k + 1]), prior, tolerance=tolerance, start=start)
-    return Neighbours(bridge, float(series.times[k]))
+    return Neighbours(population_bridge(bridge, float(series.times[k])), float(series.times[k]))
+
+
+def population_bridge(bridge: Bridge, t: float) -> Bridge:
+    """A bridge over one gap whose density and draws at t are those of the population at t, where particles grow.
+
+    With growth the bridge itself holds the histories that reach the later snapshot, each weighted by all of the growth of its
+    first particle. A snapshot at t has seen the growth up to t only: start i counts exp(-r_i (T - t)) times, with its implied
+    rate r_i = log(a'_i / a_i) / (T - t₀), and the law from there on is the bridge's.
+    """
+    if bridge.gap_weights is None:
+        return bridge
+    (after, later), before = bridge.gap_weights[0], bridge.series.weights[0]
+    first, last = bridge.series.times
+    there = (before > 0) & (after > 0)
+    grown = np.divide(after, before, out=np.ones_like(after), where=there)
+    weights = np.where(there, after * grown ** -((last - t) / (last - first)), 0.0)
+    return replace(bridge, gap_weights=((weights / weights.sum(), later),))
 
 
 def _equal(count: int) -> np.ndarray:

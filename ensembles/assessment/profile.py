@@ -12,6 +12,7 @@ import numpy as np
 from ..bridges.bridge import Bridge
 from ..bridges.fit import fit_bridge
 from .parameters import with_parameters
+from .predictions import population_bridge
 
 if TYPE_CHECKING:
     from ..priors.base import LinearGaussianPrior
@@ -63,9 +64,13 @@ class Profile:
         self._last[k] = self._bridges[cell, k]
         return self._bridges[cell, k]
 
+    def population(self, cell: Cell, k: int) -> Bridge:
+        """That bridge as it foretells the population at the time of snapshot k; another one where particles grow."""
+        return population_bridge(self.bridge(cell, k), float(self.series.times[k]))
+
     def log_densities(self, cell: Cell, k: int) -> np.ndarray:
         """log ρ (n_k,) at the particles of snapshot k, which the bridge has not seen."""
-        return self.bridge(cell, k).log_density(float(self.series.times[k]), self.series.clouds[k])
+        return self.population(cell, k).log_density(float(self.series.times[k]), self.series.clouds[k])
 
     def score(self, cell: Cell) -> float:
         """Mean log-density of the held-out particles; each snapshot counts by its number of particles."""

@@ -6,12 +6,14 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .. import checks
+
 if TYPE_CHECKING:
     import pandas
 
     from ..bridges.bridge import Bridge
 
-__all__ = ["implied_growth", "kept_weights", "masses"]
+__all__ = ["implied_growth", "kept_weights", "label_summary", "masses"]
 
 
 def implied_growth(bridge: Bridge) -> pandas.DataFrame:
@@ -61,22 +63,28 @@ def implied_growth(bridge: Bridge) -> pandas.DataFrame:
 
 
 def kept_weights(bridge: Bridge) -> pandas.DataFrame:
-    """By which factor the bridge changed the weight of every later particle: near 0 it found no origin for it.
+    """By which factor the bridge changed the weight of every later particle, and how far the prior had to be stretched for it.
+
+    A factor near 0 says that the bridge found no origin for the particle. A particle that keeps its weight must come from
+    somewhere: its displacement (E[|y - F x - c|²_Q | y] / d)^½, over the ancestors x that the bridge gives it and in the prior's
+    standard deviations on an axis, is about 1 where its movement is one that the prior makes and larger where it was forced.
 
     Returns
     -------
     DataFrame
-        gap, time (of the later snapshot), particle, kept = b'_j / b_j (all 1 where the later weights are exact), and label
-        where there are any.
+        gap, time (of the later snapshot), particle, kept = b'_j / b_j (all 1 where the later weights are exact), displacement,
+        and label where there are any.
 
     Examples
     --------
     >>> import ensembles
     >>> series = ensembles.SnapshotSeries.from_arrays([0, 1], [[0.0, 1.0], [0.5, 1.5, 9.0]])
-    >>> series = series.with_growth(ensembles.Growth(uncertainty=1.0, later=1.0))
-    >>> bridge = ensembles.fit_bridge(series, ensembles.Brownian(diffusion=0.5))
+    >>> free = series.with_growth(ensembles.Growth(uncertainty=1.0, later=1.0))
+    >>> bridge = ensembles.fit_bridge(free, ensembles.Brownian(diffusion=0.5))
     >>> bool(ensembles.kept_weights(bridge)["kept"].iloc[2] < 1e-6)
     True
+    >>> ensembles.kept_weights(ensembles.fit_bridge(series, ensembles.Brownian(diffusion=0.5)))["displacement"].round(1).tolist()
+    [0.5, 1.3, 8.0]
     """
     import pandas
 
@@ -86,10 +94,23 @@ def kept_weights(bridge: Bridge) -> pandas.DataFrame:
         with np.errstate(invalid="ignore"):
             kept = gap.weights[1] / before
         columns = {"gap": k, "time": series.times[k + 1], "particle": np.arange(before.size), "kept": kept}
+        columns["displacement"] = _displacement(bridge, k)
         if series.labels is not None:
             columns["label"] = series.labels[k + 1]
         parts.append(pandas.DataFrame(columns))
     return pandas.concat(parts, ignore_index=True)
+
+
+def _displacement(bridge: Bridge, gap: int) -> np.ndarray:
+    """(E|v - u|² / d)^½ of every later particle (m,), from the means of u and |u|² over its ancestors."""
+    transition = bridge.gaps[gap].transition
+    u = transition.whiten_sources(bridge.series.clouds[gap])
+    v = transition.whiten_targets(bridge.series.clouds[gap + 1])
+    centre = u.mean(axis=0)
+    u, v = u - centre, v - centre
+    means = bridge.coupling(gap).expectation_of_sources(np.column_stack([u, (u**2).sum(axis=1)]))
+    squared = means[:, -1] - 2.0 * np.einsum("ij,ij->i", v, means[:, :-1]) + (v**2).sum(axis=1)
+    return np.sqrt(np.maximum(squared, 0.0) / u.shape[1])
 
 
 def masses(bridge: Bridge) -> pandas.DataFrame:
@@ -120,3 +141,43 @@ def masses(bridge: Bridge) -> pandas.DataFrame:
     return pandas.DataFrame(
         {"time": series.times, "measured": series.masses, "from_before": before, "from_first": first}
     )
+
+
+def label_summary(bridge: Bridge) -> pandas.DataFrame:
+    """By time and label: what the bridge did to the weights of its particles and how far it had to stretch the prior.
+
+    Returns
+    -------
+    DataFrame
+        time, label, particles; of the gap that ends there the mean of kept and the root mean square of displacement (see
+        `kept_weights`), NaN at the first time; of the gap that begins there the given and the implied net growth of the label as
+        a whole, 1/time relative to the population's (see `implied_growth`), NaN at the last. Particles of weight 0 are left out.
+    """
+    import pandas
+
+    series = bridge.series
+    if series.labels is None:
+        raise checks.InputError("a summary by label needs labels; the series has none; give labels=... when it is made")
+    kept, growth = kept_weights(bridge), implied_growth(bridge)
+    rows = []
+    for k, t in enumerate(series.times):
+        arrived, leaving = kept[kept["gap"] == k - 1], growth[growth["gap"] == k]
+        weights = series.weights[k]
+        for label in np.unique(series.labels[k]):
+            chosen = (series.labels[k] == label) & (weights > 0)
+            if not chosen.any():
+                continue
+            share = weights[chosen] / weights[chosen].sum()
+            row = {"time": float(t), "label": str(label), "particles": int(chosen.sum())}
+            row |= dict.fromkeys(("kept", "displacement", "given_growth", "implied_growth"), np.nan)
+            if k > 0:
+                row["kept"] = share @ arrived["kept"].to_numpy()[chosen]
+                row["displacement"] = np.sqrt(share @ arrived["displacement"].to_numpy()[chosen] ** 2)
+            if k < len(series) - 1:
+                duration = series.durations[k]
+                with np.errstate(divide="ignore"):
+                    for name in ("given", "implied"):
+                        numbers = share @ np.exp(leaving[name].to_numpy()[chosen] * duration)
+                        row[f"{name}_growth"] = round(float(np.log(numbers) / duration), 12) + 0.0  # no -0 for 0
+            rows.append(row)
+    return pandas.DataFrame(rows)

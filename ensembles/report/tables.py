@@ -2,7 +2,8 @@
 
 Times and positions keep the names that the user's own table gave them, so that the tables can be joined with it and an
 intermediate cloud can be read as a snapshot. Every derived column carries its unit in brackets, `mean_x [µm]`, where
-the units are known. Gaps are counted from 0, as `Bridge.coupling` does; rows are those of the user's table, from 0.
+the units are known. All can be taken back to the coordinates that a scaling was fitted to (`Coordinates`). Gaps are counted
+from 0, as `Bridge.coupling` does; rows are those of the user's table, from 0.
 """
 
 from __future__ import annotations
@@ -13,6 +14,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..snapshots.summary import describe_snapshots
+from .coordinates import Coordinates
 from .wording import CAUTIONS, GROWTH_CAUTION, bracketed, gap_sentence, speed_unit, square_unit, warning_sentences
 
 if TYPE_CHECKING:
@@ -46,12 +48,14 @@ def _frame(columns: Sequence[tuple[str, Any]]) -> pandas.DataFrame:
     return pandas.DataFrame(named)
 
 
-def _coordinates(bridge: Bridge, points: np.ndarray, prefix: str = "", unit: str = "") -> list[tuple[str, np.ndarray]]:
-    names = bridge.series.position_names
+def _coordinates(
+    shown: Coordinates, points: np.ndarray, prefix: str = "", unit: str = ""
+) -> list[tuple[str, np.ndarray]]:
+    names = shown.series.position_names
     return [(bracketed(f"{prefix}{name}", unit), points[:, axis]) for axis, name in enumerate(names)]
 
 
-def links_table(bridge: Bridge, count: int = 3) -> pandas.DataFrame:
+def links_table(bridge: Bridge, count: int = 3, back: Coordinates | None = None) -> pandas.DataFrame:
     """The `count` most probable targets of every particle, over all gaps; inferred under the prior, not observed.
 
     Returns
@@ -70,7 +74,7 @@ def links_table(bridge: Bridge, count: int = 3) -> pandas.DataFrame:
     """
     import pandas
 
-    series = bridge.series
+    series, shown = bridge.series, back or Coordinates(bridge.series)
     parts = []
     for gap in range(len(bridge.gaps)):
         links = bridge.coupling(gap).top_links(count)
@@ -83,8 +87,8 @@ def links_table(bridge: Bridge, count: int = 3) -> pandas.DataFrame:
             ("mass", links["mass"].to_numpy()),
             (f"source_{series.time_name}", np.full(len(links), series.times[gap])),
             (f"target_{series.time_name}", np.full(len(links), series.times[gap + 1])),
-            *_coordinates(bridge, series.clouds[gap][source], "source_"),
-            *_coordinates(bridge, series.clouds[gap + 1][target], "target_"),
+            *_coordinates(shown, shown.series.clouds[gap][source], "source_"),
+            *_coordinates(shown, shown.series.clouds[gap + 1][target], "target_"),
         ]
         if series.labels is not None:
             columns += [("source_label", series.labels[gap][source]), ("target_label", series.labels[gap + 1][target])]
@@ -92,15 +96,16 @@ def links_table(bridge: Bridge, count: int = 3) -> pandas.DataFrame:
     return pandas.concat(parts, ignore_index=True)
 
 
-def paths_table(bridge: Bridge, paths: Paths) -> pandas.DataFrame:
+def paths_table(bridge: Bridge, paths: Paths, back: Coordinates | None = None) -> pandas.DataFrame:
     """One row a path and time: the time, the position, the path, and the row of the particle it runs through.
 
     `row` is empty between snapshots.
     """
     import pandas
 
-    series = bridge.series
-    count, steps, dimension = paths.positions.shape
+    series, shown = bridge.series, back or Coordinates(bridge.series)
+    positions = shown.points(paths.positions)
+    count, steps, dimension = positions.shape
     rows = np.full((count, steps), -1, dtype=np.int64)
     for k, t in enumerate(series.times):
         at = np.flatnonzero(paths.times == t)
@@ -110,7 +115,7 @@ def paths_table(bridge: Bridge, paths: Paths) -> pandas.DataFrame:
     return _frame(
         [
             (series.time_name, np.tile(paths.times, count)),
-            *_coordinates(bridge, paths.positions.reshape(count * steps, dimension)),
+            *_coordinates(shown, positions.reshape(count * steps, dimension)),
             ("path", np.repeat(np.arange(count), steps)),
             ("row", pandas.Series(rows.ravel(), dtype="Int64").mask(rows.ravel() < 0)),
         ]
@@ -121,13 +126,18 @@ def _stacked(times: Sequence[float] | np.ndarray, clouds: Sequence[np.ndarray]) 
     return np.repeat(np.asarray(times, dtype=float), [len(cloud) for cloud in clouds]), np.concatenate(clouds)
 
 
-def clouds_table(bridge: Bridge, times: np.ndarray, clouds: Sequence[np.ndarray]) -> pandas.DataFrame:
+def clouds_table(
+    bridge: Bridge, times: np.ndarray, clouds: Sequence[np.ndarray], back: Coordinates | None = None
+) -> pandas.DataFrame:
     """One row a point of the clouds drawn at `times`: (T,) times and T arrays (n, d), as `Bridge.sample` gives them."""
+    shown = back or Coordinates(bridge.series)
     time, points = _stacked(times, clouds)
-    return _frame([(bridge.series.time_name, time), *_coordinates(bridge, points)])
+    return _frame([(bridge.series.time_name, time), *_coordinates(shown, shown.points(points))])
 
 
-def drift_table(bridge: Bridge, times: np.ndarray, clouds: Sequence[np.ndarray]) -> pandas.DataFrame:
+def drift_table(
+    bridge: Bridge, times: np.ndarray, clouds: Sequence[np.ndarray], back: Coordinates | None = None
+) -> pandas.DataFrame:
     """Velocities at points of the population: one row a point of `clouds` (T arrays (n, d)) at `times` (T,).
 
     Returns
@@ -140,28 +150,30 @@ def drift_table(bridge: Bridge, times: np.ndarray, clouds: Sequence[np.ndarray])
     current = [bridge.current_velocity(t, points) for t, points in zip(times, clouds)]
     time, points = _stacked(times, clouds)
     drift = np.concatenate(forward)
-    unit = speed_unit(bridge.series)
+    shown = back or Coordinates(bridge.series)
+    unit = speed_unit(shown.series)
     return _frame(
         [
             (bridge.series.time_name, time),
-            *_coordinates(bridge, points),
-            *_coordinates(bridge, drift - bridge.prior.drift(points), "added_drift_", unit),
-            *_coordinates(bridge, drift, "drift_", unit),
-            *_coordinates(bridge, np.concatenate(current), "current_velocity_", unit),
+            *_coordinates(shown, shown.points(points)),
+            *_coordinates(shown, shown.vectors(drift - bridge.prior.drift(points)), "added_drift_", unit),
+            *_coordinates(shown, shown.vectors(drift), "drift_", unit),
+            *_coordinates(shown, shown.vectors(np.concatenate(current)), "current_velocity_", unit),
         ]
     )
 
 
-def moments_table(bridge: Bridge, times: np.ndarray) -> pandas.DataFrame:
+def moments_table(bridge: Bridge, times: np.ndarray, back: Coordinates | None = None) -> pandas.DataFrame:
     """Exact mean and variance of every coordinate at `times`; up to ten coordinates also all covariances."""
     moments = [bridge.moments(t) for t in times]
-    means = np.array([mean for mean, _ in moments])
-    covariances = np.array([covariance for _, covariance in moments])
-    names, square = bridge.series.position_names, square_unit(bridge.series)
+    shown = back or Coordinates(bridge.series)
+    means = shown.points(np.array([mean for mean, _ in moments]))
+    covariances = shown.covariance(np.array([covariance for _, covariance in moments]))
+    names, square = shown.series.position_names, square_unit(shown.series)
     columns = [
         (bridge.series.time_name, np.asarray(times, dtype=float)),
-        *_coordinates(bridge, means, "mean_", bridge.series.length_unit),
-        *_coordinates(bridge, np.diagonal(covariances, axis1=1, axis2=2), "variance_", square),
+        *_coordinates(shown, means, "mean_", shown.series.length_unit),
+        *_coordinates(shown, np.diagonal(covariances, axis1=1, axis2=2), "variance_", square),
     ]
     if len(names) <= _LARGEST_COVARIANCE:
         for i, j in zip(*np.triu_indices(len(names), 1)):
@@ -203,9 +215,10 @@ def certificate_table(bridge: Bridge) -> pandas.DataFrame:
     return pandas.DataFrame(rows)
 
 
-def summary(bridge: Bridge) -> dict[str, Any]:
+def summary(bridge: Bridge, back: Coordinates | None = None) -> dict[str, Any]:
     """What was bridged, under which prior, how exactly, and what to beware of; plain values ready for JSON.
 
+    With `back` snapshots are described as they were measured, and "scaling" says in which coordinates the prior is.
     Numbers that are not finite, which JSON does not have, are None.
 
     Examples
@@ -215,7 +228,8 @@ def summary(bridge: Bridge) -> dict[str, Any]:
     >>> summary(ensembles.fit_bridge(series, ensembles.Brownian(diffusion=0.5)))["prior"]["parameters"]["diffusion"]
     0.5
     """
-    series = bridge.series
+    series = bridge.series if back is None else back.series
+    scaling = None if back is None or back.scaling is None else back.scaling.sentence
     found = {
         "converged": bridge.converged,
         "tolerance": bridge.tolerance,
@@ -233,6 +247,7 @@ def summary(bridge: Bridge) -> dict[str, Any]:
             }
             for snapshot in describe_snapshots(series)
         ],
+        "scaling": scaling,
         "prior": {"kind": bridge.prior.kind, "parameters": bridge.prior.parameters(), "text": repr(bridge.prior)},
         "gaps": [
             row | {"sentence": gap_sentence(bridge, gap)}
@@ -240,7 +255,9 @@ def summary(bridge: Bridge) -> dict[str, Any]:
         ],
         "warnings": warning_sentences(bridge),
         "notes": list(series.notes()),
-        "cautions": [GROWTH_CAUTION if series.growth and "birth and death" in text else text for text in CAUTIONS],
+        "cautions": [
+            GROWTH_CAUTION if bridge.series.growth and "birth and death" in text else text for text in CAUTIONS
+        ],
     }
     return _finite(found)
 

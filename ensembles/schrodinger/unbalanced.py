@@ -11,6 +11,16 @@ it is stationary, π 1 = a e^(-f/λ1) and πᵀ1 = b e^(-g/λ2), which gives the
 
 Sinkhorn's at λ = ∞ (Chizat, Peyré, Schmitzer, Vialard 2018; from memory, derived anew here). Primal minus dual value of any
 pair is λ1 KL(π 1|a e^(-f/λ1)) + λ2 KL(πᵀ1|b e^(-g/λ2)): by how much the pair misses the optimum, at most.
+
+Growth comes out too small. KL(π|R) holds KL(π 1|a) once itself, so even at λ1 = 0 a departure is paid for, and explained by
+movement where that is cheaper. For Gaussian clouds a = N(0, σ²) and kernel variance q, with κ = σ²/(σ² + q) and b what the tilt
+a exp(γ x) makes, linear potentials solve the problem with λ2 = ∞ exactly, and the implied growth has the slope
+
+    γ κ / (1 + λ1 (1 - κ)),
+
+that is γ for clouds wide against the kernel only; modes of any shape, with their own κ, fare alike to first order. The penalty
+counts for every particle, as for rates that are independent between them; a rate that is one unknown function of state is
+estimated in lineage/growth_estimate.py.
 """
 
 from __future__ import annotations

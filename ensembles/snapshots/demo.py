@@ -75,12 +75,13 @@ features = ["marker_sheath", "marker_core"]   # further columns to carry along
 time = "d"
 length = ""                       # components have no unit
 
-# [scaling]                       # of the coordinates before the fit; the prior is then in scaled units
+# [scaling]                       # of the coordinates before the fit; the prior is then in scaled units, tables are not
 # kind = "pca"                    # or "none", "standardise", "whiten"
 # components = 5
 # [growth]                        # birth and death; left out: none
 # rate = 0.0                      # net growth rate per day: a number, or the name of a feature column
 # uncertainty = 0.2               # how far a cell's rate may be from that; 0 takes it as exact
+# estimate = true                 # find the rates, as one smooth function of state, from the snapshots themselves
 # later = 0.5                     # by how much a later cell's weight may change (logarithm); sheds what has no origin
 
 [prior]                           # what a cell does when nothing else is known

@@ -28,6 +28,9 @@ class Growth:
     depart from that: a departure of the log-weight by s τ costs half a nat, the penalty λ KL with λ = 1 / (s τ)². The later
     weights may depart likewise by a factor exp(± later), so that particles with no origin (contaminants) are shed.
 
+    The penalty counts for every particle, as for rates that differ from one to the next; growth that is systematic and not
+    known comes out too small under it (`schrodinger/unbalanced.py` has the factor): estimate that with `estimate_growth`.
+
     Parameters
     ----------
     rate : net growth rate, 1/time: the name of a feature of the series, or one number for all.

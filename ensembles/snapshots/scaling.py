@@ -15,6 +15,9 @@ from .series import SnapshotSeries
 
 __all__ = ["KINDS", "Scaling", "fit_scaling"]
 
+DEVIATIONS = "s.d."
+"""Unit of coordinates in standard deviations, in tables and on axes."""
+
 KINDS = ("none", "standardise", "pca", "whiten")
 
 
@@ -48,15 +51,27 @@ class Scaling:
         return np.asarray(points, dtype=float) @ self.backward + self.centre
 
     def scale(self, series: SnapshotSeries) -> SnapshotSeries:
-        """The same series in scaled coordinates, which have no unit unless they are the original ones."""
+        """The same series in scaled coordinates, in the original unit after "pca" and in standard deviations otherwise."""
         if self.kind == "none":
             return series
         return replace(
             series,
             clouds=tuple(np.ascontiguousarray(self.apply(cloud)) for cloud in series.clouds),
             position_names=self.names,
-            length_unit=series.length_unit if self.kind == "pca" else "",
+            length_unit=series.length_unit if self.kind == "pca" else DEVIATIONS,
         )
+
+    @property
+    def sentence(self) -> str:
+        """What was done to the coordinates, in words."""
+        unit = "the unit of the coordinates" if self.kind == "pca" else "standard deviations (s.d.)"
+        what = {
+            "none": "as they are",
+            "standardise": "each coordinate to mean 0 and variance 1",
+            "pca": f"{len(self.names)} principal component(s)",
+            "whiten": f"{len(self.names)} principal component(s) of variance 1",
+        }[self.kind]
+        return what if self.kind == "none" else f"{what}, in {unit}, {100 * self.kept:.4g} % of the variance"
 
     def to_mapping(self) -> dict[str, Any]:
         """Plain values by name, for JSON."""
@@ -131,7 +146,8 @@ def fit_scaling(
             name = original[int(np.argmin(spread > 0))]
             raise InputError(f"a coordinate does not vary; {name!r} is {points[0, int(np.argmin(spread > 0))]:g} throughout; "
                              "leave it out")  # fmt: skip
-        return Scaling(kind, centre, np.diag(1.0 / spread), np.diag(spread), original, original, 1.0)
+        names = tuple(f"standardised_{name}" for name in original)
+        return Scaling(kind, centre, np.diag(1.0 / spread), np.diag(spread), original, names, 1.0)
     return _principal(points, kind, components, original)
 
 
