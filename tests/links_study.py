@@ -35,6 +35,7 @@ class Draw:
     ----------
     true, estimated, error : D in Å²/ps from the labels (mean squared displacement), from unlabelled frames, and its
         standard error; identified is false where the frames do not tell D.
+    together : correlation of neighbours' displacements, measured without labels, that the links allow for.
     right : share of right links by method: most probable (least squares), most expected, nearest neighbour.
     probability, linked : of pooled links: what was said, and whether it is so, for links, propagation, coupling.
     log_score : mean log probability of the true link by method.
@@ -46,6 +47,7 @@ class Draw:
     estimated: float
     error: float
     identified: bool
+    together: float
     entropy: float
     right: dict[str, float]
     pooled: dict[str, tuple[np.ndarray, np.ndarray]]
@@ -82,13 +84,17 @@ def study(count: int, steps: int, seed: int, *, wrapped: bool = False, independe
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", RuntimeWarning)
         estimate = ensembles.estimate_prior(series, "brownian", box=box)
-        links = ensembles.link_particles(series, estimate.prior)[0]
+        first_look = ensembles.link_particles(series, estimate.prior)[0]
+        found = ensembles.neighbour_correlation(first_look, series, estimate.prior)
+        # Only where it stands out from its error: else particles are taken to move independently.
+        together = max(found.value, 0.0) if found.value > 2.0 * found.standard_error else 0.0
+        links = ensembles.link_particles(series, estimate.prior, options=ensembles.LinkOptions(correlation=together))[0]
     coupling = ensembles.fit_bridge(series, estimate.prior, tolerance=1e-4).coupling(0).matrix() * count
-    return _compare(links, coupling, series, own, box, (gap, true, estimate))
+    return _compare(links, coupling, series, own, box, (gap, true, estimate, together))
 
 
 def _compare(links, coupling, series, own, box, known) -> Draw:
-    gap, true, estimate = known
+    gap, true, estimate, together = known
     count = own.size
     rows = np.arange(count)
     said = {"links": links.matrix(), "coupling": coupling}
@@ -112,7 +118,7 @@ def _compare(links, coupling, series, own, box, known) -> Draw:
         pooled[name] = (table[shown], (own[:, None] == np.arange(count))[shown])
     return Draw(
         count, gap, true, float(estimate.prior.diffusion), estimate.standard_errors["diffusion"], estimate.identified,
-        float(links.entropy.mean()), right, pooled, scores,
+        together, float(links.entropy.mean()), right, pooled, scores,
     )  # fmt: skip
 
 
@@ -130,7 +136,7 @@ def reliability(draws: list[Draw], name: str, bins: int = 10) -> np.ndarray:
 def estimate_table(groups: dict[str, list[Draw]]) -> str:
     """Estimated against true diffusion coefficients, and accuracy, one line a group of draws."""
     lines = [
-        f"{'group':<22}{'D true':>9}{'D est.':>9}{'median |ratio-1|':>18}{'within 95 %':>13}{'told':>6}{'entropy/log n':>15}"
+        f"{'group':<22}{'D true':>9}{'D est.':>9}{'median |ratio-1|':>18}{'within 95 %':>13}{'told':>6}{'together':>10}{'entropy/log n':>15}"
         f"{'most probable':>15}{'most expected':>15}{'nearest':>9}{'log score links':>17}{'propag.':>9}{'n pi':>9}{'nearest':>9}"
     ]
     for name, draws in groups.items():
@@ -141,7 +147,7 @@ def estimate_table(groups: dict[str, list[Draw]]) -> str:
         lines.append(
             f"{name:<22}{np.median([d.true for d in draws]):>9.4f}{np.median([d.estimated for d in draws]):>9.4f}"
             f"{100 * np.median(np.abs(ratio - 1)):>16.1f} %{np.mean(np.abs(np.log(ratio)) < spread):>13.0%}"
-            f"{sum(d.identified for d in draws):>3}/{len(draws):<2}"
+            f"{sum(d.identified for d in draws):>3}/{len(draws):<2}{np.mean([d.together for d in draws]):>10.3f}"
             f"{np.mean([d.entropy / np.log(d.count) for d in draws]):>15.2f}"
             f"{right['most probable']:>15.3f}{right['most expected']:>15.3f}{right['nearest']:>9.3f}"
             f"{scores['links']:>17.3f}{scores['propagation']:>9.3f}{scores['coupling']:>9.3f}{scores['nearest']:>9.3f}"

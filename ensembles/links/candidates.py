@@ -35,18 +35,25 @@ class LinkOptions:
     damping : share of the old message kept.
     iteration_limit : rounds of messages.
     cluster : particles of each frame in the exact sums around every particle, at most 12; 0 for belief propagation only.
+    correlation : c of the displacements of neighbours, in [0, 1), as `neighbour_correlation` measures it. Links are then
+        told apart by (1 - c) of the prior's variance; the log evidence is that of this law, not to be compared between c.
     """
 
     tolerance: float = 2e-4
     damping: float = 0.0
     iteration_limit: int = 20_000
     cluster: int = 10
+    correlation: float = 0.0
 
     def __post_init__(self) -> None:
         checks.positive_number(self.tolerance, "tolerance", "give the error allowed, such as 2e-4")
         checks.whole_number(self.iteration_limit, "iteration_limit")
         if not 0.0 <= self.damping < 1.0:
             raise checks.InputError(f"damping must lie in [0, 1); it is {self.damping!r}; use 0 or 0.5")
+        if not 0.0 <= self.correlation < 1.0:
+            raise checks.InputError(
+                f"correlation must lie in [0, 1); it is {self.correlation!r}; use 0 for particles that move independently"
+            )
         if checks.whole_number(self.cluster, "cluster", 0) > 12:
             raise checks.InputError(f"cluster must be at most 12; it is {self.cluster}; the cost doubles with each one")
 

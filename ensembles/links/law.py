@@ -67,11 +67,20 @@ class LinkLaw:
 
 
 def link_law(
-    prior: LinearGaussianPrior, duration: float, clouds: tuple[np.ndarray, np.ndarray], localisation: float = 0.0
+    prior: LinearGaussianPrior,
+    duration: float,
+    clouds: tuple[np.ndarray, np.ndarray],
+    localisation: float = 0.0,
+    correlation: float = 0.0,
 ) -> LinkLaw:
-    """The law of links over one gap; a localisation error s of each coordinate adds s² (F Fᵀ + I) to the variance."""
+    """The law of links over one gap; a localisation error s of each coordinate adds s² (F Fᵀ + I) to the variance.
+
+    Of neighbours whose displacements are correlated by c, (1 - c) of the variance tells links apart; see correlation.py.
+    """
     dimension = clouds[0].shape[1]
     step = prior.transition(duration, dimension)
+    if correlation > 0.0:
+        step = Transition(step.matrix, step.shift, (1.0 - correlation) * step.covariance)
     if localisation > 0.0:
         noise = localisation**2 * (step.matrix @ step.matrix.T + np.eye(dimension))
         step = Transition(step.matrix, step.shift, step.covariance + noise)

@@ -87,7 +87,7 @@ def link_particles(
         clouds = (series.clouds[k], series.clouds[k + 1])
         duration = float(series.times[k + 1] - series.times[k])
         loners = loner_weights(series, k, prior, detection, birth_density)
-        law = link_law(prior, duration, clouds, localisation)
+        law = link_law(prior, duration, clouds, localisation, options.correlation)
         posterior, left_out = linked_posterior(law, loners.log_alone, options)
         links = _assemble(k, posterior, left_out, loners, options)
         _warn(links, series)
