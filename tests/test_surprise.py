@@ -6,6 +6,7 @@ from numpy.testing import assert_allclose
 
 import ensembles
 from ensembles import InputError
+from ensembles.assessment.surprise import _Case
 
 PRIOR = ensembles.Brownian(diffusion=0.5)
 
@@ -123,6 +124,31 @@ def test_the_verdict_and_the_table():
     assert_allclose(frame["excess"].item(), gap.entropy.value - gap.simulated_entropy.mean())
     rerun = ensembles.prior_check(pair(shift=2.0, n=60), PRIOR, simulations=99, workers=2)
     assert_allclose(rerun.gaps[0].simulated_entropy, gap.simulated_entropy, rtol=0)
+
+
+def test_simulated_clouds_have_the_spread_of_the_population_and_the_weights_of_the_data():
+    rng = np.random.default_rng(8)
+    weights = [rng.gamma(0.5, size=6), np.r_[0.0, rng.gamma(0.5, size=8)]]
+    series = ensembles.SnapshotSeries.from_arrays([0, 1], [rng.normal(size=(6, 1)), rng.normal(size=(9, 1))], weights)
+    case = _Case(series, PRIOR, 0, same_particles=False)
+    draws = [case.simulate(stream) for stream in rng.spawn(6000)]
+    start, a = series.clouds[0][:, 0], series.weights[0]
+    centre = a @ start
+    unbiased = a @ (start - centre) ** 2 / (1 - a @ a)
+    for first, given, last in draws:
+        assert_allclose(given, a, rtol=0)
+        assert first.shape == (6, 1)
+        assert last.shape == (9, 1)
+    firsts, lasts = (np.array([draw[i][..., 0] for draw in draws]) for i in (0, 2))
+    # Variance of a position: that of the population, and 2 · 0.5 · 1 more after the step; 36,000 and 54,000 positions,
+    # whose variance is known to (κ - 1)^½ of their number^-½, with a kurtosis κ of no more than 6 atoms can have.
+    for positions, expected in ((firsts, unbiased), (lasts, unbiased + 1.0)):
+        assert_allclose(positions.var(), expected, rtol=6 * np.sqrt(5 / positions.size))
+    # A weighted mean scatters as its weights say, not as n equal ones would.
+    assert_allclose((firsts @ a).var(), unbiased * (a @ a), rtol=6 * np.sqrt(3 / 6000))
+    assert abs(a @ a * 6 - 1) > 0.3
+    alone = ensembles.SnapshotSeries.from_arrays([0, 1], [[2.0], [1.0, 3.0]])
+    assert_allclose(_Case(alone, PRIOR, 0, same_particles=False).simulate(rng)[0], [[2.0]])
 
 
 def test_the_same_particles_are_simulated_one_by_one():

@@ -119,10 +119,11 @@ def prior_check(
 ) -> PriorCheck:
     """Compare every snapshot with what the prior alone makes of the snapshot before it.
 
-    A simulation draws a new start cloud from the observed one and a new end cloud of the observed size from the prior,
-    and computes the same statistics as for the data: the energy distance between the end cloud and what the prior makes
-    of the start cloud, and the relative entropy of the bridge between the two. The p-value is (1 + number of simulations
-    at least as far) / (1 + simulations).
+    A simulation draws two clouds from the population behind the start cloud, independently and of the observed sizes and
+    weights, moves the second by the prior, and computes the same statistics as for the data: the energy distance between
+    the end cloud and what the prior makes of the start cloud, and the relative entropy of the bridge between the two. For
+    the population stands the start cloud, widened about its mean to the unbiased variance (a factor (1 - 1/n)^(-1/2) of
+    n equal particles). The p-value is (1 + number of simulations at least as far) / (1 + simulations).
 
     Parameters
     ----------
@@ -179,6 +180,7 @@ class _Case:
             )
         self.transition: Transition = prior.transition(self.times[1] - self.times[0], series.dimension)
         self.ends = int(np.count_nonzero(self.weights[1]))
+        self.population = _widened(self.clouds[0], self.weights[0])
 
     def predicted(self, start: np.ndarray, weights: np.ndarray, rng: np.random.Generator) -> np.ndarray:
         """A cloud that stands for what the prior makes of a start cloud."""
@@ -187,13 +189,16 @@ class _Case:
         return self.transition.sample(start[rows], rng)
 
     def simulate(self, rng: np.random.Generator) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """A start cloud with its weights, and an end cloud, as the prior would have produced them."""
+        """A start cloud and an end cloud as the prior would have produced them; both have the weights of the observed ones.
+
+        Independent samples come from the population behind the start cloud, for which `population` stands.
+        """
         start, weights = self.clouds[0], self.weights[0]
         if self.same:
             return start, weights, self.transition.sample(start, rng)
-        ends = self.transition.sample(start[rng.choice(len(start), self.ends, p=weights)], rng)
-        count = int(np.count_nonzero(weights))
-        return start[rng.choice(len(start), count, p=weights)], np.full(count, 1.0 / count), ends
+        sources = self.population[rng.choice(len(start), len(self.clouds[1]), p=weights)]
+        drawn = self.population[rng.choice(len(start), len(start), p=weights)]
+        return drawn, weights, self.transition.sample(sources, rng)
 
     def energy(
         self, start: np.ndarray, weights: np.ndarray, end: np.ndarray, end_weights: np.ndarray, rng: np.random.Generator
@@ -226,13 +231,11 @@ def _judge(
             except checks.InputError as cause:
                 reason = str(cause)
     observed = case.energy(start, case.weights[0], end, case.weights[1], observing)
-    equal = np.full(case.ends, 1.0 / case.ends)
 
     def once(stream: np.random.Generator) -> tuple[float, float]:
         first, weights, last = case.simulate(stream)
-        share = case.weights[1] if case.same else equal
-        distance = case.energy(first, weights, last, share, stream)
-        return distance, case.entropy(first, weights, last, share).value if entropy is not None else float("nan")
+        clouds = first, weights, last, case.weights[1]
+        return case.energy(*clouds, stream), case.entropy(*clouds).value if entropy is not None else float("nan")
 
     simulated = np.array(run_repeats(once, simulations, simulating, workers))
     return (
@@ -249,6 +252,19 @@ def _judge(
         ),
         reason,
     )
+
+
+def _widened(cloud: np.ndarray, weights: np.ndarray) -> np.ndarray:
+    """The cloud about its mean x̄ times (1 - Σ a_i²)^(-1/2): its variance is then the unbiased estimate of the population's.
+
+    The distances that the prior itself gives are second moments to leading order, so that clouds drawn from the atoms as
+    they stand would lie too close to one another by a share 1/n.
+    """
+    missing = 1.0 - float(np.sum(weights**2))
+    if missing <= 0.0:
+        return cloud
+    mean = weights @ cloud
+    return mean + (cloud - mean) / np.sqrt(missing)
 
 
 def _p_value(observed: float, simulated: np.ndarray) -> float:
