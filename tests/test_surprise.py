@@ -161,6 +161,23 @@ def test_the_same_particles_are_simulated_one_by_one():
         ensembles.prior_check(series, PRIOR, same_particles=True)
 
 
+def test_growth_moves_the_predicted_cloud_and_excludes_the_same_particles():
+    # Two starts at ±3, of which the right one divides: at the end 95 % are there. Without the growth that is a surprise.
+    rng = np.random.default_rng(9)
+    start = np.repeat([-3.0, 3.0], 50) + 0.1 * rng.normal(size=100)
+    end = np.repeat([-3.0, 3.0], [5, 95]) + rng.normal(size=100)
+    rates = [np.where(start > 0, np.log(19.0), 0.0), np.zeros(100)]
+    series = ensembles.SnapshotSeries.from_arrays([0, 1], [start, end], features={"rate": rates})
+    growing = series.with_growth(ensembles.Growth("rate"))
+    ignoring, heeding = (
+        ensembles.prior_check(s, PRIOR, simulations=39, with_entropy=False).gaps[0] for s in (series, growing)
+    )
+    assert ignoring.energy_p_value == 1 / 40
+    assert heeding.energy_p_value > 0.05
+    with pytest.raises(InputError, match=r"same_particles means that none divides or dies; the series has Growth"):
+        ensembles.prior_check(growing, PRIOR, same_particles=True)
+
+
 def test_what_cannot_be_computed_is_named():
     few = ensembles.SnapshotSeries.from_arrays([0, 1], [[0.0, 1.0], [1.0, 2.0]])
     found = ensembles.prior_check(few, PRIOR, simulations=19)
@@ -212,6 +229,7 @@ def test_walls_and_smooth_ends_are_refused_where_they_are_not_served():
         ensembles.effective_sizes(fitted)
     found = ensembles.hold_out(series, boxed, repeats=5)
     assert "the predictions independent, prior were dropped" in found.dropped[0]
+    assert sum("predictions" in sentence for sentence in found.dropped) == 1
     assert set(found.to_frame()["prediction"]) == {"bridge", "earlier", "later", "straight", "floor"}
     smooth = ensembles.fit_bridge(series, ensembles.Brownian(0.1), ends="mixture", components=1)
     with pytest.raises(InputError, match=r"belong to atoms; the bridge has mixture ends"):

@@ -9,6 +9,7 @@ import numpy as np
 
 from .. import checks
 from ..bridges.fit import fit_bridge
+from ..bridges.growing import growing_weights
 from ..priors.base import LinearGaussianPrior, Transition, require_prior
 from .relative_entropy import GapEntropy, atoms_relative_entropy, refuse_box
 from .resampled_weights import run_repeats
@@ -127,7 +128,7 @@ def prior_check(
 
     Parameters
     ----------
-    series : SnapshotSeries of K ≥ 2 snapshots.
+    series : SnapshotSeries of K ≥ 2 snapshots; its growth, if any, changes the weights of the start clouds.
     prior : the dynamics to be judged, with its drift.
     simulations : at least 19; the smallest p-value is 1 / (1 + simulations).
     same_particles : whether the end cloud holds the very particles of the start cloud (their labels lost); each start
@@ -139,7 +140,7 @@ def prior_check(
     Raises
     ------
     InputError
-        If there are too few simulations, or `same_particles` with snapshots of different sizes.
+        If there are too few simulations, or `same_particles` with snapshots of different sizes or with growth.
 
     Examples
     --------
@@ -172,7 +173,13 @@ class _Case:
         self.times = float(series.times[k]), float(series.times[k + 1])
         self.prior, self.same = prior, same_particles
         self.pair = series.subset([k, k + 1])
-        self.clouds, self.weights = self.pair.clouds, self.pair.weights
+        # Growth changes which starts the end cloud came from: the weights are those of a bridge over the gap.
+        self.clouds, self.weights = self.pair.clouds, growing_weights(self.pair, 0)
+        if same_particles and series.growth is not None:
+            raise checks.InputError(
+                f"same_particles means that none divides or dies; the series has {series.growth!r}; use "
+                "same_particles=False, or series.with_growth(None)"
+            )
         if same_particles and len(self.clouds[0]) != len(self.clouds[1]):
             raise checks.InputError(
                 f"same_particles needs equal numbers; the snapshots at {self.times[0]:g} and {self.times[1]:g} hold "
