@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
-from calibration_repeats import repeat
+from calibration_repeats import print_last, repeat
 from scipy import stats
 
 import ensembles
@@ -67,7 +67,7 @@ def uniformity_table(cases: Sequence[tuple[Trial, int]], *, workers: int = 2, se
                 "mean p": p.mean(), "± (1 s.e.)": np.sqrt(1 / 12 / repeats),
                 "share below 0.05": (p < 0.05).mean(), "share below 0.1": (p < 0.1).mean(),
             })  # fmt: skip
-            print(pd.DataFrame(rows[-1:]).round(3).to_string(index=False, header=len(rows) == 1), flush=True)
+            print_last(rows, 1)
     return pd.DataFrame(rows)
 
 
@@ -87,8 +87,10 @@ def power_table(trial: Trial, repeats: int, *, workers: int = 2, seed: int = 4) 
 
 
 P_VALUES = [
-    *((Trial(d, 100, 39), 200) for d in (1, 2, 5)),
-    *((Trial(d, n, 19, with_entropy=False), repeats) for n, repeats in ((20, 1000), (100, 1000), (400, 300)) for d in (1, 2, 5)),
-    (Trial(2, 100, 19, with_entropy=False, weighted=True), 500),
-]  # fmt: skip
+    *((Trial(d, 100, 19), 200) for d in (1, 2, 5)),
+    *((Trial(d, 20, 19, with_entropy=False), 500) for d in (1, 2, 5)),
+    *((Trial(d, 100, 19, with_entropy=False), 500) for d in (1, 2, 5)),
+    *((Trial(d, 400, 19, with_entropy=False), 200) for d in (1, 2, 5)),
+    (Trial(2, 100, 19, with_entropy=False, weighted=True), 300),
+]
 POWER = Trial(2, 100, 39), 40

@@ -14,7 +14,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 from calibration_p_values import P_VALUES, POWER, power_table, uniformity_table
-from calibration_repeats import repeat
+from calibration_repeats import print_last, repeat
 
 import ensembles
 from ensembles.bridges.closed_form import GaussianBridge
@@ -87,7 +87,7 @@ def coverage_table(cases: Sequence[tuple[str, int, int, int, int]], *, workers: 
                 "coverage": held.mean(), "± (1 s.e.)": max(held.mean(axis=1).std(ddof=1), 0.05) / np.sqrt(repeats),
                 "bias / s.d.": (estimates.mean() - exact[q]) / scatter, "mean s.e. / s.d.": errors.mean() / scatter,
             })  # fmt: skip
-        print(pd.DataFrame(rows[-3:]).round(3).to_string(index=False, header=len(rows) == 3), flush=True)
+        print_last(rows, 3)
     return pd.DataFrame(rows)
 
 
@@ -125,7 +125,7 @@ def noise_table(
             "median estimate": np.median(found[:, 1]), "true D": 0.5,
             "median lower": np.median(found[:, 2]), "median upper": np.median(found[:, 3]),
         })  # fmt: skip
-        print(pd.DataFrame(rows[-1:]).round(3).to_string(index=False, header=len(rows) == 1), flush=True)
+        print_last(rows, 1)
     return pd.DataFrame(rows)
 
 

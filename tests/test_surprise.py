@@ -130,7 +130,7 @@ def test_simulated_clouds_have_the_spread_of_the_population_and_the_weights_of_t
     rng = np.random.default_rng(8)
     weights = [rng.gamma(0.5, size=6), np.r_[0.0, rng.gamma(0.5, size=8)]]
     series = ensembles.SnapshotSeries.from_arrays([0, 1], [rng.normal(size=(6, 1)), rng.normal(size=(9, 1))], weights)
-    case = _Case(series, PRIOR, 0, same_particles=False)
+    case = _Case(series, PRIOR, 0, False, rng)
     draws = [case.simulate(stream) for stream in rng.spawn(6000)]
     start, a = series.clouds[0][:, 0], series.weights[0]
     centre = a @ start
@@ -148,7 +148,7 @@ def test_simulated_clouds_have_the_spread_of_the_population_and_the_weights_of_t
     assert_allclose((firsts @ a).var(), unbiased * (a @ a), rtol=6 * np.sqrt(3 / 6000))
     assert abs(a @ a * 6 - 1) > 0.3
     alone = ensembles.SnapshotSeries.from_arrays([0, 1], [[2.0], [1.0, 3.0]])
-    assert_allclose(_Case(alone, PRIOR, 0, same_particles=False).simulate(rng)[0], [[2.0]])
+    assert_allclose(_Case(alone, PRIOR, 0, False, rng).simulate(rng)[0], [[2.0]])
 
 
 def test_the_same_particles_are_simulated_one_by_one():

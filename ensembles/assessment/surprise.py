@@ -11,6 +11,7 @@ from .. import checks
 from ..bridges.fit import fit_bridge
 from ..bridges.growing import growing_weights
 from ..priors.base import LinearGaussianPrior, Transition, require_prior
+from .population import population_behind
 from .relative_entropy import GapEntropy, atoms_relative_entropy, refuse_box
 from .resampled_weights import run_repeats
 from .scores import energy_distance
@@ -122,9 +123,10 @@ def prior_check(
 
     A simulation draws two clouds from the population behind the start cloud, independently and of the observed sizes and
     weights, moves the second by the prior, and computes the same statistics as for the data: the energy distance between
-    the end cloud and what the prior makes of the start cloud, and the relative entropy of the bridge between the two. For
-    the population stands the start cloud, widened about its mean to the unbiased variance (a factor (1 - 1/n)^(-1/2) of
-    n equal particles). The p-value is (1 + number of simulations at least as far) / (1 + simulations).
+    the end cloud and what the prior makes of the start cloud, and the relative entropy of the bridge between the two. The
+    population is a kernel estimate with the mean and the unbiased covariance of the start cloud, its bandwidth by the
+    likelihood of each particle given the others. The p-value is (1 + number of simulations at least as far) /
+    (1 + simulations).
 
     Parameters
     ----------
@@ -157,8 +159,9 @@ def prior_check(
     streams = checks.generator(rng).spawn(len(series) - 1)
     gaps, dropped, verdict = [], [], []
     for k, stream in enumerate(streams):
-        case = _Case(series, prior, k, same_particles)
-        found, reason = _judge(case, simulations, with_entropy, workers, stream)
+        choosing, judging = stream.spawn(2)
+        case = _Case(series, prior, k, same_particles, choosing)
+        found, reason = _judge(case, simulations, with_entropy, workers, judging)
         gaps.append(found)
         if reason:
             dropped.append(f"the relative entropy from {found.start:g} to {found.end:g} was dropped: {reason}")
@@ -169,7 +172,9 @@ def prior_check(
 class _Case:
     """One gap: its clouds, the prior over it, and how new ones are simulated."""
 
-    def __init__(self, series: SnapshotSeries, prior: LinearGaussianPrior, k: int, same_particles: bool) -> None:
+    def __init__(
+        self, series: SnapshotSeries, prior: LinearGaussianPrior, k: int, same_particles: bool, rng: np.random.Generator
+    ) -> None:
         self.times = float(series.times[k]), float(series.times[k + 1])
         self.prior, self.same = prior, same_particles
         self.pair = series.subset([k, k + 1])
@@ -187,7 +192,7 @@ class _Case:
             )
         self.transition: Transition = prior.transition(self.times[1] - self.times[0], series.dimension)
         self.ends = int(np.count_nonzero(self.weights[1]))
-        self.population = _widened(self.clouds[0], self.weights[0])
+        self.population = population_behind(self.clouds[0], self.weights[0], rng)
 
     def predicted(self, start: np.ndarray, weights: np.ndarray, rng: np.random.Generator) -> np.ndarray:
         """A cloud that stands for what the prior makes of a start cloud."""
@@ -203,9 +208,9 @@ class _Case:
         start, weights = self.clouds[0], self.weights[0]
         if self.same:
             return start, weights, self.transition.sample(start, rng)
-        sources = self.population[rng.choice(len(start), len(self.clouds[1]), p=weights)]
-        drawn = self.population[rng.choice(len(start), len(start), p=weights)]
-        return drawn, weights, self.transition.sample(sources, rng)
+        drawn = self.population.sample(len(start), rng)
+        ends = self.transition.sample(self.population.sample(len(self.clouds[1]), rng), rng)
+        return drawn, weights, ends
 
     def energy(
         self, start: np.ndarray, weights: np.ndarray, end: np.ndarray, end_weights: np.ndarray, rng: np.random.Generator
@@ -259,19 +264,6 @@ def _judge(
         ),
         reason,
     )
-
-
-def _widened(cloud: np.ndarray, weights: np.ndarray) -> np.ndarray:
-    """The cloud about its mean x̄ times (1 - Σ a_i²)^(-1/2): its variance is then the unbiased estimate of the population's.
-
-    The distances that the prior itself gives are second moments to leading order, so that clouds drawn from the atoms as
-    they stand would lie too close to one another by a share 1/n.
-    """
-    missing = 1.0 - float(np.sum(weights**2))
-    if missing <= 0.0:
-        return cloud
-    mean = weights @ cloud
-    return mean + (cloud - mean) / np.sqrt(missing)
 
 
 def _p_value(observed: float, simulated: np.ndarray) -> float:
