@@ -38,8 +38,9 @@ def test_p_values_are_uniform_under_the_prior_and_small_without_it():
     _, uniform = uniformity(trial, 60, workers=1, seed=13)
     assert min(uniform) > 0.001
     power = power_table(trial, 12, workers=1, seed=14).set_index(["shift", "widening"])
-    # With 19 simulations 0.05 is the smallest p-value.
-    assert power.loc[(1.0, 1.0)].min() > 0.5
+    # With 19 simulations 0.05 is the smallest p-value. Sixty repeats gave a power of 0.75 by relative entropy and 0.95 by
+    # energy distance; three standard errors of twelve are 0.375. A test without power would stay below 0.05 + 0.19.
+    assert power.loc[(1.0, 1.0)].min() > 0.75 - 0.375
     assert power.loc[(0.0, 1.6)].max() > 0.5
     assert power.loc[(0.0, 1.0)].max() < 0.5
 
