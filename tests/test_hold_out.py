@@ -193,13 +193,24 @@ def test_large_clouds_are_cut_and_still_scored(monkeypatch):
 def test_small_snapshots_drop_scores_and_say_which():
     series = ensembles.SnapshotSeries.from_arrays([0, 1, 2], [[0.0, 1.0], [0.4], [1.0, 2.0]])
     found = ensembles.hold_out(series, PRIOR, repeats=5)
-    assert {sentence.split()[0] for sentence in found.dropped} == {
-        "energy_distance", "kernel_discrepancy", "covariance_error",
-    }  # fmt: skip
-    assert all("time = 1: it needs 2 particles and there is 1" in sentence for sentence in found.dropped)
+    scores, floor = found.dropped[:-1], found.dropped[-1]
+    assert {sentence.split()[0] for sentence in scores} == {"energy_distance", "kernel_discrepancy", "covariance_error"}
+    assert all("time = 1: it needs 2 particles and there is 1" in sentence for sentence in scores)
+    assert "the floor of log_density at time = 1 was dropped: the entropy of a cloud needs more particles" in floor
     assert set(found.to_frame()["score"]) == {"wasserstein_1", "wasserstein_2", "mean_error", "log_density"}
     same = ensembles.SnapshotSeries.from_arrays([0, 1, 2], [[0.0, 1.0], [0.4, 0.4], [1.0, 2.0]])
     assert "all its particles are at one place" in ensembles.hold_out(same, PRIOR, repeats=5).dropped[0]
+    rng = np.random.default_rng(0)
+    clouds = [rng.normal(size=20) for _ in range(3)]
+    weighted = ensembles.SnapshotSeries.from_arrays([0, 1, 2], clouds, [None, np.arange(1.0, 21.0), None])
+    found = ensembles.hold_out(weighted, PRIOR, repeats=5)
+    assert [s for s in found.dropped if "the weights are not equal, and nearest neighbours do not see weights" in s]
+    assert "log_density" not in set(found.to_frame().query("prediction == 'floor'")["score"])
+    # Particles of weight 0 are not there: equal weights beside them leave the floor of the rest.
+    half = ensembles.SnapshotSeries.from_arrays([0, 1, 2], clouds, [None, np.repeat([1.0, 0.0], 10), None])
+    alone = ensembles.SnapshotSeries.from_arrays([0, 1, 2], [clouds[0], clouds[1][:10], clouds[2]])
+    floors = [ensembles.hold_out(s, PRIOR, repeats=5).value(1.0, "floor", "log_density").value for s in (half, alone)]
+    assert_allclose(floors[0], floors[1], rtol=1e-12)
 
 
 def test_bad_input_is_refused():
@@ -211,6 +222,9 @@ def test_bad_input_is_refused():
     three = spreading(n=10)
     with pytest.raises(InputError, match=r"'energy' \(did you mean 'energy_distance'\?\)"):
         ensembles.hold_out(three, PRIOR, scores=["energy"])
+    for scores in ("energy_distance", []):
+        with pytest.raises(InputError, match=r"scores must be a list of names; it is"):
+            ensembles.hold_out(three, PRIOR, scores=scores)
     with pytest.raises(InputError, match=r"repeats must be a whole number of at least 2; it is 1"):
         ensembles.hold_out(three, PRIOR, repeats=1)
     with pytest.raises(InputError, match=r"draws must be a whole number of at least 2; it is 0"):

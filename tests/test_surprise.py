@@ -6,6 +6,7 @@ from numpy.testing import assert_allclose
 
 import ensembles
 from ensembles import InputError
+from ensembles.assessment.surprise import _Case
 
 PRIOR = ensembles.Brownian(diffusion=0.5)
 
@@ -125,6 +126,31 @@ def test_the_verdict_and_the_table():
     assert_allclose(rerun.gaps[0].simulated_entropy, gap.simulated_entropy, rtol=0)
 
 
+def test_simulated_clouds_have_the_spread_of_the_population_and_the_weights_of_the_data():
+    rng = np.random.default_rng(8)
+    weights = [rng.gamma(0.5, size=6), np.r_[0.0, rng.gamma(0.5, size=8)]]
+    series = ensembles.SnapshotSeries.from_arrays([0, 1], [rng.normal(size=(6, 1)), rng.normal(size=(9, 1))], weights)
+    case = _Case(series, PRIOR, 0, False, rng)
+    draws = [case.simulate(stream) for stream in rng.spawn(6000)]
+    start, a = series.clouds[0][:, 0], series.weights[0]
+    centre = a @ start
+    unbiased = a @ (start - centre) ** 2 / (1 - a @ a)
+    for first, given, last in draws:
+        assert_allclose(given, a, rtol=0)
+        assert first.shape == (6, 1)
+        assert last.shape == (9, 1)
+    firsts, lasts = (np.array([draw[i][..., 0] for draw in draws]) for i in (0, 2))
+    # Variance of a position: that of the population, and 2 · 0.5 · 1 more after the step; 36,000 and 54,000 positions,
+    # whose variance is known to (κ - 1)^½ of their number^-½, with a kurtosis κ of no more than 6 atoms can have.
+    for positions, expected in ((firsts, unbiased), (lasts, unbiased + 1.0)):
+        assert_allclose(positions.var(), expected, rtol=6 * np.sqrt(5 / positions.size))
+    # A weighted mean scatters as its weights say, not as n equal ones would.
+    assert_allclose((firsts @ a).var(), unbiased * (a @ a), rtol=6 * np.sqrt(3 / 6000))
+    assert abs(a @ a * 6 - 1) > 0.3
+    alone = ensembles.SnapshotSeries.from_arrays([0, 1], [[2.0], [1.0, 3.0]])
+    assert_allclose(_Case(alone, PRIOR, 0, False, rng).simulate(rng)[0], [[2.0]])
+
+
 def test_the_same_particles_are_simulated_one_by_one():
     found = ensembles.prior_check(pair(n=50), PRIOR, simulations=39, same_particles=True, with_entropy=False)
     assert found.gaps[0].entropy is None
@@ -133,6 +159,23 @@ def test_the_same_particles_are_simulated_one_by_one():
     with pytest.raises(InputError, match=r"same_particles needs equal numbers; .* hold 2 and 3"):
         series = ensembles.SnapshotSeries.from_arrays([0, 1], [[0.0, 1.0], [1.0, 2.0, 3.0]])
         ensembles.prior_check(series, PRIOR, same_particles=True)
+
+
+def test_growth_moves_the_predicted_cloud_and_excludes_the_same_particles():
+    # Two starts at ±3, of which the right one divides: at the end 95 % are there. Without the growth that is a surprise.
+    rng = np.random.default_rng(9)
+    start = np.repeat([-3.0, 3.0], 50) + 0.1 * rng.normal(size=100)
+    end = np.repeat([-3.0, 3.0], [5, 95]) + rng.normal(size=100)
+    rates = [np.where(start > 0, np.log(19.0), 0.0), np.zeros(100)]
+    series = ensembles.SnapshotSeries.from_arrays([0, 1], [start, end], features={"rate": rates})
+    growing = series.with_growth(ensembles.Growth("rate"))
+    ignoring, heeding = (
+        ensembles.prior_check(s, PRIOR, simulations=39, with_entropy=False).gaps[0] for s in (series, growing)
+    )
+    assert ignoring.energy_p_value == 1 / 40
+    assert heeding.energy_p_value > 0.05
+    with pytest.raises(InputError, match=r"same_particles means that none divides or dies; the series has Growth"):
+        ensembles.prior_check(growing, PRIOR, same_particles=True)
 
 
 def test_what_cannot_be_computed_is_named():
@@ -186,6 +229,7 @@ def test_walls_and_smooth_ends_are_refused_where_they_are_not_served():
         ensembles.effective_sizes(fitted)
     found = ensembles.hold_out(series, boxed, repeats=5)
     assert "the predictions independent, prior were dropped" in found.dropped[0]
+    assert sum("predictions" in sentence for sentence in found.dropped) == 1
     assert set(found.to_frame()["prediction"]) == {"bridge", "earlier", "later", "straight", "floor"}
     smooth = ensembles.fit_bridge(series, ensembles.Brownian(0.1), ends="mixture", components=1)
     with pytest.raises(InputError, match=r"belong to atoms; the bridge has mixture ends"):

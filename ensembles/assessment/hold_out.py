@@ -159,6 +159,10 @@ def hold_out(
     """
     require_prior(prior)
     require_interior(series, "holding out")
+    if isinstance(scores, str) or len(scores) == 0:
+        raise checks.InputError(
+            f"scores must be a list of names; it is {scores!r}; use for example ['energy_distance']"
+        )
     for name in scores:
         if name not in HELD_OUT_SCORES:
             raise checks.unknown_name("score", name, HELD_OUT_SCORES)
@@ -178,12 +182,10 @@ def hold_out(
         for name, sentence in judge.unusable(tuple(names)):
             names.pop(name)
             dropped.append(sentence)
-        if prior.box is not None:
-            dropped.append(
-                f"the predictions {', '.join(GAUSSIAN_ONLY)} were dropped: they do not know the walls of a box"
-            )
         found, clouds = judge.score(near, tuple(names))
-        rows += found + judge.floors(near, tuple(names), replicates)
+        floors, missing = judge.floors(near, tuple(names), replicates)
+        rows += found + floors
+        dropped += missing
         times.append(HeldOutTime(float(series.times[k]), judge.observed, judge.weights, clouds))
     return HoldOut(
         tuple(rows),
@@ -303,11 +305,13 @@ class _Judge:
                 )
         return rows
 
-    def floors(self, near: Neighbours, names: Sequence[str], replicates: str | None) -> list[HeldOutScore]:
-        """The floor of every score: mean and standard deviation of what a second snapshot would score."""
+    def floors(
+        self, near: Neighbours, names: Sequence[str], replicates: str | None
+    ) -> tuple[list[HeldOutScore], list[str]]:
+        """The floor of every score: mean and standard deviation of what a second snapshot would score; what has none."""
         time = float(self.series.times[self.k])
         size = min(len(self.observed), *(len(cloud) for cloud in near.clouds))
-        found = {}
+        found, missing = {}, []
         if replicates is not None:
             groups = np.asarray(self.series.features[replicates][self.k]).astype(str)
             found = replicate_floor(
@@ -320,8 +324,18 @@ class _Judge:
             )  # fmt: skip
         if "log_density" in names:
             try:
-                entropy = neighbour_entropy(self.observed, self.weights)
-                found["log_density"] = (-entropy.value, entropy.error)
-            except checks.InputError:
-                pass  # a small or degenerate snapshot has no such floor; the score itself stands
-        return [HeldOutScore(time, "floor", name, *found[name]) for name in names if name in found]
+                found["log_density"] = self._density_floor()
+            except checks.InputError as cause:
+                reason = str(cause).rsplit("; ", 1)[0]  # the remedy is for those who ask for the entropy itself
+                missing.append(f"the floor of log_density at {self.series.time_name} = {time:g} was dropped: {reason}")
+        return [HeldOutScore(time, "floor", name, *found[name]) for name in names if name in found], missing
+
+    def _density_floor(self) -> tuple[float, float]:
+        present = self.weights > 0
+        positive = self.weights[present]
+        if positive.max() > positive.min() * (1.0 + 1e-9):
+            raise checks.InputError(
+                "the weights are not equal, and nearest neighbours do not see weights; use equal ones"
+            )
+        entropy = neighbour_entropy(self.observed[present], positive)
+        return -entropy.value, entropy.error

@@ -9,7 +9,9 @@ import numpy as np
 
 from .. import checks
 from ..bridges.fit import fit_bridge
+from ..bridges.growing import growing_weights
 from ..priors.base import LinearGaussianPrior, Transition, require_prior
+from .population import population_behind
 from .relative_entropy import GapEntropy, atoms_relative_entropy, refuse_box
 from .resampled_weights import run_repeats
 from .scores import energy_distance
@@ -119,14 +121,16 @@ def prior_check(
 ) -> PriorCheck:
     """Compare every snapshot with what the prior alone makes of the snapshot before it.
 
-    A simulation draws a new start cloud from the observed one and a new end cloud of the observed size from the prior,
-    and computes the same statistics as for the data: the energy distance between the end cloud and what the prior makes
-    of the start cloud, and the relative entropy of the bridge between the two. The p-value is (1 + number of simulations
-    at least as far) / (1 + simulations).
+    A simulation draws two clouds from the population behind the start cloud, independently and of the observed sizes and
+    weights, moves the second by the prior, and computes the same statistics as for the data: the energy distance between
+    the end cloud and what the prior makes of the start cloud, and the relative entropy of the bridge between the two. The
+    population is a kernel estimate with the mean and the unbiased covariance of the start cloud, its bandwidth by the
+    likelihood of each particle given the others. The p-value is (1 + number of simulations at least as far) /
+    (1 + simulations).
 
     Parameters
     ----------
-    series : SnapshotSeries of K ≥ 2 snapshots.
+    series : SnapshotSeries of K ≥ 2 snapshots; its growth, if any, changes the weights of the start clouds.
     prior : the dynamics to be judged, with its drift.
     simulations : at least 19; the smallest p-value is 1 / (1 + simulations).
     same_particles : whether the end cloud holds the very particles of the start cloud (their labels lost); each start
@@ -138,7 +142,7 @@ def prior_check(
     Raises
     ------
     InputError
-        If there are too few simulations, or `same_particles` with snapshots of different sizes.
+        If there are too few simulations, or `same_particles` with snapshots of different sizes or with growth.
 
     Examples
     --------
@@ -155,8 +159,9 @@ def prior_check(
     streams = checks.generator(rng).spawn(len(series) - 1)
     gaps, dropped, verdict = [], [], []
     for k, stream in enumerate(streams):
-        case = _Case(series, prior, k, same_particles)
-        found, reason = _judge(case, simulations, with_entropy, workers, stream)
+        choosing, judging = stream.spawn(2)
+        case = _Case(series, prior, k, same_particles, choosing)
+        found, reason = _judge(case, simulations, with_entropy, workers, judging)
         gaps.append(found)
         if reason:
             dropped.append(f"the relative entropy from {found.start:g} to {found.end:g} was dropped: {reason}")
@@ -167,11 +172,19 @@ def prior_check(
 class _Case:
     """One gap: its clouds, the prior over it, and how new ones are simulated."""
 
-    def __init__(self, series: SnapshotSeries, prior: LinearGaussianPrior, k: int, same_particles: bool) -> None:
+    def __init__(
+        self, series: SnapshotSeries, prior: LinearGaussianPrior, k: int, same_particles: bool, rng: np.random.Generator
+    ) -> None:
         self.times = float(series.times[k]), float(series.times[k + 1])
         self.prior, self.same = prior, same_particles
         self.pair = series.subset([k, k + 1])
-        self.clouds, self.weights = self.pair.clouds, self.pair.weights
+        # Growth changes which starts the end cloud came from: the weights are those of a bridge over the gap.
+        self.clouds, self.weights = self.pair.clouds, growing_weights(self.pair, 0)
+        if same_particles and series.growth is not None:
+            raise checks.InputError(
+                f"same_particles means that none divides or dies; the series has {series.growth!r}; use "
+                "same_particles=False, or series.with_growth(None)"
+            )
         if same_particles and len(self.clouds[0]) != len(self.clouds[1]):
             raise checks.InputError(
                 f"same_particles needs equal numbers; the snapshots at {self.times[0]:g} and {self.times[1]:g} hold "
@@ -179,6 +192,7 @@ class _Case:
             )
         self.transition: Transition = prior.transition(self.times[1] - self.times[0], series.dimension)
         self.ends = int(np.count_nonzero(self.weights[1]))
+        self.population = population_behind(self.clouds[0], self.weights[0], rng)
 
     def predicted(self, start: np.ndarray, weights: np.ndarray, rng: np.random.Generator) -> np.ndarray:
         """A cloud that stands for what the prior makes of a start cloud."""
@@ -187,13 +201,16 @@ class _Case:
         return self.transition.sample(start[rows], rng)
 
     def simulate(self, rng: np.random.Generator) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """A start cloud with its weights, and an end cloud, as the prior would have produced them."""
+        """A start cloud and an end cloud as the prior would have produced them; both have the weights of the observed ones.
+
+        Independent samples come from the population behind the start cloud, for which `population` stands.
+        """
         start, weights = self.clouds[0], self.weights[0]
         if self.same:
             return start, weights, self.transition.sample(start, rng)
-        ends = self.transition.sample(start[rng.choice(len(start), self.ends, p=weights)], rng)
-        count = int(np.count_nonzero(weights))
-        return start[rng.choice(len(start), count, p=weights)], np.full(count, 1.0 / count), ends
+        drawn = self.population.sample(len(start), rng)
+        ends = self.transition.sample(self.population.sample(len(self.clouds[1]), rng), rng)
+        return drawn, weights, ends
 
     def energy(
         self, start: np.ndarray, weights: np.ndarray, end: np.ndarray, end_weights: np.ndarray, rng: np.random.Generator
@@ -226,13 +243,11 @@ def _judge(
             except checks.InputError as cause:
                 reason = str(cause)
     observed = case.energy(start, case.weights[0], end, case.weights[1], observing)
-    equal = np.full(case.ends, 1.0 / case.ends)
 
     def once(stream: np.random.Generator) -> tuple[float, float]:
         first, weights, last = case.simulate(stream)
-        share = case.weights[1] if case.same else equal
-        distance = case.energy(first, weights, last, share, stream)
-        return distance, case.entropy(first, weights, last, share).value if entropy is not None else float("nan")
+        clouds = first, weights, last, case.weights[1]
+        return case.energy(*clouds, stream), case.entropy(*clouds).value if entropy is not None else float("nan")
 
     simulated = np.array(run_repeats(once, simulations, simulating, workers))
     return (
