@@ -31,6 +31,7 @@ _HOMES = {
     "fit_kinetic_bridge": "bridges.kinetic",
     "link_particles": "links.link",
     "LinkOptions": "links.candidates",
+    "neighbour_correlation": "links.correlation",
     "chain_links": "links.chain",
     "estimate_prior": "links.estimate",
     "EstimateOptions": "links.estimate",
@@ -108,6 +109,7 @@ if TYPE_CHECKING:
     from .lineage.uncertainty import lineage_errors as lineage_errors
     from .links.candidates import LinkOptions as LinkOptions
     from .links.chain import chain_links as chain_links
+    from .links.correlation import neighbour_correlation as neighbour_correlation
     from .links.estimate import EstimateOptions as EstimateOptions
     from .links.estimate import estimate_prior as estimate_prior
     from .links.link import link_particles as link_particles

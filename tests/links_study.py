@@ -136,7 +136,8 @@ def reliability(draws: list[Draw], name: str, bins: int = 10) -> np.ndarray:
 def estimate_table(groups: dict[str, list[Draw]]) -> str:
     """Estimated against true diffusion coefficients, and accuracy, one line a group of draws."""
     lines = [
-        f"{'group':<22}{'D true':>9}{'D est.':>9}{'median |ratio-1|':>18}{'within 95 %':>13}{'told':>6}{'together':>10}{'entropy/log n':>15}"
+        f"{'group':<22}{'D true':>9}{'D est.':>9}{'median |ratio-1|':>18}{'within 95 %':>13}{'told':>6}{'together':>10}"
+        f"{'entropy/log n':>15}"
         f"{'most probable':>15}{'most expected':>15}{'nearest':>9}{'log score links':>17}{'propag.':>9}{'n pi':>9}{'nearest':>9}"
     ]
     for name, draws in groups.items():

@@ -51,7 +51,9 @@ def test_log_sum_and_soft_mean(dimension):
 
 
 @pytest.mark.parametrize("dimension", [3, 4, 5, 7, 8, 11])
-@pytest.mark.parametrize("width", [2.0, 300.0])  # by products from four dimensions on; by differences where they are wide
+@pytest.mark.parametrize(
+    "width", [2.0, 300.0]
+)  # by products from four dimensions on; by differences where they are wide
 def test_distances_do_not_depend_on_where_the_clouds_lie(dimension, width):
     rng = np.random.default_rng(dimension)
     x = rng.normal(size=(30, dimension)) * width  # 30 rows: groups of four, and two left over

@@ -12,7 +12,7 @@ whole variance is too unsure of them. V_s = mean |s|²/d, and V_t from expectati
 
     V_t = mean [w |t|² + (1 - w) |t'|²]/d,   w = 1 / (1 + exp(-(|t'|² - |t|²) / (2 V_t))),
 
-give c = (V_s - V_t) / (V_s + V_t).
+give c = (V_s - V_t) / (V_s + V_t); κ, which the most probable assignment makes too small, is not needed.
 """
 
 from __future__ import annotations
@@ -45,13 +45,11 @@ class NeighbourCorrelation:
     Attributes
     ----------
     value, standard_error : of the correlation c of two neighbours' displacements, between -1 and 1.
-    variance : κ, of a displacement in units of the prior's noise: 1 where the prior is right.
     pairs : neighbours looked at.
     """
 
     value: float
     standard_error: float
-    variance: float
     pairs: int
 
 
@@ -109,15 +107,13 @@ def neighbour_correlation(
     apart = ((r_first - r_second) ** 2).sum(axis=1) / (2.0 * dimension)
     exchanged = ((swapped[0] - swapped[1]) ** 2).sum(axis=1) / (2.0 * dimension)
     numbers = (together, apart, exchanged)
-    value, variance = _correlation(numbers, dimension)
+    value = _correlation(numbers, dimension)
     # Neighbours in space share pairs: groups are slabs along the widest axis.
     axis = law.sources[:, int(np.argmax(np.ptp(law.sources, axis=0)))]
     group = np.argsort(np.argsort(axis[first], kind="stable"), kind="stable") * _GROUPS // first.size
-    left_out = np.array(
-        [_correlation(tuple(x[group != k] for x in numbers), dimension)[0] for k in range(_GROUPS)]  # type: ignore[arg-type]
-    )
+    left_out = np.array([_correlation(tuple(x[group != k] for x in numbers), dimension) for k in range(_GROUPS)])
     error = float(np.sqrt((_GROUPS - 1) * left_out.var()))
-    return NeighbourCorrelation(value, error, variance, int(first.size))
+    return NeighbourCorrelation(value, error, int(first.size))
 
 
 def _pairs(law: LinkLaw, assignment: np.ndarray, neighbours: int) -> tuple[np.ndarray, np.ndarray]:
@@ -138,8 +134,8 @@ def _displacements(law: LinkLaw, rows: np.ndarray, columns: np.ndarray) -> np.nd
     return r
 
 
-def _correlation(numbers: tuple[np.ndarray, np.ndarray, np.ndarray], dimension: int) -> tuple[float, float]:
-    """c and κ from |s|²/d, |t|²/d and |t'|²/d of pairs."""
+def _correlation(numbers: tuple[np.ndarray, np.ndarray, np.ndarray], dimension: int) -> float:
+    """c from |s|²/d, |t|²/d and |t'|²/d of pairs."""
     together, apart, exchanged = numbers
     shared, relative = float(together.mean()), float(np.minimum(apart, exchanged).mean())
     for _ in range(_ROUNDS):
@@ -148,4 +144,4 @@ def _correlation(numbers: tuple[np.ndarray, np.ndarray, np.ndarray], dimension: 
         before, relative = relative, float((weight * apart + (1.0 - weight) * exchanged).mean())
         if abs(relative - before) <= 1e-10 * relative:
             break
-    return (shared - relative) / (shared + relative), 0.5 * (shared + relative)
+    return (shared - relative) / (shared + relative)
