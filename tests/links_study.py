@@ -8,6 +8,7 @@ from __future__ import annotations
 import sys
 import time
 import warnings
+from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -15,6 +16,7 @@ import numpy as np
 from scipy.spatial import cKDTree
 
 import ensembles
+from ensembles.links.estimated_prior import PriorEstimate
 from ensembles.schrodinger.assignment import AssignmentGraph, propagate_beliefs
 from ensembles.schrodinger.clusters import sum_clusters
 from ensembles.schrodinger.exact_assignment import exact_assignment
@@ -60,11 +62,36 @@ def read_positions() -> tuple[np.ndarray, np.ndarray]:
         return archive["unwrapped_A"].astype(float), archive["box_A"].mean(axis=0)
 
 
-def study(count: int, steps: int, seed: int, *, wrapped: bool = False, independent: bool = False) -> Draw:
-    """Tag `count` atoms, forget which is which, and compare `steps` frames later.
+def study(
+    count: int, steps: int, seeds: Sequence[int], *, wrapped: bool = False, independent: bool = False
+) -> list[Draw]:
+    """For every seed tag `count` atoms, forget which is which, and compare `steps` frames later.
 
-    `wrapped` keeps only the place in the box; `independent` replaces the atoms' moves by independent Gaussian ones.
+    A first look at the links of all draws gives the correlation of neighbours' displacements, as a film would, whose labels
+    are not known either; where it stands out from its error, the links are made again with it. `wrapped` keeps only the
+    place in the box; `independent` replaces the atoms' moves by independent Gaussian ones.
     """
+    looks = [_first_look(count, steps, seed, wrapped, independent) for seed in seeds]
+    found = np.array([look.correlation for look in looks])
+    error = found.std(ddof=1) / np.sqrt(found.size) if found.size > 1 else np.inf
+    together = float(found.mean()) if found.mean() > 2.0 * error else 0.0
+    return [_compare(look, together) for look in looks]
+
+
+@dataclass(frozen=True)
+class Look:
+    """Two unlabelled frames, the prior estimated from them, and what the first links say of common motion."""
+
+    series: ensembles.SnapshotSeries
+    own: np.ndarray
+    box: ensembles.Box | None
+    gap: float
+    true: float
+    estimate: PriorEstimate
+    correlation: float
+
+
+def _first_look(count: int, steps: int, seed: int, wrapped: bool, independent: bool) -> Look:
     positions, edges = read_positions()
     rng = np.random.default_rng(seed)
     tagged = rng.choice(positions.shape[1], count, replace=False)
@@ -84,17 +111,18 @@ def study(count: int, steps: int, seed: int, *, wrapped: bool = False, independe
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", RuntimeWarning)
         estimate = ensembles.estimate_prior(series, "brownian", box=box)
-        first_look = ensembles.link_particles(series, estimate.prior)[0]
-        found = ensembles.neighbour_correlation(first_look, series, estimate.prior)
-        # Only where it stands out from its error: else particles are taken to move independently.
-        together = max(found.value, 0.0) if found.value > 2.0 * found.standard_error else 0.0
-        links = ensembles.link_particles(series, estimate.prior, options=ensembles.LinkOptions(correlation=together))[0]
-    coupling = ensembles.fit_bridge(series, estimate.prior, tolerance=1e-4).coupling(0).matrix() * count
-    return _compare(links, coupling, series, own, box, (gap, true, estimate, together))
+        links = ensembles.link_particles(series, estimate.prior)
+    correlation = ensembles.neighbour_correlation(links, series, estimate.prior).value
+    return Look(series, own, box, gap, true, estimate, correlation)
 
 
-def _compare(links, coupling, series, own, box, known) -> Draw:
-    gap, true, estimate, together = known
+def _compare(look: Look, together: float) -> Draw:
+    series, own, box, gap, true, estimate = look.series, look.own, look.box, look.gap, look.true, look.estimate
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", RuntimeWarning)
+        options = ensembles.LinkOptions(correlation=together)
+        links = ensembles.link_particles(series, estimate.prior, options=options)[0]
+    coupling = ensembles.fit_bridge(series, estimate.prior, tolerance=1e-4).coupling(0).matrix() * own.size
     count = own.size
     rows = np.arange(count)
     said = {"links": links.matrix(), "coupling": coupling}
@@ -244,7 +272,7 @@ def argon(draws: int = 10) -> None:
     print("Argon with hidden labels; D in Å²/ps; medians over draws; shares of right links; mean log probability")
     for count, steps, wrapped in [(n, k, False) for n in (50, 200, 1000) for k in (1, 3, 10)] + [(1000, 1, True)]:
         name = f"{count} {'wrapped' if wrapped else 'atoms'}, {FRAME * steps:g} ps"
-        groups[name] = [study(count, steps, seed, wrapped=wrapped) for seed in range(draws)]
+        groups[name] = study(count, steps, range(draws), wrapped=wrapped)
         table = estimate_table({name: groups[name]}).splitlines()
         print("\n".join(table if len(groups) == 1 else table[1:]), flush=True)
         if steps == 10 or wrapped:
@@ -255,9 +283,9 @@ def argon(draws: int = 10) -> None:
 def control(draws: int = 10) -> None:
     """Print the same for independent Gaussian moves from the same places: what holds when the prior does."""
     groups = {
-        f"{count} {'wrapped' if wrapped else 'simulated'}, {FRAME * steps:g} ps": [
-            study(count, steps, seed, wrapped=wrapped, independent=True) for seed in range(repeats)
-        ]
+        f"{count} {'wrapped' if wrapped else 'simulated'}, {FRAME * steps:g} ps": study(
+            count, steps, range(repeats), wrapped=wrapped, independent=True
+        )
         for count, steps, wrapped, repeats in ((200, 1, False, draws), (200, 3, False, draws), (1000, 1, True, 3))
     }
     print("Control: independent Gaussian moves from the same places")

@@ -17,6 +17,7 @@ give c = (V_s - V_t) / (V_s + V_t); κ, which the most probable assignment makes
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -26,10 +27,10 @@ from .. import checks
 from ..kernels.images import PERIODIC
 from ..priors.base import LinearGaussianPrior
 from .law import LinkLaw, link_law
+from .particle_links import ParticleLinks
 
 if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
-    from .particle_links import ParticleLinks
 
 __all__ = ["NeighbourCorrelation", "neighbour_correlation"]
 
@@ -54,14 +55,14 @@ class NeighbourCorrelation:
 
 
 def neighbour_correlation(
-    links: ParticleLinks,
+    links: ParticleLinks | Sequence[ParticleLinks],
     series: SnapshotSeries,
     prior: LinearGaussianPrior,
     *,
     neighbours: int = 4,
     localisation: float = 0.0,
 ) -> NeighbourCorrelation:
-    """Correlation of the displacements of neighbouring particles over one gap, without labels.
+    """Correlation of the displacements of neighbouring particles, without labels.
 
     Equations as in the module's docstring, over every particle and its nearest `neighbours` in the earlier frame, with the
     later pair that the most probable assignment gives them, in either order. The standard error is a jackknife over 20 groups
@@ -69,7 +70,7 @@ def neighbour_correlation(
 
     Parameters
     ----------
-    links : of that gap, from `link_particles`.
+    links : of one gap, or a list of them to be pooled, from `link_particles`; gaps of one length, as c changes with it.
     series, prior, localisation : as for `link_particles`; reflecting walls are not seen.
     neighbours : nearest particles of each one, at least 1.
 
@@ -92,28 +93,42 @@ def neighbour_correlation(
     True
     """
     neighbours = checks.whole_number(neighbours, "neighbours")
+    parts = [
+        _gap_numbers(gap, series, prior, neighbours, localisation)
+        for gap in ([links] if isinstance(links, ParticleLinks) else links)
+    ]
+    together, apart, exchanged, group = (np.concatenate(column) for column in zip(*parts))
+    if together.size < _FEWEST:
+        raise checks.InputError(
+            f"too few neighbours; {together.size} pair(s) of linked particles where {_FEWEST} are needed; use larger frames, or "
+            "more of them"
+        )
+    dimension = series.dimension
+    value = _correlation((together, apart, exchanged), dimension)
+    left_out = [
+        _correlation((together[keep], apart[keep], exchanged[keep]), dimension)
+        for keep in (group != k for k in range(_GROUPS))
+    ]
+    error = float(np.sqrt((_GROUPS - 1) * np.var(left_out)))
+    return NeighbourCorrelation(value, error, int(together.size))
+
+
+def _gap_numbers(
+    links: ParticleLinks, series: SnapshotSeries, prior: LinearGaussianPrior, neighbours: int, localisation: float
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """|s|²/d, |t|²/d, |t'|²/d of the pairs of one gap, and the group of each."""
     clouds = (series.clouds[links.source], series.clouds[links.target])
     law = link_law(prior, float(series.times[links.target] - series.times[links.source]), clouds, localisation)
-    first, second = _pairs(law, links.assignment, neighbours)
-    if first.size < _FEWEST:
-        raise checks.InputError(
-            f"too few neighbours; {first.size} pair(s) of linked particles where {_FEWEST} are needed; use larger frames"
-        )
     later = links.assignment
+    first, second = _pairs(law, later, neighbours)
     r_first, r_second = (_displacements(law, rows, later[rows]) for rows in (first, second))
     swapped = _displacements(law, first, later[second]), _displacements(law, second, later[first])
-    dimension = r_first.shape[1]
-    together = ((r_first + r_second) ** 2).sum(axis=1) / (2.0 * dimension)
-    apart = ((r_first - r_second) ** 2).sum(axis=1) / (2.0 * dimension)
-    exchanged = ((swapped[0] - swapped[1]) ** 2).sum(axis=1) / (2.0 * dimension)
-    numbers = (together, apart, exchanged)
-    value = _correlation(numbers, dimension)
+    sides = (r_first + r_second, r_first - r_second, swapped[0] - swapped[1])
+    together, apart, exchanged = ((side**2).sum(axis=1) / (2.0 * series.dimension) for side in sides)
     # Neighbours in space share pairs: groups are slabs along the widest axis.
     axis = law.sources[:, int(np.argmax(np.ptp(law.sources, axis=0)))]
-    group = np.argsort(np.argsort(axis[first], kind="stable"), kind="stable") * _GROUPS // first.size
-    left_out = np.array([_correlation(tuple(x[group != k] for x in numbers), dimension) for k in range(_GROUPS)])
-    error = float(np.sqrt((_GROUPS - 1) * left_out.var()))
-    return NeighbourCorrelation(value, error, int(first.size))
+    place = np.argsort(np.argsort(axis[first], kind="stable"), kind="stable")
+    return together, apart, exchanged, place * _GROUPS // max(first.size, 1)
 
 
 def _pairs(law: LinkLaw, assignment: np.ndarray, neighbours: int) -> tuple[np.ndarray, np.ndarray]:
