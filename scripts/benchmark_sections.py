@@ -222,7 +222,7 @@ def paths(say: Say) -> None:
 
 
 def huge(say: Say) -> None:
-    """large clouds, to an L1 error of 1e-3 (1e-6 in 30 dimensions); memory is the process's largest so far"""
+    """large clouds, to an L1 error of 1e-3; memory is the process's largest so far"""
     for n, d, fraction, width, goal in (
         (50_000, 30, 0.1, None, 1e-3),
         (100_000, 2, 0.01, None, 1e-3),

@@ -1,6 +1,6 @@
 """Argon atoms with hidden labels, and particles in a trap: what links and estimates from unlabelled frames are worth.
 
-Run it to print the tables (scripts/links); tests/test_links_argon.py holds small versions of them.
+Run it to print the tables (scripts/links); tests/test_estimate.py holds small versions of them.
 """
 
 from __future__ import annotations

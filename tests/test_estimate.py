@@ -114,7 +114,7 @@ def test_a_trap_is_recovered():
 
 def test_argon_with_hidden_labels():
     # Real data: data/README.md. scripts/links prints all groups; these are its two of 200 atoms, 10 draws each.
-    near, far = ([links_study.study(200, steps, seed) for seed in range(10)] for steps in (1, 3))
+    near, far = (links_study.study(200, steps, range(10)) for steps in (1, 3))
     for draws, largest in ((near, 0.03), (far, 0.10)):
         ratios = np.array([draw.estimated / draw.true for draw in draws])
         assert np.median(np.abs(ratios - 1)) < largest
@@ -140,7 +140,7 @@ def test_argon_with_hidden_labels():
 
 def test_links_are_reliable_where_the_prior_holds():
     # Independent Gaussian moves from the places of argon atoms: every bin within 0.05 or three standard errors.
-    draws = [links_study.study(200, steps, seed, independent=True) for steps in (1, 3) for seed in range(10)]
+    draws = [draw for steps in (1, 3) for draw in links_study.study(200, steps, range(10), independent=True)]
     table = links_study.reliability(draws, "links")
     assert table[:, 0].sum() > 5_000 and (table[:, 0] > 100).all()
     errors = np.sqrt(table[:, 1] * (1 - table[:, 1]) / table[:, 0])
