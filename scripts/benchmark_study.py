@@ -207,8 +207,8 @@ def run_pot(name: str, run: Callable[[int], tuple[np.ndarray, np.ndarray]], swee
     return Timed(name, seconds, wanted, marginal_error(*whitened, log_u, log_v), peak)
 
 
-def grid(sizes: list[int], say: Callable[[str], None]) -> list[dict[str, object]]:
-    """The table: every solver on every size, dimension and noise."""
+def grid(sizes: list[int], say: Callable[[str], None], out: Path) -> list[dict[str, object]]:
+    """The table: every solver on every size, dimension and noise; written to grid.json after every cell."""
     lines: list[dict[str, object]] = []
     for n in sizes:
         for d in DIMENSIONS:
@@ -236,6 +236,7 @@ def grid(sizes: list[int], say: Callable[[str], None]) -> list[dict[str, object]
                     say(f"  {line.solver:24s} {bound}{line.seconds:10.3f} s  {line.sweeps:6d} sweeps  error {line.error:8.1e}  "
                         f"peak {line.megabytes:7.0f} MB  ratio {line.seconds / mine.seconds:9.1f}")  # fmt: skip
                     lines.append({"n": n, "d": d, "noise": fraction, "plain_sweeps": sweeps, **line.__dict__})
+                (out / "grid.json").write_text(json.dumps(lines, indent=1))
     return lines
 
 
@@ -308,8 +309,7 @@ def main() -> None:
     if not chosen or "grid" in chosen:
         say("\n== grid: seconds to an L1 error of 1e-6 on both marginals")
         sizes = [int(size) for size in asked.sizes.split(",") if size]
-        lines = grid(sizes or [1000, 2000, 5000] + ([10_000, 20_000] if asked.large else []), say)
-        (asked.out / "grid.json").write_text(json.dumps(lines, indent=1))
+        lines = grid(sizes or [1000, 2000, 5000] + ([10_000, 20_000] if asked.large else []), say, asked.out)
         summarise(lines, say)
         sections.picture(lines, asked.out / "time_against_n.png")
     say(f"\nWritten to {asked.out}/")
