@@ -256,7 +256,7 @@ def picture(lines: list[dict[str, object]], path: Path) -> None:
     """Time against n, one line a solver, for noise 0.02 in each dimension."""
     from matplotlib.figure import Figure
 
-    figure = Figure(figsize=(9.0, 3.2), layout="constrained")
+    figure = Figure(figsize=(9.0, 3.5), layout="constrained")
     axes = figure.subplots(1, len(study.DIMENSIONS), sharey=True)
     styles = {
         "ensembles": ("-", "o", "black"),
@@ -276,5 +276,6 @@ def picture(lines: list[dict[str, object]], path: Path) -> None:
         ax.set_xlabel("particles in each cloud")
         ax.set_title(f"{d} dimensions", fontsize=9)
     axes[0].set_ylabel("seconds to 1e-6")
-    axes[0].legend(frameon=False, fontsize=7)
+    handles, labels = axes[0].get_legend_handles_labels()
+    figure.legend(handles, labels, loc="outside lower center", ncols=len(labels), frameon=False, fontsize=8)
     figure.savefig(path, dpi=200)
