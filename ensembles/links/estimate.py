@@ -24,10 +24,11 @@ from ..schrodinger.clusters import sum_clusters
 from .candidates import LinkOptions, linked_posterior, messages_of_all_pairs
 from .estimated_prior import PriorEstimate
 from .families import PriorFamily
-from .frames import loner_weights, require_same_particles
+from .frames import loner_weights, regularity, require_same_particles
 from .law import link_law
 
 if TYPE_CHECKING:
+    from ..priors.base import LinearGaussianPrior
     from ..priors.box import Box
     from ..snapshots.series import SnapshotSeries
 
@@ -39,6 +40,9 @@ _SCAN = (16.0, 6.0, 2.5, 1.0)  # times a lower bound; from the top, where messag
 _REACH = 1.2  # how far a free parameter may go in one search: a wild first step would leave all links behind
 _RECENTRED = 8
 _CORRECTIONS = 6
+_CROWD = 20  # particles from which crowding is looked at
+_KEPT_APART = 1.4  # times the nearest distance of independent positions; 1.7 in liquid argon
+_CROWDED = 0.2  # noise length over spacing
 _CURVATURE_HOLDS = 0.15  # change of a free parameter over which the curvature is not computed anew
 
 
@@ -216,7 +220,8 @@ def estimate_prior(
     Warns
     -----
     RuntimeWarning
-        Where the evidence has no clear maximum: then the frames do not tell the parameter.
+        Where the evidence has no clear maximum: then the frames do not tell the parameter. Where particles keep apart and are
+        crowded against their noise, as all atoms of a liquid: then its maximum can be in a wrong place, with a small error.
 
     Examples
     --------
@@ -259,7 +264,25 @@ def estimate_prior(
             RuntimeWarning,
             stacklevel=2,
         )
+    _warn_of_crowding(series, estimate.prior)
     return estimate
+
+
+def _warn_of_crowding(series: SnapshotSeries, prior: LinearGaussianPrior) -> None:
+    """The evidence takes particles to pass through one another, which crowded ones that keep apart do not."""
+    if series.counts.min() < _CROWD:
+        return
+    index, spacing = regularity(series.clouds[0], prior.box)
+    noise = prior.transition(float(np.diff(series.times).min()), series.dimension).covariance
+    reach = float(np.sqrt(np.diag(noise).mean()))
+    if index > _KEPT_APART and reach > _CROWDED * spacing:
+        warnings.warn(
+            f"the particles keep apart and are crowded; nearest neighbours lie {index:.2f} times as far as those of independent "
+            f"positions, and the noise length {reach:.3g} is {reach / spacing:.2f} of the spacing; the evidence takes particles "
+            "to move independently, and the estimate can be far off: use a shorter gap, or tag a part of the particles",
+            RuntimeWarning,
+            stacklevel=3,
+        )
 
 
 @dataclass(frozen=True, eq=False)

@@ -6,14 +6,17 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
+from scipy.spatial import cKDTree
+from scipy.special import gamma
 
 from .. import checks
 from ..priors.base import LinearGaussianPrior
 
 if TYPE_CHECKING:
+    from ..priors.box import Box
     from ..snapshots.series import SnapshotSeries
 
-__all__ = ["LonerWeights", "loner_weights", "require_same_particles"]
+__all__ = ["LonerWeights", "loner_weights", "regularity", "require_same_particles"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -104,3 +107,28 @@ def _volume(series: SnapshotSeries, k: int, prior: LinearGaussianPrior) -> float
             f"the volume of the frames is 0; axis {int(np.argmin(spans))} has no extent; give a birth_density"
         )
     return float(np.prod(spans))
+
+
+def regularity(cloud: np.ndarray, box: Box | None) -> tuple[float, float]:
+    """Mean distance to the nearest neighbour over that of independent positions, and the spacing (volume / n)^(1/d).
+
+    Of a homogeneous Poisson process the mean distance is Γ(1 + 1/d) (volume / (n V_d))^(1/d), V_d the volume of the unit
+    ball (Clark and Evans 1954 in the plane; from memory). Near 1 where particles do not feel one another, larger where they
+    keep apart, smaller in clouds that are denser in the middle.
+    """
+    n, d = cloud.shape
+    periods = np.zeros(d)
+    lengths = np.ptp(cloud, axis=0) * (n + 1) / (n - 1)
+    if box is not None:
+        closed, periodic = (
+            np.array([kind in kinds for kind in box.boundary]) for kinds in (("periodic", "reflecting"), ("periodic",))
+        )
+        lengths = np.where(closed, box.lengths, lengths)
+        periods = np.where(periodic, box.lengths, 0.0)
+        cloud = cloud - np.where(closed, box.lower, 0.0)
+        cloud = np.where(periodic, np.minimum(cloud, np.nextafter(box.lengths, 0.0)), cloud)
+    tree = cKDTree(cloud, boxsize=periods)
+    nearest = float(tree.query(tree.data, k=2)[0][:, 1].mean())
+    spacing = float(np.prod(lengths) / n) ** (1.0 / d)
+    ball = np.pi ** (d / 2) / gamma(d / 2 + 1.0)
+    return nearest / (gamma(1.0 + 1.0 / d) * spacing * ball ** (-1.0 / d)), spacing
