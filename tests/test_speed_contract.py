@@ -1,10 +1,12 @@
 """What speed must not change: answers, memory, warm starts, interruption, caches. Seconds are in scripts/benchmark."""
 
 import os
+import shutil
 import signal
 import subprocess
 import sys
 import time
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -169,6 +171,32 @@ def test_a_new_cache_is_announced_once(tmp_path):
     )
     assert "compiling the loops for this machine: once after installation" in first.stderr
     assert "compiling" not in second.stderr
+
+
+def test_compiled_code_is_not_kept_when_a_function_that_it_calls_changed(tmp_path):
+    # A copy of the loops, of which a sweep is cached; then a file is changed that holds only what the sweep calls.
+    folder = tmp_path / "ensembles"
+    shutil.copytree(Path(ensembles.__file__).parent, folder, ignore=shutil.ignore_patterns("__pycache__"))
+    command = (
+        "import numpy as np; from ensembles.kernels.streamed import StreamedKernel; "
+        "kernel = StreamedKernel(np.ones((40, 5)), np.zeros((3, 5))); "
+        "print(float(kernel.sweep(np.zeros(40), np.zeros(3), np.zeros(40), 1.0).row_excess[0]))"
+    )
+
+    def excess():
+        environment = {**os.environ, "PYTHONPATH": str(tmp_path), "NUMBA_CACHE_DIR": str(tmp_path / "cache")}
+        run = subprocess.run(
+            [sys.executable, "-c", command], capture_output=True, text=True, env=environment, cwd=tmp_path, check=True
+        )
+        return float(run.stdout)
+
+    assert_allclose(excess(), np.log(3.0) - 2.5, rtol=1e-12)
+    file = folder / "kernels" / "compiled_tiles.py"
+    source = file.read_text()
+    changed = source.replace("tile[j] = (p + a) + ", "tile[j] = (p + a) + 1.0 + ")
+    assert changed != source
+    file.write_text(changed)
+    assert_allclose(excess(), np.log(3.0) - 1.5, rtol=1e-12)
 
 
 def test_interruption_returns_control_and_leaves_no_thread():

@@ -14,6 +14,7 @@ from __future__ import annotations
 import logging
 import math
 from collections.abc import Callable
+from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -35,10 +36,26 @@ def compiled(function: Callable[..., Any]) -> Callable[..., Any]:
     """Compile without the interpreter lock, cached on disk where a cache folder can be written, else in memory."""
     try:
         dispatcher = numba.njit(nogil=True, fastmath=FAST, cache=True)(function)
+        _depend_on_all_sources(dispatcher)
     except (RuntimeError, OSError):  # numba found no folder for its cache
         dispatcher = numba.njit(nogil=True, fastmath=FAST)(function)
     _dispatchers.append(dispatcher)
     return dispatcher
+
+
+def _depend_on_all_sources(dispatcher: Any) -> None:
+    """Compile again when any file of this folder changed: numba looks at the file of the function alone, and would keep code
+    into which older versions of the functions that it calls were compiled."""
+    file = getattr(getattr(dispatcher, "_cache", None), "_cache_file", None)
+    if hasattr(file, "_source_stamp"):
+        file._source_stamp = (file._source_stamp, _sources())
+
+
+@cache
+def _sources() -> tuple[tuple[str, float, int], ...]:
+    """Name, time and size of every source file beside this one."""
+    found = [(path.name, path.stat()) for path in sorted(Path(__file__).parent.glob("*.py"))]
+    return tuple((name, stat.st_mtime, stat.st_size) for name, stat in found)
 
 
 def announce_compilation() -> None:
