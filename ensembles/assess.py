@@ -84,15 +84,12 @@ def assess_study(study: Study, *, seed: int, say: Say) -> Assessment:
     from .assessment.surprise import prior_check
     from .assessment.uncertainty import bootstrap
     from .bridges.fit import fit_bridge
-    from .lineage.growth_estimate import estimate_growth
+    from .lineage_results import series_with_growth
 
     say("Reading the snapshots", 0.0)
     original, prior, asked = study.read_original(), study.build_prior(), study.holdout
     scaling = study.fit_scaling(original)
-    series = scaling.scale(original)
-    if study.growth is not None and study.growth.estimate:
-        say("Estimating growth", 0.0)
-        series = estimate_growth(series, prior, uncertainty=study.growth.uncertainty or None, rng=study.seed).series
+    series, _ = series_with_growth(study, scaling.scale(original), prior, say)
     checks.generator(seed)
     if study.noise.levels:
         level_grid(prior, study.noise.levels, "diffusion")  # refused before any work is done

@@ -1,7 +1,8 @@
-"""What `ensembles solve` writes of lineages where the study names a label, and of growth where it names rates."""
+"""What `ensembles solve` writes of lineages where the study names a label, and of growth where it names or asks for rates."""
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -11,16 +12,34 @@ import numpy as np
 from . import checks, writing
 
 if TYPE_CHECKING:
-    from .bridges.bridge import Bridge
+    import pandas
 
-__all__ = ["label_rows", "write_lineage"]
+    from .bridges.bridge import Bridge
+    from .priors.base import LinearGaussianPrior
+    from .snapshots.series import SnapshotSeries
+    from .study import Study
+
+__all__ = ["series_with_growth", "write_lineage"]
 
 _LARGEST_REPEATED = 4_000_000  # pairs of particles in all gaps up to which resampling is done unasked
 
 
+def series_with_growth(
+    study: Study, series: SnapshotSeries, prior: LinearGaussianPrior, say: Callable[[str, float], None]
+) -> tuple[SnapshotSeries, tuple[str, ...]]:
+    """The series with the growth rates that the study asks to be estimated, and a sentence on them; as it is otherwise."""
+    if study.growth is None or not study.growth.estimate:
+        return series, ()
+    from .lineage.growth_estimate import estimate_growth
+
+    say("Estimating growth", 0.0)
+    found = estimate_growth(series, prior, uncertainty=study.growth.uncertainty or None, rng=study.seed)
+    return found.series, (f"growth was estimated from the snapshots under the prior: {found}",)
+
+
 def write_lineage(
     bridge: Bridge, folder: Path, *, repeats: int, seed: int, annotated: bool
-) -> tuple[list[tuple[str, str]], list[str]]:
+) -> tuple[list[tuple[str, str]], list[str], list[dict[str, Any]]]:
     """Write lineage tables and pictures into `folder`.
 
     Parameters
@@ -32,13 +51,14 @@ def write_lineage(
 
     Returns
     -------
-    pictures as (file name, caption), and sentences worth knowing.
+    pictures as (file name, caption), sentences worth knowing, and the rows by label for the page and summary.json.
     """
-    from .lineage.growth import masses
+    from .lineage.growth import label_summary, masses
     from .report import lineage_tables as tables
     from .report.figures.lineage import save_lineage_figures
 
     series, notes, pictures = bridge.series, [], []
+    by_label = None if series.labels is None else label_summary(bridge)
     if series.growth is not None:
         growth = tables.growth_table(bridge)
         writing.write_table(folder / "growth.csv", growth)
@@ -50,23 +70,20 @@ def write_lineage(
     labelled = [k for k in range(len(series)) if series.labels is not None and (series.labels[k] != "").any()]
     if series.labels is not None and len(labelled) < 2:
         notes.append("labels are missing at all times but one: no lineage tables were written")
-    if len(labelled) >= 2:
+    if by_label is not None and len(labelled) >= 2:
+        writing.write_table(folder / "labels.csv", by_label)
         found, sentences = _write_labels(bridge, folder, labelled, repeats, seed)
         pictures, notes = found + pictures, notes + sentences
         if annotated and len(labelled) == len(series):
             from .lineage.annotate import annotate_cells, save_cells
 
             save_cells(annotate_cells(bridge), folder / "cells.h5ad")
-    return pictures, notes
+    return pictures, notes, [] if by_label is None else _plain_rows(by_label)
 
 
-def label_rows(bridge: Bridge) -> list[dict[str, Any]]:
-    """Rows of `label_summary` for the page and summary.json, None for what is not finite; none without labels."""
-    from .lineage.growth import label_summary
-
-    if bridge.series.labels is None:
-        return []
-    rows = label_summary(bridge).to_dict(orient="records")
+def _plain_rows(table: pandas.DataFrame) -> list[dict[str, Any]]:
+    """Rows ready for JSON: None for what is not finite."""
+    rows = table.to_dict(orient="records")
     return [
         {str(k): None if isinstance(v, float) and not np.isfinite(v) else v for k, v in row.items()} for row in rows
     ]
@@ -77,7 +94,6 @@ def _write_labels(
 ) -> tuple[list[tuple[str, str]], list[str]]:
     from .lineage.fates import label_flows
     from .lineage.features import CAVEAT, early_features, feature_trends
-    from .lineage.growth import label_summary
     from .lineage.labels import label_notes
     from .lineage.uncertainty import LineageProbabilities, lineage_errors
     from .report import lineage_tables as tables
@@ -85,7 +101,6 @@ def _write_labels(
 
     series, notes = bridge.series, list(label_notes(bridge.series))
     first, last = labelled[0], labelled[-1]
-    writing.write_table(folder / "labels.csv", label_summary(bridge))
     writing.write_table(folder / "descendants.csv", tables.descendants_table(bridge, last))
     writing.write_table(folder / "ancestors.csv", tables.ancestors_table(bridge, first))
     flows = label_flows(bridge) if any(b - a == 1 for a, b in pairwise(labelled)) else None

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from . import __version__, writing
-from .lineage_results import label_rows, write_lineage
+from .lineage_results import series_with_growth, write_lineage
 from .overview import verdicts
 from .study import Study
 
@@ -46,7 +46,6 @@ def fit_study(study: Study, *, say: Say) -> Bridge:
         If a gap does not reach the tolerance.
     """
     from .bridges.fit import SolverOptions, fit_bridge
-    from .lineage.growth_estimate import estimate_growth
     from .schrodinger.solve import SWEEP_LIMIT
 
     writing.require_table_format(f".{study.output.format}")
@@ -58,11 +57,7 @@ def fit_study(study: Study, *, say: Say) -> Bridge:
         say(f"Gap {gap + 1} of {gaps}: sweep {state.sweep}, L1 error {state.error:.2g}", _SOLVING * gap / gaps)
 
     prior = study.build_prior()
-    notes: tuple[str, ...] = ()
-    if study.growth is not None and study.growth.estimate:
-        say("Estimating growth", 0.0)
-        found = estimate_growth(series, prior, uncertainty=study.growth.uncertainty or None, rng=study.seed)
-        series, notes = found.series, (f"growth was estimated from the snapshots under the prior: {found}",)
+    series, notes = series_with_growth(study, series, prior, say)
     bridge = fit_bridge(
         series,
         prior,
@@ -102,13 +97,13 @@ def write_results(study: Study, bridge: Bridge, folder: Path, *, seed: int, say:
     say("Drawing pictures", 0.85)
     figures = save_figures(bridge, folder, paths=paths, rng=picture_stream)
     say("Following lineages", 0.9)
-    lineages, sentences = write_lineage(
+    lineages, sentences, labels = write_lineage(
         bridge, folder, repeats=study.output.repeats, seed=seed, annotated=study.data_file.suffix == ".h5ad"
     )
     figures += lineages
     summary = _summary(study, bridge, seed, back)
     summary["notes"] += [*bridge.notes, *sentences, *_scaling_notes(back)]
-    summary["labels"] = label_rows(bridge)
+    summary["labels"] = labels
     write_page(folder, summary, figures)
     writing.write_text(folder / "study.toml", study.text)
     # Last: the folder is known as a complete output by this file.

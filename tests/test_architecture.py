@@ -36,9 +36,9 @@ MAY_IMPORT = {
     "link_results": FOUNDATION | {"study", "links", "report", "snapshots"},
     "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems", "study_links", "study_tables"},
     "overview": FOUNDATION | {"snapshots", "priors", "report"},
-    "results": FOUNDATION | {"study", "overview", "report", "lineage_results", "bridges", "schrodinger", "lineage"},
-    "lineage_results": FOUNDATION | {"lineage", "report", "bridges"},
-    "assess": FOUNDATION | {"study", "report", "assessment", "bridges", "lineage"},
+    "results": FOUNDATION | {"study", "overview", "report", "lineage_results", "bridges", "schrodinger"},
+    "lineage_results": FOUNDATION | {"lineage", "report", "bridges", "study", "priors", "snapshots"},
+    "assess": FOUNDATION | {"study", "report", "assessment", "bridges", "lineage_results"},
     "cli": FOUNDATION
     | {"study", "overview", "results", "link_results", "assess", "report", "bridges", "snapshots", "priors"},
     "__main__": {"cli"},
