@@ -42,9 +42,8 @@ LIMIT = 4.0  # seconds that one POT run may take before it is extrapolated
 SLOW = ("POT sinkhorn_log", "POT sinkhorn_stabilized")
 SLOW_MATRICES = 8  # that these hold at once, about; left out where the machine has not the memory
 MACHINE = os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES")
-_measured: dict[
-    tuple[str, int], tuple[float, float]
-] = {}  # set-up and seconds a sweep of slow variants on large clouds
+# Of the log-domain solver on large clouds, by size: set-up and seconds a sweep.
+_measured: dict[tuple[str, int], tuple[float, float]] = {}
 
 
 def clouds(n: int, d: int, seed: int = 0) -> tuple[np.ndarray, np.ndarray]:
@@ -175,10 +174,11 @@ def lazy_run(x: np.ndarray, y: np.ndarray, regularisation: float) -> Callable[[i
 def run_pot(name: str, run: Callable[[int], tuple[np.ndarray, np.ndarray]], sweeps: int | None, most: int,
             whitened: tuple[np.ndarray, np.ndarray]) -> Timed:  # fmt: skip
     """Time one POT variant for the number of sweeps it needs; failures are reported as such."""
-    few, more = (2, 4) if name in ("POT sinkhorn_log", "POT lazy") else (10, 30)
-    few, more = (1, 2) if few == 2 and len(whitened[0]) > 10_000 else (few, more)
+    n = len(whitened[0])
+    few, more = 10, 30
+    if name in ("POT sinkhorn_log", "POT lazy"):
+        few, more = (1, 2) if n > 10_000 else (2, 4)
     wanted = sweeps if sweeps is not None else most
-    n = whitened[0].shape[0]
     if (name, n) in _measured:
         set_up, per_sweep = _measured[name, n]
         return Timed(name, set_up + wanted * per_sweep, wanted, float("nan"), float("nan"), extrapolated=True)
