@@ -176,6 +176,9 @@ def test_independent_positions_have_regularity_one(dimension):
     side = np.arange(6) * 8.0 / 6 - 3.0
     lattice = np.stack(np.meshgrid(*[side] * dimension), axis=-1).reshape(-1, dimension)
     assert regularity(lattice, box)[0] > 1.6
+    # An axis along which nothing lies apart does not count.
+    flat = np.column_stack([lattice, np.full(len(lattice), 7.0)])
+    assert_allclose(regularity(flat, None), regularity(lattice, None), rtol=1e-12)
 
 
 def test_frames_that_tell_nothing_say_so():

@@ -99,7 +99,11 @@ def test_periodic_frames_give_the_same_answer_wrapped():
 def test_messages():
     with pytest.raises(InputError, match=r"correlation must lie in \[0, 1\); it is 1.0; use 0"):
         ensembles.LinkOptions(correlation=1.0)
+    with pytest.raises(InputError, match="move independently; links.correlation is 0.2; give it to link_particles"):
+        ensembles.EstimateOptions(links=ensembles.LinkOptions(correlation=0.2))
     series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [np.arange(14.0)[:, None], np.arange(14.0)[:, None]])
     links = ensembles.link_particles(series, PRIOR)[0]
     with pytest.raises(InputError, match=r"too few neighbours; \d+ pair\(s\) of linked particles where 40 are needed"):
         ensembles.neighbour_correlation(links, series, PRIOR, neighbours=2)
+    with pytest.raises(InputError, match=r"too few neighbours; 0 pair\(s\)"):
+        ensembles.neighbour_correlation([], series, PRIOR)

@@ -97,7 +97,9 @@ def neighbour_correlation(
         _gap_numbers(gap, series, prior, neighbours, localisation)
         for gap in ([links] if isinstance(links, ParticleLinks) else links)
     ]
-    together, apart, exchanged, group = (np.concatenate(column) for column in zip(*parts))
+    together, apart, exchanged, group = (
+        (np.concatenate(column) for column in zip(*parts)) if parts else [np.empty(0)] * 4
+    )
     if together.size < _FEWEST:
         raise checks.InputError(
             f"too few neighbours; {together.size} pair(s) of linked particles where {_FEWEST} are needed; use larger frames, or "

@@ -54,7 +54,8 @@ class EstimateOptions:
     ----------
     rate : "scalar" or "axis", of an Ornstein-Uhlenbeck prior.
     detection, birth_density : as in `link_particles`.
-    links : how the evidence is computed; `cluster` = 0 leaves belief propagation uncorrected.
+    links : how the evidence is computed; `cluster` = 0 leaves belief propagation uncorrected. The evidence is that of
+        particles that move independently: a `correlation` is refused.
     gradient_tolerance : largest derivative of the log evidence per particle where the search ends.
     iteration_limit : steps of the search.
     """
@@ -65,6 +66,13 @@ class EstimateOptions:
     links: LinkOptions = field(default_factory=lambda: LinkOptions(tolerance=2e-5, iteration_limit=3_000, cluster=8))
     gradient_tolerance: float = 3e-4
     iteration_limit: int = 60
+
+    def __post_init__(self) -> None:
+        if self.links.correlation:
+            raise checks.InputError(
+                f"an estimate takes particles to move independently; links.correlation is {self.links.correlation:g}; give it to "
+                "link_particles, and 0 here"
+            )
 
 
 @dataclass(frozen=True, eq=False)

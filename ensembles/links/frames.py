@@ -6,11 +6,12 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.spatial import cKDTree
 from scipy.special import gamma
 
 from .. import checks
+from ..kernels.images import OPEN, PERIODIC
 from ..priors.base import LinearGaussianPrior
+from .law import wrapped_tree
 
 if TYPE_CHECKING:
     from ..priors.box import Box
@@ -97,11 +98,7 @@ def _density(value: float) -> float:
 
 
 def _volume(series: SnapshotSeries, k: int, prior: LinearGaussianPrior) -> float:
-    both = np.concatenate([series.clouds[k], series.clouds[k + 1]])
-    spans = np.ptp(both, axis=0)
-    if prior.box is not None:
-        closed = np.array([kind != "open" for kind in prior.box.boundary])
-        spans = np.where(closed, prior.box.lengths, spans)
+    spans = _between_walls(np.ptp(np.concatenate([series.clouds[k], series.clouds[k + 1]]), axis=0), prior.box)
     if not (spans > 0.0).all():
         raise checks.InputError(
             f"the volume of the frames is 0; axis {int(np.argmin(spans))} has no extent; give a birth_density"
@@ -109,26 +106,29 @@ def _volume(series: SnapshotSeries, k: int, prior: LinearGaussianPrior) -> float
     return float(np.prod(spans))
 
 
+def _between_walls(spans: np.ndarray, box: Box | None) -> np.ndarray:
+    """Extents (d,) of particles, those of the box on axes that have walls."""
+    if box is None:
+        return spans
+    return np.where([kind != OPEN for kind in box.boundary], box.lengths, spans)
+
+
 def regularity(cloud: np.ndarray, box: Box | None) -> tuple[float, float]:
     """Mean distance to the nearest neighbour over that of independent positions, and the spacing (volume / n)^(1/d).
 
     Of a homogeneous Poisson process the mean distance is Γ(1 + 1/d) (volume / (n V_d))^(1/d), V_d the volume of the unit
     ball (Clark and Evans 1954 in the plane; from memory). Near 1 where particles do not feel one another, larger where they
-    keep apart, smaller in clouds that are denser in the middle.
+    keep apart, smaller in clouds that are denser in the middle. Axes along which nothing lies apart do not count.
     """
-    n, d = cloud.shape
-    periods = np.zeros(d)
-    lengths = np.ptp(cloud, axis=0) * (n + 1) / (n - 1)
+    n = len(cloud)
+    lengths = _between_walls(np.ptp(cloud, axis=0) * (n + 1) / (n - 1), box)
+    extended = lengths > 0.0
+    d = int(np.count_nonzero(extended))
+    periods = np.zeros(extended.size)
     if box is not None:
-        closed, periodic = (
-            np.array([kind in kinds for kind in box.boundary]) for kinds in (("periodic", "reflecting"), ("periodic",))
-        )
-        lengths = np.where(closed, box.lengths, lengths)
-        periods = np.where(periodic, box.lengths, 0.0)
-        cloud = cloud - np.where(closed, box.lower, 0.0)
-        cloud = np.where(periodic, np.minimum(cloud, np.nextafter(box.lengths, 0.0)), cloud)
-    tree = cKDTree(cloud, boxsize=periods)
+        periods = np.where([kind == PERIODIC for kind in box.boundary], box.lengths, 0.0)
+    tree = wrapped_tree(cloud, periods)
     nearest = float(tree.query(tree.data, k=2)[0][:, 1].mean())
-    spacing = float(np.prod(lengths) / n) ** (1.0 / d)
+    spacing = float(np.prod(lengths[extended]) / n) ** (1.0 / d)
     ball = np.pi ** (d / 2) / gamma(d / 2 + 1.0)
     return nearest / (gamma(1.0 + 1.0 / d) * spacing * ball ** (-1.0 / d)), spacing

@@ -10,7 +10,7 @@ from scipy.spatial import cKDTree
 from ..kernels.images import OPEN, PERIODIC, AxisWalls, log_box_kernel
 from ..priors.base import LinearGaussianPrior, Transition
 
-__all__ = ["LinkLaw", "link_law"]
+__all__ = ["LinkLaw", "link_law", "wrapped_tree"]
 
 _CHUNK = 4_000_000
 
@@ -47,23 +47,27 @@ class LinkLaw:
 
     def trees(self) -> tuple[cKDTree, cKDTree]:
         """Search trees of both clouds, by the distance to the nearest image."""
-        if self.walls is None:
-            return cKDTree(self.sources), cKDTree(self.targets)
-        periods = np.array([wall.length if wall.boundary == PERIODIC else 0.0 for wall in self.walls])
-        wrapped = periods > 0.0
-        clouds = []
-        for cloud in (self.sources, self.targets):
-            points = cloud.copy()
-            points[:, wrapped] = np.mod(points[:, wrapped], periods[wrapped])
-            # The remainder can round up to the period itself, which the tree refuses.
-            points[:, wrapped] = np.where(points[:, wrapped] >= periods[wrapped], 0.0, points[:, wrapped])
-            clouds.append(cKDTree(points, boxsize=periods))
-        return clouds[0], clouds[1]
+        periods = np.zeros(self.sources.shape[1])
+        if self.walls is not None:
+            periods = np.array([wall.length if wall.boundary == PERIODIC else 0.0 for wall in self.walls])
+        return wrapped_tree(self.sources, periods), wrapped_tree(self.targets, periods)
 
     def moved_cost(self) -> np.ndarray:
         """½ squared distance to the nearest target for every source, in units of the noise (n,)."""
         trees = self.trees()
         return 0.5 * trees[1].query(trees[0].data)[0] ** 2
+
+
+def wrapped_tree(points: np.ndarray, periods: np.ndarray) -> cKDTree:
+    """Search tree of points (n, d) by the distance to the nearest image; a period of 0 is an axis without images."""
+    wrapped = periods > 0.0
+    if not wrapped.any():
+        return cKDTree(points)
+    points = points.copy()
+    points[:, wrapped] = np.mod(points[:, wrapped], periods[wrapped])
+    # The remainder can round up to the period itself, which the tree refuses.
+    points[:, wrapped] = np.where(points[:, wrapped] >= periods[wrapped], 0.0, points[:, wrapped])
+    return cKDTree(points, boxsize=periods)
 
 
 def link_law(
