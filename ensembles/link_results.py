@@ -18,6 +18,7 @@ if TYPE_CHECKING:
 
     from .links.estimated_prior import PriorEstimate
     from .links.particle_links import ParticleLinks
+    from .priors.box import Box
     from .snapshots.series import SnapshotSeries
 
 __all__ = ["write_links"]
@@ -37,6 +38,7 @@ def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]
     InputError
         If the frames cannot hold the same particles.
     """
+    from .links.candidates import LinkOptions
     from .links.chain import chain_links
     from .links.estimate import EstimateOptions, estimate_prior
     from .links.link import link_particles
@@ -56,11 +58,12 @@ def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]
         links = link_particles(
             series, prior, detection=settings.detection, birth_density=settings.birth_density,
             localisation=settings.localisation,
+            options=LinkOptions(correlation=settings.correlation, hold_spread=settings.hold_spread),
         )  # fmt: skip
         chain = chain_links(series, prior, links)
         said += list(dict.fromkeys(str(w.message) for w in caught))
     say("Writing tables", 0.7)
-    writing.write_table(folder / "links.csv", _links_table(series, links, settings.alternatives))
+    writing.write_table(folder / "links.csv", _links_table(series, links, prior.box, settings.alternatives))
     writing.write_table(folder / "particles.csv", _particles_table(series, links))
     writing.write_table(folder / "estimate.csv", estimate.to_frame())
     times = np.union1d(np.linspace(series.times[0], series.times[-1], study.output.path_times), series.times)
@@ -75,8 +78,9 @@ def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]
     return sorted(path.name for path in folder.iterdir())
 
 
-def _links_table(series: SnapshotSeries, links: list[ParticleLinks], count: int) -> pandas.DataFrame:
-    """The most probable later particles of every particle, with the distance to each and whether it is assigned."""
+def _links_table(series: SnapshotSeries, links: list[ParticleLinks], box: Box | None, count: int) -> pandas.DataFrame:
+    """The most probable later particles of every particle, with the displacement to each (to the nearest image on periodic
+    axes) and whether it is assigned."""
     import pandas
 
     unit = f" [{series.length_unit}]" if series.length_unit else ""
@@ -86,6 +90,7 @@ def _links_table(series: SnapshotSeries, links: list[ParticleLinks], count: int)
         k = found.source
         source, target = table["source"].to_numpy(), table["target"].to_numpy()
         moved = series.clouds[k + 1][target] - series.clouds[k][source]
+        moved = moved if box is None else box.shortest(moved)
         columns: dict[str, Any] = {
             "gap": k, "source_row": series.rows[k][source], "target_row": series.rows[k + 1][target],
             "rank": table["rank"], "probability": table["probability"], "assigned": found.assignment[source] == target,
@@ -145,6 +150,7 @@ def _summary(
             "log_evidence": link.log_evidence,
             "log_evidence_error": link.log_evidence_error,
             "method": link.method,
+            "variance_factor": link.variance_factor,
             "certificate": {
                 "converged": link.certificate.converged,
                 "message_change": link.certificate.propagation.message_change,

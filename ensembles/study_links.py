@@ -21,7 +21,8 @@ _Boundaries = Annotated[tuple[str, ...], Field(strict=False)] | str
 class LinksTable(BaseModel):
     """[links], for identity = "same": detection probability, birth density, localisation error, and which prior links.
 
-    `prior` is "given" (that of [prior]) or "estimated" (its parameters from the unlabelled frames themselves).
+    `prior` is "given" (that of [prior]) or "estimated" (its parameters from the unlabelled frames themselves). `correlation`
+    (of neighbours' displacements) and `hold_spread` are those of `LinkOptions`, for particles that do not move independently.
     """
 
     model_config = ConfigDict(frozen=True, extra="forbid", strict=True)
@@ -29,6 +30,8 @@ class LinksTable(BaseModel):
     birth_density: float | None = Field(default=None, gt=0)
     localisation: float = Field(default=0.0, ge=0)
     prior: Literal["given", "estimated"] = "given"
+    correlation: float = Field(default=0.0, ge=0, lt=1)
+    hold_spread: bool = False
     alternatives: int = Field(default=3, ge=1)
 
 

@@ -37,7 +37,8 @@ class Draw:
     ----------
     true, estimated, error : D in Å²/ps from the labels (mean squared displacement), from unlabelled frames, and its
         standard error; identified is false where the frames do not tell D.
-    together : correlation of neighbours' displacements, measured without labels, that the links allow for.
+    factor : of the variance that told links apart: 1 - c, c the correlation of neighbours' displacements measured without
+        labels, or that of a held spread.
     right : share of right links by method: most probable (least squares), most expected, nearest neighbour.
     probability, linked : of pooled links: what was said, and whether it is so, for links, propagation, coupling.
     log_score : mean log probability of the true link by method.
@@ -49,7 +50,7 @@ class Draw:
     estimated: float
     error: float
     identified: bool
-    together: float
+    factor: float
     entropy: float
     right: dict[str, float]
     pooled: dict[str, tuple[np.ndarray, np.ndarray]]
@@ -63,35 +64,45 @@ def read_positions() -> tuple[np.ndarray, np.ndarray]:
 
 
 def study(
-    count: int, steps: int, seeds: Sequence[int], *, wrapped: bool = False, independent: bool = False
+    count: int,
+    steps: int,
+    seeds: Sequence[int],
+    *,
+    wrapped: bool = False,
+    independent: bool = False,
+    diffusion: float | None = None,
 ) -> list[Draw]:
     """For every seed tag `count` atoms, forget which is which, and compare `steps` frames later.
 
     A first look at the links of all draws gives the correlation of neighbours' displacements, as a film would, whose labels
     are not known either; where it stands out from its error, the links are made again with it. `wrapped` keeps only the
-    place in the box; `independent` replaces the atoms' moves by independent Gaussian ones.
+    place in the box; `independent` replaces the atoms' moves by independent Gaussian ones. With a `diffusion` known from
+    elsewhere, links are made with it, their spread held, and the estimate is only reported.
     """
-    looks = [_first_look(count, steps, seed, wrapped, independent) for seed in seeds]
+    looks = [_first_look(two_frames(count, steps, seed, wrapped=wrapped, independent=independent)) for seed in seeds]
+    if diffusion is not None:
+        known = [ensembles.Brownian(diffusion=diffusion, box=look.frames.box) for look in looks]
+        return [_compare(look, prior, ensembles.LinkOptions(hold_spread=True)) for look, prior in zip(looks, known)]
     found = np.array([look.correlation for look in looks])
     error = found.std(ddof=1) / np.sqrt(found.size) if found.size > 1 else np.inf
     together = float(found.mean()) if found.mean() > 2.0 * error else 0.0
-    return [_compare(look, together) for look in looks]
+    options = ensembles.LinkOptions(correlation=together)
+    return [_compare(look, look.estimate.prior, options) for look in looks]
 
 
 @dataclass(frozen=True)
-class Look:
-    """Two unlabelled frames, the prior estimated from them, and what the first links say of common motion."""
+class Frames:
+    """Two unlabelled frames; own: the row of each earlier particle in the later one; true: D by the labels, in Å²/ps."""
 
     series: ensembles.SnapshotSeries
     own: np.ndarray
     box: ensembles.Box | None
     gap: float
     true: float
-    estimate: PriorEstimate
-    correlation: float
 
 
-def _first_look(count: int, steps: int, seed: int, wrapped: bool, independent: bool) -> Look:
+def two_frames(count: int, steps: int, seed: int, *, wrapped: bool = False, independent: bool = False) -> Frames:
+    """Tag `count` atoms, and shuffle them in the frame `steps` later; `wrapped` and `independent` as for `study`."""
     positions, edges = read_positions()
     rng = np.random.default_rng(seed)
     tagged = rng.choice(positions.shape[1], count, replace=False)
@@ -106,23 +117,34 @@ def _first_look(count: int, steps: int, seed: int, wrapped: bool, independent: b
         box = ensembles.Box(np.zeros(3), edges)
         start, end = box.fold(start), box.fold(end)
     order = rng.permutation(count)
-    own = np.argsort(order)  # the row of each atom in the shuffled frame
     series = ensembles.SnapshotSeries.from_arrays([0.0, gap], [start, end[order]], units=UNITS)
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", RuntimeWarning)
-        estimate = ensembles.estimate_prior(series, "brownian", box=box)
-        links = ensembles.link_particles(series, estimate.prior)
-    correlation = ensembles.neighbour_correlation(links, series, estimate.prior).value
-    return Look(series, own, box, gap, true, estimate, correlation)
+    return Frames(series, np.argsort(order), box, gap, true)
 
 
-def _compare(look: Look, together: float) -> Draw:
-    series, own, box, gap, true, estimate = look.series, look.own, look.box, look.gap, look.true, look.estimate
+@dataclass(frozen=True)
+class Look:
+    """Two frames, the prior estimated from them, and what the first links say of common motion."""
+
+    frames: Frames
+    estimate: PriorEstimate
+    correlation: float
+
+
+def _first_look(frames: Frames) -> Look:
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", RuntimeWarning)
-        options = ensembles.LinkOptions(correlation=together)
-        links = ensembles.link_particles(series, estimate.prior, options=options)[0]
-    coupling = ensembles.fit_bridge(series, estimate.prior, tolerance=1e-4).coupling(0).matrix() * own.size
+        estimate = ensembles.estimate_prior(frames.series, "brownian", box=frames.box)
+        links = ensembles.link_particles(frames.series, estimate.prior)
+    return Look(frames, estimate, ensembles.neighbour_correlation(links, frames.series, estimate.prior).value)
+
+
+def _compare(look: Look, prior: ensembles.Brownian, options: ensembles.LinkOptions) -> Draw:
+    estimate, frames = look.estimate, look.frames
+    series, own, box = frames.series, frames.own, frames.box
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", RuntimeWarning)
+        links = ensembles.link_particles(series, prior, options=options)[0]
+    coupling = ensembles.fit_bridge(series, prior, tolerance=1e-4).coupling(0).matrix() * own.size
     count = own.size
     rows = np.arange(count)
     said = {"links": links.matrix(), "coupling": coupling}
@@ -145,8 +167,8 @@ def _compare(look: Look, together: float) -> Draw:
         shown = table > 1e-3
         pooled[name] = (table[shown], (own[:, None] == np.arange(count))[shown])
     return Draw(
-        count, gap, true, float(estimate.prior.diffusion), estimate.standard_errors["diffusion"], estimate.identified,
-        together, float(links.entropy.mean()), right, pooled, scores,
+        count, frames.gap, frames.true, float(estimate.prior.diffusion), estimate.standard_errors["diffusion"],
+        estimate.identified, links.variance_factor, float(links.entropy.mean()), right, pooled, scores,
     )  # fmt: skip
 
 
@@ -164,7 +186,7 @@ def reliability(draws: list[Draw], name: str, bins: int = 10) -> np.ndarray:
 def estimate_table(groups: dict[str, list[Draw]]) -> str:
     """Estimated against true diffusion coefficients, and accuracy, one line a group of draws."""
     lines = [
-        f"{'group':<22}{'D true':>9}{'D est.':>9}{'median |ratio-1|':>18}{'within 95 %':>13}{'told':>6}{'together':>10}"
+        f"{'group':<22}{'D true':>9}{'D est.':>9}{'median |ratio-1|':>18}{'within 95 %':>13}{'told':>6}{'factor':>10}"
         f"{'entropy/log n':>15}"
         f"{'most probable':>15}{'most expected':>15}{'nearest':>9}{'log score links':>17}{'propag.':>9}{'n pi':>9}{'nearest':>9}"
     ]
@@ -176,7 +198,7 @@ def estimate_table(groups: dict[str, list[Draw]]) -> str:
         lines.append(
             f"{name:<22}{np.median([d.true for d in draws]):>9.4f}{np.median([d.estimated for d in draws]):>9.4f}"
             f"{100 * np.median(np.abs(ratio - 1)):>16.1f} %{np.mean(np.abs(np.log(ratio)) < spread):>13.0%}"
-            f"{sum(d.identified for d in draws):>3}/{len(draws):<2}{np.mean([d.together for d in draws]):>10.3f}"
+            f"{sum(d.identified for d in draws):>3}/{len(draws):<2}{np.mean([d.factor for d in draws]):>10.3f}"
             f"{np.mean([d.entropy / np.log(d.count) for d in draws]):>15.2f}"
             f"{right['most probable']:>15.3f}{right['most expected']:>15.3f}{right['nearest']:>9.3f}"
             f"{scores['links']:>17.3f}{scores['propagation']:>9.3f}{scores['coupling']:>9.3f}{scores['nearest']:>9.3f}"
@@ -270,14 +292,59 @@ def argon(draws: int = 10) -> None:
     """Print the argon tables, a line as soon as its draws are done."""
     groups: dict[str, list[Draw]] = {}
     print("Argon with hidden labels; D in Å²/ps; medians over draws; shares of right links; mean log probability")
-    for count, steps, wrapped in [(n, k, False) for n in (50, 200, 1000) for k in (1, 3, 10)] + [(1000, 1, True)]:
-        name = f"{count} {'wrapped' if wrapped else 'atoms'}, {FRAME * steps:g} ps"
-        groups[name] = study(count, steps, range(draws), wrapped=wrapped)
+    for count, steps in [(n, k) for n in (50, 200, 1000) for k in (1, 3, 10)]:
+        name = f"{count} atoms, {FRAME * steps:g} ps"
+        groups[name] = study(count, steps, range(draws))
         table = estimate_table({name: groups[name]}).splitlines()
         print("\n".join(table if len(groups) == 1 else table[1:]), flush=True)
-        if steps == 10 or wrapped:
+        if steps == 10:
             chosen = [draw for draws in groups.values() for draw in draws]
             print(f"\nReliability of all links so far ({len(chosen)} draws)\n{reliability_table(chosen)}\n", flush=True)
+    liquid(draws)
+
+
+def liquid(draws: int = 10) -> None:
+    """All 1,000 atoms at their places in the periodic box: what their frames tell, and links by the D of 200 tagged atoms."""
+    print("Memory of the density: correlation of its modes between frames, all atoms in the box\n" + density_memory())
+    for steps in (1, 3):
+        tagged = float(np.median([draw.estimated for draw in study(200, steps, range(draws))]))
+        found = study(1000, steps, range(draws), wrapped=True, diffusion=tagged)
+        name = f"1000 wrapped, {FRAME * steps:g} ps"
+        print(f"\nLinks by D = {tagged:.4f}, from 200 tagged atoms without labels, spread held")
+        print(f"{estimate_table({name: found})}\n\nReliability\n{reliability_table(found)}\n", flush=True)
+
+
+def density_memory(largest: float = 2.6, width: float = 0.4) -> str:
+    """Correlation of density modes ρ_k between frames of the whole liquid, by wavenumber, with the value for independent moves.
+
+    Independent Gaussian moves give exp(-k² D t) at every k. What two frames tell of D without labels is in such correlations;
+    where all are 0, the places of one frame say nothing of those of the next.
+    """
+    positions, edges = read_positions()
+    order = np.arange(-int(largest * edges[0] / (2 * np.pi)) - 1, int(largest * edges[0] / (2 * np.pi)) + 2)
+    waves = np.stack(np.meshgrid(order, order, order, indexing="ij"), axis=-1).reshape(-1, 3)
+    k = np.linalg.norm(2.0 * np.pi * waves / edges, axis=1)
+    half = (waves @ [1e6, 1e3, 1.0] > 0) & (k < largest)  # of k and -k one is enough
+    modes = np.empty((len(positions), int(half.sum())), dtype=complex)
+    for row, frame in zip(modes, positions):
+        factors = np.exp(2j * np.pi * frame[:, :, None] / edges[:, None] * order)
+        modes_of_all = np.einsum("na,nb,nc->abc", *factors.transpose(1, 0, 2), optimize=True)
+        row[:] = modes_of_all.ravel()[half] / np.sqrt(len(frame))
+    lines = [
+        f"{'k [1/Å]':>9}{'modes':>7}{'S(k)':>8}"
+        + "".join(f"{f'{FRAME * s:g} ps':>9}{'± 1 s.e.':>10}{'indep.':>9}" for s in (1, 3))
+    ]
+    for low in np.arange(width, largest - 0.5 * width, width):
+        chosen = (k[half] >= low) & (k[half] < low + width)
+        structure = float((np.abs(modes[:, chosen]) ** 2).mean())
+        middle = float(k[half][chosen].mean())
+        cells = ""
+        for steps in (1, 3):
+            each = (modes[:-steps, chosen] * modes[steps:, chosen].conj()).real.mean(axis=1) / structure
+            free = np.exp(-(middle**2) * DIFFUSION * FRAME * steps)
+            cells += f"{each.mean():>9.4f}{each.std(ddof=1) / np.sqrt(each.size):>10.4f}{free:>9.4f}"
+        lines.append(f"{middle:>9.2f}{int(chosen.sum()):>7}{structure:>8.3f}{cells}")
+    return "\n".join(lines)
 
 
 def control(draws: int = 10) -> None:
@@ -295,12 +362,14 @@ def control(draws: int = 10) -> None:
 
 
 def main(arguments: list[str]) -> None:
-    """Print one part, or all: few, argon, control, trap, timing."""
+    """Print one part, or all: few, argon, control, trap, timing; liquid is the last part of argon by itself."""
     parts = arguments or ["few", "argon", "control", "trap", "timing"]
     if "few" in parts:
         print(few_particles(), flush=True)
     if "argon" in parts:
         argon()
+    if "liquid" in parts:
+        liquid()
     if "control" in parts:
         control()
     if "trap" in parts:

@@ -33,7 +33,7 @@ MAY_IMPORT = {
     "study_problems": {"checks"},
     "study_links": FOUNDATION | {"priors", "quantities", "study_problems"},
     "study_tables": {"study_links"},
-    "link_results": FOUNDATION | {"study", "links", "report", "snapshots"},
+    "link_results": FOUNDATION | {"study", "links", "report", "priors", "snapshots"},
     "study": FOUNDATION | {"snapshots", "priors", "bridges", "study_problems", "study_links", "study_tables"},
     "overview": FOUNDATION | {"snapshots", "priors", "report"},
     "results": FOUNDATION | {"study", "overview", "report", "lineage_results", "bridges", "schrodinger"},

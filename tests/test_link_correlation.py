@@ -101,6 +101,12 @@ def test_messages():
         ensembles.LinkOptions(correlation=1.0)
     with pytest.raises(InputError, match="move independently; links.correlation is 0.2; give it to link_particles"):
         ensembles.EstimateOptions(links=ensembles.LinkOptions(correlation=0.2))
+    with pytest.raises(InputError, match="move independently; links.hold_spread is 1; give it to link_particles"):
+        ensembles.EstimateOptions(links=ensembles.LinkOptions(hold_spread=True))
+    with pytest.raises(
+        InputError, match="hold_spread chooses the variance of links by itself; correlation is 0.2; leave"
+    ):
+        ensembles.LinkOptions(correlation=0.2, hold_spread=True)
     series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [np.arange(14.0)[:, None], np.arange(14.0)[:, None]])
     links = ensembles.link_particles(series, PRIOR)[0]
     with pytest.raises(InputError, match=r"too few neighbours; \d+ pair\(s\) of linked particles where 40 are needed"):

@@ -70,6 +70,39 @@ def test_solve_links_the_same_particles(tmp_path):
     assert_allclose(summary["prior"]["parameters"]["diffusion"], 0.2)
 
 
+def test_displacements_in_a_periodic_box_are_the_shortest(tmp_path):
+    study = write_study(tmp_path, box="[box]\nlower = [0, 0]\nupper = [20, 20]")
+    assert run(study, tmp_path / "out").exit_code == 0
+    links = pandas.read_csv(tmp_path / "out" / "links.csv")
+    places = pandas.read_csv(tmp_path / "data.csv")[["x", "y"]].to_numpy()
+    raw = places[links["target_row"]] - places[links["source_row"]]
+    moved = links[["moved_x [µm]", "moved_y [µm]"]].to_numpy()
+    assert np.abs(raw).max() > 10.0  # some links cross the edge
+    assert_allclose(moved, (raw + 10.0) % 20.0 - 10.0, atol=1e-9)
+
+
+def test_a_correlation_of_neighbours_is_handed_on(tmp_path):
+    found = {}
+    for name, line in (("own", ""), ("shared", "correlation = 0.3")):
+        (tmp_path / name).mkdir()
+        # A larger diffusion than the true one, so that neighbours come into question.
+        study = write_study(tmp_path / name, diffusion='"4 um^2/s"', links=f"[links]\n{line}")
+        result = run(study, tmp_path / name / "out")
+        assert result.exit_code == 0, result.output
+        gap = json.loads((tmp_path / name / "out" / "summary.json").read_text(encoding="utf-8"))["links"][0]
+        found[name] = gap["variance_factor"], gap["mean_entropy_nats"]
+    assert found["own"][0] == 1.0 and found["shared"][0] == 0.7
+    assert found["shared"][1] < found["own"][1]
+
+
+def test_clear_links_cannot_be_held_to_another_spread(tmp_path):
+    study = write_study(tmp_path, diffusion='"0.3 um^2/s"', links="[links]\nhold_spread = true")
+    result = run(study, tmp_path / "out")
+    assert result.exit_code == 1
+    assert "cannot be held to the prior's spread" in result.output
+    assert not (tmp_path / "out").exists()
+
+
 def test_a_box_and_the_estimated_prior(tmp_path):
     box = '[box]\nlower = [0, "0 um"]\nupper = [20, 20.0]\nboundary = "reflecting"'
     study = write_study(tmp_path, box=box, links='[links]\nprior = "estimated"\ndetection = 0.9')

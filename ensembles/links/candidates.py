@@ -37,6 +37,9 @@ class LinkOptions:
     cluster : particles of each frame in the exact sums around every particle, at most 12; 0 for belief propagation only.
     correlation : c of the displacements of neighbours, in [0, 1), as `neighbour_correlation` measures it. Links are then
         told apart by (1 - c) of the prior's variance; the log evidence is that of this law, not to be compared between c.
+    hold_spread : hold the mean squared displacement over the links to what the prior says, by a factor of its variance. For
+        particles that are crowded and keep apart, as all atoms of a liquid, where the diffusion is known from elsewhere:
+        links by the prior's own variance are then too sure of the nearest. Not together with a correlation.
     """
 
     tolerance: float = 2e-4
@@ -44,6 +47,7 @@ class LinkOptions:
     iteration_limit: int = 20_000
     cluster: int = 10
     correlation: float = 0.0
+    hold_spread: bool = False
 
     def __post_init__(self) -> None:
         checks.positive_number(self.tolerance, "tolerance", "give the error allowed, such as 2e-4")
@@ -53,6 +57,10 @@ class LinkOptions:
         if not 0.0 <= self.correlation < 1.0:
             raise checks.InputError(
                 f"correlation must lie in [0, 1); it is {self.correlation!r}; use 0 for particles that move independently"
+            )
+        if self.correlation and self.hold_spread:
+            raise checks.InputError(
+                f"hold_spread chooses the variance of links by itself; correlation is {self.correlation:g}; leave one of them out"
             )
         if checks.whole_number(self.cluster, "cluster", 0) > 12:
             raise checks.InputError(f"cluster must be at most 12; it is {self.cluster}; the cost doubles with each one")

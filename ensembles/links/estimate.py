@@ -55,7 +55,7 @@ class EstimateOptions:
     rate : "scalar" or "axis", of an Ornstein-Uhlenbeck prior.
     detection, birth_density : as in `link_particles`.
     links : how the evidence is computed; `cluster` = 0 leaves belief propagation uncorrected. The evidence is that of
-        particles that move independently: a `correlation` is refused.
+        particles that move independently: `correlation` and `hold_spread` are refused.
     gradient_tolerance : largest derivative of the log evidence per particle where the search ends.
     iteration_limit : steps of the search.
     """
@@ -68,11 +68,12 @@ class EstimateOptions:
     iteration_limit: int = 60
 
     def __post_init__(self) -> None:
-        if self.links.correlation:
-            raise checks.InputError(
-                f"an estimate takes particles to move independently; links.correlation is {self.links.correlation:g}; give it to "
-                "link_particles, and 0 here"
-            )
+        for name in ("correlation", "hold_spread"):
+            if value := getattr(self.links, name):
+                raise checks.InputError(
+                    f"an estimate takes particles to move independently; links.{name} is {value:g}; give it to link_particles, "
+                    "and leave it out here"
+                )
 
 
 @dataclass(frozen=True, eq=False)
@@ -229,7 +230,8 @@ def estimate_prior(
     -----
     RuntimeWarning
         Where the evidence has no clear maximum: then the frames do not tell the parameter. Where particles keep apart and are
-        crowded against their noise, as all atoms of a liquid: then its maximum can be in a wrong place, with a small error.
+        crowded against their noise, as all atoms of a liquid: then its maximum can be in a wrong place, with a small error,
+        and `identified` is false.
 
     Examples
     --------
@@ -264,33 +266,40 @@ def estimate_prior(
     values = [evidence.at(start)[0] for start in starts]
     free, _, good = evidence.maximise(starts[int(np.argmax(values))])
     free, log_evidence, curvature = evidence.correct(free)
-    estimate = PriorEstimate(evidence, free, log_evidence, curvature, good)
-    if not estimate.identified:
+    crowding = _crowding(series, chosen.build(free)[0])
+    estimate = PriorEstimate(evidence, free, log_evidence, curvature, good, bool(crowding))
+    if not estimate.has_maximum:
         warnings.warn(
             f"the frames do not tell every parameter; the log evidence has no clear maximum at {estimate.values}; "
             "use shorter gaps, more particles, or fewer free parameters",
             RuntimeWarning,
             stacklevel=2,
         )
-    _warn_of_crowding(series, estimate.prior)
+    if crowding:
+        warnings.warn(crowding, RuntimeWarning, stacklevel=2)
     return estimate
 
 
-def _warn_of_crowding(series: SnapshotSeries, prior: LinearGaussianPrior) -> None:
-    """The evidence takes particles to pass through one another, which crowded ones that keep apart do not."""
+def _crowding(series: SnapshotSeries, prior: LinearGaussianPrior) -> str:
+    """What is wrong where particles are crowded and keep apart in every frame, or nothing.
+
+    The evidence takes particles to pass through one another. Independent ones that moved far enough would not keep apart in
+    the next frame, even if they did in the first.
+    """
     if series.counts.min() < _CROWD:
-        return
-    index, spacing = regularity(series.clouds[0], prior.box)
+        return ""
+    found = [regularity(cloud, prior.box) for cloud in series.clouds]
+    index, spacing = min(found)[0], found[0][1]
     noise = prior.transition(float(np.diff(series.times).min()), series.dimension).covariance
     reach = float(np.sqrt(np.diag(noise).mean()))
-    if index > _KEPT_APART and reach > _CROWDED * spacing:
-        warnings.warn(
-            f"the particles keep apart and are crowded; nearest neighbours lie {index:.2f} times as far as those of independent "
-            f"positions, and the noise length {reach:.3g} is {reach / spacing:.2f} of the spacing; the evidence takes particles "
-            "to move independently, and the estimate can be far off: use a shorter gap, or tag a part of the particles",
-            RuntimeWarning,
-            stacklevel=3,
-        )
+    if index <= _KEPT_APART or reach <= _CROWDED * spacing:
+        return ""
+    return (
+        f"the particles keep apart and are crowded; nearest neighbours lie {index:.2f} times as far as those of independent "
+        f"positions, and the noise length {reach:.3g} is {reach / spacing:.2f} of the spacing; the evidence takes particles "
+        "to move independently, and the estimate can be far off: use a shorter gap, or tag a part of the particles; where the "
+        "diffusion is known from elsewhere, link with LinkOptions(hold_spread=True)"
+    )
 
 
 @dataclass(frozen=True, eq=False)

@@ -29,6 +29,8 @@ class PriorEstimate:
     log_evidence : over all gaps at the estimate, in nats: the Bethe permanent, corrected by exact sums over clusters.
     curvature : (p, p) negative second derivatives there, on the scales of the search.
     found : whether the search ended at a maximum.
+    crowded : whether the particles keep apart and are crowded in every frame, so that they cannot move independently; the
+        estimate can then be far off, whatever its standard error.
     """
 
     evidence: Evidence
@@ -36,6 +38,7 @@ class PriorEstimate:
     log_evidence: float
     curvature: np.ndarray
     found: bool
+    crowded: bool = False
 
     @cached_property
     def prior(self) -> LinearGaussianPrior:
@@ -63,9 +66,14 @@ class PriorEstimate:
         return np.linalg.inv(self.curvature)
 
     @property
-    def identified(self) -> bool:
+    def has_maximum(self) -> bool:
         """Whether the evidence has a maximum with positive curvature in every direction."""
         return self.found and bool(np.isfinite(self.covariance).all())
+
+    @property
+    def identified(self) -> bool:
+        """Whether the frames tell the parameters: it has a maximum, and the particles are not crowded."""
+        return self.has_maximum and not self.crowded
 
     @cached_property
     def standard_errors(self) -> dict[str, float]:
@@ -108,7 +116,7 @@ class PriorEstimate:
                 f"an entry of a diffusion matrix has no profile of its own; {name!r}; ask for diffusion per axis"
             )
         points = checks.whole_number(points, "points", 3)
-        error = float(np.sqrt(self.covariance[i, i])) if self.identified else 0.5
+        error = float(np.sqrt(self.covariance[i, i])) if self.has_maximum else 0.5
         rows = []
         free = self.free
         for offset in np.linspace(-3.5, 3.5, points) * error:

@@ -75,16 +75,17 @@ def link_law(
     duration: float,
     clouds: tuple[np.ndarray, np.ndarray],
     localisation: float = 0.0,
-    correlation: float = 0.0,
+    variance_factor: float = 1.0,
 ) -> LinkLaw:
     """The law of links over one gap; a localisation error s of each coordinate adds s² (F Fᵀ + I) to the variance.
 
-    Of neighbours whose displacements are correlated by c, (1 - c) of the variance tells links apart; see correlation.py.
+    `variance_factor` times the prior's variance tells links apart: 1 but for particles that do not move independently
+    (correlation.py, held_spread.py).
     """
     dimension = clouds[0].shape[1]
     step = prior.transition(duration, dimension)
-    if correlation > 0.0:
-        step = Transition(step.matrix, step.shift, (1.0 - correlation) * step.covariance)
+    if variance_factor != 1.0:
+        step = Transition(step.matrix, step.shift, variance_factor * step.covariance)
     if localisation > 0.0:
         noise = localisation**2 * (step.matrix @ step.matrix.T + np.eye(dimension))
         step = Transition(step.matrix, step.shift, step.covariance + noise)

@@ -10,11 +10,11 @@ import numpy as np
 from .. import checks
 from ..priors.base import LinearGaussianPrior, require_prior
 from ..schrodinger.assignment import AssignmentPosterior
-from ..schrodinger.clusters import ClusterSums, sum_clusters
-from ..schrodinger.exact_assignment import EXACT_LIMIT
 from .candidates import LinkOptions, linked_posterior
+from .cluster_sums import is_enumerated, link_sums
 from .frames import LonerWeights, loner_weights, require_same_particles
-from .law import link_law
+from .held_spread import held_variance
+from .law import LinkLaw, link_law
 from .particle_links import LinkCertificate, ParticleLinks
 
 if TYPE_CHECKING:
@@ -58,7 +58,7 @@ def link_particles(
         Unequal counts without a detection probability, two particles at one place, unequal weights, positions outside the
         box.
     ComputationError
-        More links than fit in memory.
+        More links than fit in memory; links that cannot move as the prior says, where `hold_spread` asks for it.
 
     Warns
     -----
@@ -87,26 +87,31 @@ def link_particles(
         clouds = (series.clouds[k], series.clouds[k + 1])
         duration = float(series.times[k + 1] - series.times[k])
         loners = loner_weights(series, k, prior, detection, birth_density)
-        law = link_law(prior, duration, clouds, localisation, options.correlation)
-        posterior, left_out = linked_posterior(law, loners.log_alone, options)
-        links = _assemble(k, posterior, left_out, loners, options)
+
+        def law_at(factor: float, duration: float = duration, clouds: tuple = clouds) -> LinkLaw:
+            return link_law(prior, duration, clouds, localisation, factor)
+
+        factor = 1.0 - options.correlation
+        if options.hold_spread:
+            factor = held_variance(law_at, loners.log_alone, options, _gap_name(series, k))
+        posterior, left_out = linked_posterior(law_at(factor), loners.log_alone, options)
+        links = _assemble(k, posterior, left_out, loners, options, factor)
         _warn(links, series)
         found.append(links)
     return found
 
 
 def _assemble(
-    k: int, posterior: AssignmentPosterior, left_out: float, loners: LonerWeights, options: LinkOptions
+    k: int,
+    posterior: AssignmentPosterior,
+    left_out: float,
+    loners: LonerWeights,
+    options: LinkOptions,
+    variance_factor: float,
 ) -> ParticleLinks:
     n, m = posterior.graph.shape
-    enumerated = max(n, m) <= EXACT_LIMIT
-    if enumerated or options.cluster:
-        sums = sum_clusters(posterior, limit=EXACT_LIMIT if enumerated else options.cluster)
-    else:
-        # Rows of the beliefs sum to 1 to the tolerance of propagation.
-        sums = ClusterSums(
-            posterior.probabilities, posterior.alone_rows, posterior.alone_columns, 0.0, float("nan"), np.ones(n, int)
-        )
+    enumerated = is_enumerated(posterior)
+    sums = link_sums(posterior, options)
     graph = posterior.graph
     row_error = np.abs(np.bincount(graph.rows, weights=sums.probabilities, minlength=n) + sums.alone_rows - 1.0).max()
     column_sums = np.bincount(graph.columns, weights=sums.probabilities, minlength=m) + sums.alone_columns
@@ -122,6 +127,7 @@ def _assemble(
     return ParticleLinks(
         k, k + 1, graph, sums.probabilities, posterior.probabilities, sums.alone_rows, sums.alone_columns,
         float(log_evidence), float(missing), float(upper) if square or enumerated else float("inf"), certificate, method,
+        variance_factor,
     )  # fmt: skip
 
 
@@ -136,8 +142,12 @@ def _exact_excess(posterior: AssignmentPosterior) -> float:
     return exact - posterior.log_evidence
 
 
+def _gap_name(series: SnapshotSeries, k: int) -> str:
+    return f"between t = {series.times[k]:g} and t = {series.times[k + 1]:g}"
+
+
 def _warn(links: ParticleLinks, series: SnapshotSeries) -> None:
-    gap = f"between t = {series.times[links.source]:g} and t = {series.times[links.target]:g}"
+    gap = _gap_name(series, links.source)
     if not links.certificate.converged:
         p = links.certificate.propagation
         warnings.warn(

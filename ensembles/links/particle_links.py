@@ -63,6 +63,8 @@ class ParticleLinks:
     log_evidence_upper : a rigorous upper bound for frames without missed or new particles, else infinite.
     certificate : `LinkCertificate`.
     method : "enumeration" up to 12 particles, else "propagation and clusters" or "propagation".
+    variance_factor : times the prior's variance that told links apart: 1 - c with a `correlation` c, what was found with
+        `hold_spread`, else 1.
     """
 
     source: int
@@ -77,6 +79,7 @@ class ParticleLinks:
     log_evidence_upper: float
     certificate: LinkCertificate
     method: str
+    variance_factor: float = 1.0
 
     @property
     def shape(self) -> tuple[int, int]:

@@ -97,6 +97,14 @@ class Box:
                 folded[..., axis] = low + length - np.abs(np.mod(offset, 2.0 * length) - length)
         return folded
 
+    def shortest(self, displacements: Any) -> np.ndarray:
+        """Displacements (..., d) to the nearest image on periodic axes, the others as they are."""
+        found = np.array(displacements, dtype=float)
+        for axis, kind in enumerate(self.boundary):
+            if kind == "periodic":
+                found[..., axis] -= self.lengths[axis] * np.round(found[..., axis] / self.lengths[axis])
+        return found
+
     def require_inside(self, points: np.ndarray, place: str = "") -> None:
         """Refuse positions (n, d) outside the box, naming the first one."""
         if points.shape[1] != self.dimension:
