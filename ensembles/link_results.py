@@ -27,7 +27,7 @@ Say = Callable[[str, float], None]
 
 
 def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]:
-    """Write links.csv, particles.csv, estimate.csv, profile.png, paths.csv, summary.json and the study file into `folder`.
+    """Write links.csv, particles.csv, estimate.csv, paths.csv, two pictures, report.html, summary.json and the study file.
 
     Returns
     -------
@@ -42,6 +42,7 @@ def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]
     from .links.chain import chain_links
     from .links.estimate import EstimateOptions, estimate_prior
     from .links.link import link_particles
+    from .report.page import LINKS, write_page
 
     series = study.read_series()
     settings = study.links
@@ -69,12 +70,13 @@ def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]
     times = np.union1d(np.linspace(series.times[0], series.times[-1], study.output.path_times), series.times)
     paths = chain.sample_paths(study.output.paths, times, rng=seed)
     writing.write_table(folder / "paths.csv", paths.to_frame().rename(columns={"time": series.time_name}))
-    say("Drawing the profile", 0.8)
-    caption = _draw_profile(folder, estimate)
+    say("Drawing pictures", 0.8)
+    figures = _save_figures(folder, series, estimate, links, prior.box)
     writing.write_text(folder / "study.toml", study.text)
-    # Last: the folder is known as a complete output by this file.
     summary = _summary(study, series, (estimate, prior, links), said, seed)
-    writing.write_json(folder / writing.MARKER, {**summary, "figures": {"profile.png": caption}})
+    write_page(folder, summary, figures, LINKS)
+    # Last: the folder is known as a complete output by this file.
+    writing.write_json(folder / writing.MARKER, summary)
     return sorted(path.name for path in folder.iterdir())
 
 
@@ -117,31 +119,44 @@ def _particles_table(series: SnapshotSeries, links: list[ParticleLinks]) -> pand
     return pandas.concat(parts, ignore_index=True)
 
 
-def _draw_profile(folder: Path, estimate: PriorEstimate) -> str:
+def _save_figures(
+    folder: Path, series: SnapshotSeries, estimate: PriorEstimate, links: list[ParticleLinks], box: Box | None
+) -> list[tuple[str, str]]:
+    """Draw the links and the evidence of every parameter; (file name, caption) of each picture."""
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
 
+    from .report.figures.links import draw_links
     from .report.figures.profile import draw_profiles
     from .report.figures.style import polish
 
-    names = list(estimate.values)
-    figure = Figure(layout="constrained", facecolor="white")
-    FigureCanvasAgg(figure)
-    profiles = {name: estimate.profile(name, points=9) for name in names[:6]}
-    caption = draw_profiles(figure, profiles, estimate.to_frame(), estimate.drop_at())
-    polish(figure)
-    with writing.atomic_path(folder / "profile.png") as temporary:
-        figure.savefig(temporary, dpi=200, format="png")
-    return caption
+    profiles = {name: estimate.profile(name, points=9) for name in list(estimate.values)[:6]}
+    drawings: dict[str, Callable[[Figure], str]] = {
+        "links.png": lambda figure: draw_links(figure, series, links, box),
+        "profile.png": lambda figure: draw_profiles(figure, profiles, estimate.to_frame(), estimate.drop_at()),
+    }
+    saved = []
+    for file, draw in drawings.items():
+        figure = Figure(layout="constrained", facecolor="white")
+        FigureCanvasAgg(figure)
+        saved.append((file, draw(figure)))
+        polish(figure)
+        with writing.atomic_path(folder / file) as temporary:
+            figure.savefig(temporary, dpi=200, format="png")
+    return saved
 
 
 def _summary(
     study: Study, series: SnapshotSeries, found: tuple[Any, Any, list[ParticleLinks]], said: list[str], seed: int
 ) -> dict[str, Any]:
+    from .report.wording import LINK_CAUTIONS
+
     estimate, prior, links = found
     rows = estimate.to_frame().to_dict(orient="records")
     gaps = [
         {
+            "from": float(series.times[link.source]),
+            "to": float(series.times[link.target]),
             "particles": list(link.shape),
             "expected_right_links": link.expected_right_links,
             "mean_entropy_nats": float(link.entropy.mean()),
@@ -164,15 +179,20 @@ def _summary(
     ]
     return {
         "program": "ensembles",
+        "converged": all(link.certificate.converged for link in links),
         "versions": {"ensembles": __version__, "python": platform.python_version()},
         "study": {
             "file": study.path.name, "title": study.title, "seed": seed, "identity": "same",
             "data": {"file": study.data.file, "fingerprint": series.fingerprint()},
         },
+        "columns": {"time": series.time_name, "position": list(series.position_names)},
+        "units": {"time": series.time_unit, "length": series.length_unit},
+        "frames": [{"time": float(t), "particles": len(cloud)} for t, cloud in zip(series.times, series.clouds)],
         "prior": {"kind": prior.kind, "parameters": prior.parameters(), "taken": study.links.prior},
         "estimate": {
             "parameters": rows, "log_evidence": estimate.log_evidence, "identified": estimate.identified
         },
         "links": gaps,
         "warnings": said,
+        "cautions": list(LINK_CAUTIONS),
     }  # fmt: skip

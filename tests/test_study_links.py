@@ -54,7 +54,8 @@ def test_solve_links_the_same_particles(tmp_path):
     assert result.exit_code == 0, result.output
     out = tmp_path / "out"
     assert sorted(p.name for p in out.iterdir()) == [
-        "estimate.csv", "links.csv", "particles.csv", "paths.csv", "profile.png", "study.toml", "summary.json",
+        "estimate.csv", "links.csv", "links.png", "particles.csv", "paths.csv", "profile.png", "report.html", "study.toml",
+        "summary.json",
     ]  # fmt: skip
     links = pandas.read_csv(out / "links.csv")
     assert {"moved_x [µm]", "moved_y [µm]", "probability", "assigned"} <= set(links.columns)
@@ -68,6 +69,13 @@ def test_solve_links_the_same_particles(tmp_path):
     summary = json.loads((out / "summary.json").read_text(encoding="utf-8"))
     assert summary["links"][0]["certificate"]["converged"]
     assert_allclose(summary["prior"]["parameters"]["diffusion"], 0.2)
+    page = (out / "report.html").read_text(encoding="utf-8")
+    assert "The same particles in 2 frames" in page and "By the evidence of the frames" in page
+    assert all(sentence in page for sentence in summary["cautions"])
+    assert all(f'href="{name}"' in page for name in ("links.csv", "particles.csv", "estimate.csv", "summary.json"))
+    assert 'src="links.png"' in page and "not observed tracks" in page
+    expected = summary["links"][0]["expected_right_links"]
+    assert f"({expected / 40:.3g})" in page  # the dashed line of the picture
 
 
 def test_displacements_in_a_periodic_box_are_the_shortest(tmp_path):
@@ -79,6 +87,22 @@ def test_displacements_in_a_periodic_box_are_the_shortest(tmp_path):
     moved = links[["moved_x [µm]", "moved_y [µm]"]].to_numpy()
     assert np.abs(raw).max() > 10.0  # some links cross the edge
     assert_allclose(moved, (raw + 10.0) % 20.0 - 10.0, atol=1e-9)
+
+
+def test_a_page_on_crowded_particles_says_not_to_quote_the_estimate(tmp_path):
+    rng = np.random.default_rng(0)
+    lattice = np.stack(np.meshgrid(np.arange(12.0), np.arange(12.0)), axis=-1).reshape(-1, 2)
+    rows = [
+        (t, *place) for t in (0.0, 0.5) for place in (lattice + 0.08 * rng.normal(size=lattice.shape) + 0.7 * t) % 12.0
+    ]
+    study = write_study(tmp_path, box="[box]\nlower = [0, 0]\nupper = [12, 12]")
+    pandas.DataFrame(rows, columns=["t_s", "x", "y"]).to_csv(tmp_path / "data.csv", index=False)
+    result = run(study, tmp_path / "out")
+    assert result.exit_code == 0, result.output
+    summary = json.loads((tmp_path / "out" / "summary.json").read_text(encoding="utf-8"))
+    assert summary["estimate"]["identified"] is False
+    page = (tmp_path / "out" / "report.html").read_text(encoding="utf-8")
+    assert "do not quote the values" in page and "the particles keep apart and are crowded" in page
 
 
 def test_a_correlation_of_neighbours_is_handed_on(tmp_path):

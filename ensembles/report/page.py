@@ -9,9 +9,11 @@ from typing import Any
 from ..writing import MARKER, write_text
 from .wording import CAUTIONS, axis_name, bare_name
 
-__all__ = ["report_html", "write_page"]
+__all__ = ["BRIDGE", "LINKS", "report_html", "write_page"]
 
 PAGE = "report.html"
+BRIDGE, LINKS = "page.html.jinja", "links.html.jinja"
+"""What a page is about: a bridge between snapshots, or links of the same particles."""
 
 _TABLES = {
     "links": "the most probable targets of every particle",
@@ -20,6 +22,8 @@ _TABLES = {
     "drift": "drift added to the prior, forward drift and current velocity at the points of those clouds",
     "moments": "mean and covariance of the population against time, exact",
     "certificate": "how exactly each gap was solved",
+    "particles": "the same particles: entropy, probability of having left, and assigned link of every earlier one",
+    "estimate": "parameters of the prior estimated from the frames, without labels",
     "descendants": "probability of each final label for the descendants of every particle; inferred, not observed",
     "ancestors": "probability of each first label for the ancestors of every particle",
     "descendants_errors": "the same averaged by label, with standard errors from resampled particles",
@@ -40,7 +44,9 @@ _TABLES = {
 """Name of a file without suffix -> what it holds."""
 
 
-def write_page(folder: str | Path, summary: Mapping[str, Any], figures: Sequence[tuple[str, str]]) -> Path:
+def write_page(
+    folder: str | Path, summary: Mapping[str, Any], figures: Sequence[tuple[str, str]], about: str = BRIDGE
+) -> Path:
     """Write report.html into `folder`, with links to the files that stand there.
 
     Parameters
@@ -48,6 +54,7 @@ def write_page(folder: str | Path, summary: Mapping[str, Any], figures: Sequence
     folder : an existing folder that holds the pictures and tables.
     summary : what `tables.summary` gave, and if wanted more: "study" with "title", "file" and "seed", "notes".
     figures : what `save_figures` gave, (file name, caption) of each picture.
+    about : `BRIDGE` or `LINKS`.
 
     Returns
     -------
@@ -58,12 +65,16 @@ def write_page(folder: str | Path, summary: Mapping[str, Any], figures: Sequence
     files = {path.name for path in place.iterdir() if not path.name.startswith(".")} | {MARKER}
     if "study" in summary:
         files.add("study.toml")
-    write_text(place / PAGE, report_html(summary, figures, files=files))
+    write_text(place / PAGE, report_html(summary, figures, about, files=files))
     return place / PAGE
 
 
 def report_html(
-    summary: Mapping[str, Any], figures: Sequence[tuple[str, str]], *, files: set[str] | frozenset[str] = frozenset()
+    summary: Mapping[str, Any],
+    figures: Sequence[tuple[str, str]],
+    about: str = BRIDGE,
+    *,
+    files: set[str] | frozenset[str] = frozenset(),
 ) -> str:
     """The page as text; `files` are the names it may link to, by their place in the same folder."""
     from jinja2 import Environment, PackageLoader, StrictUndefined
@@ -78,8 +89,8 @@ def report_html(
     environment.filters["number"] = _number
     units, names = summary["units"], summary["columns"]
     study = summary.get("study", {})
-    return environment.get_template("page.html.jinja").render(
-        title=study.get("title") or "Bridge between snapshots",
+    return environment.get_template(about).render(
+        title=study.get("title") or ("Bridge between snapshots" if about == BRIDGE else "Links of the same particles"),
         study=study,
         summary=summary,
         time_heading=axis_name(names["time"], units["time"]),

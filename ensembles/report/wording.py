@@ -15,6 +15,7 @@ if TYPE_CHECKING:
 __all__ = [
     "CAUTIONS",
     "GROWTH_CAUTION",
+    "LINK_CAUTIONS",
     "axis_name",
     "bare_name",
     "bracketed",
@@ -37,6 +38,14 @@ CAUTIONS = (
     "Not for clinical, diagnostic or safety decisions without licensed practice and local rules.",
 )
 """What every report says about its own results."""
+
+LINK_CAUTIONS = (
+    "Links and paths are inferences under a model, the prior, not observed tracks.",
+    "They depend on the prior and take particles to move independently; with another diffusion coefficient they are others.",
+    "A certificate says how exactly the probabilities were computed, not whether the prior is right.",
+    CAUTIONS[-1],
+)
+"""The same for links of particles that stand in every frame."""
 
 GROWTH_CAUTION = (
     "Snapshots are taken as complete: sampling noise and measurement error are not modelled; birth and death are as the study "
