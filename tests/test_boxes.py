@@ -215,3 +215,11 @@ def test_a_box_is_saved_with_its_bridge(tmp_path):
     again = ensembles.load_bridge(tmp_path / "bridge.npz")
     assert again.prior.box.boundary == box.boundary
     assert_allclose(again.log_density(0.3, series.clouds[0]), bridge.log_density(0.3, series.clouds[0]))
+
+
+def test_folding_never_gives_the_upper_edge_of_a_periodic_axis():
+    box = ensembles.Box([0.0, -3.0], [35.8, 4.0])
+    points = np.array([[-1e-18, -3.0 - 1e-18], [-3e-15, 4.0], [35.8, 11.0], [71.6, -10.0]])
+    folded = box.fold(points)
+    assert (folded >= box.lower).all() and (folded < box.upper).all()
+    assert_allclose(box.shortest(folded - points), 0.0, atol=1e-9)

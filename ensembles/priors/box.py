@@ -92,7 +92,9 @@ class Box:
             low, length = self.lower[axis], self.lengths[axis]
             offset = folded[..., axis] - low
             if kind == "periodic":
-                folded[..., axis] = low + np.mod(offset, length)
+                wrapped = low + np.mod(offset, length)
+                # The remainder of a tiny negative number rounds up to the period: that is the lower edge.
+                folded[..., axis] = np.where(wrapped < self.upper[axis], wrapped, low)
             elif kind == "reflecting":
                 folded[..., axis] = low + length - np.abs(np.mod(offset, 2.0 * length) - length)
         return folded
