@@ -128,14 +128,14 @@ def test_argon_with_hidden_labels():
                 assert mean["most expected"] > mean["most probable"] - 0.01
             else:
                 assert mean["links"] > max(mean["propagation"], mean["coupling"]) > mean["nearest"]
-    # Reliability over some 7,000 links: better than the coupling's, but the middle bins are off by up to 0.1 (they say
-    # too little), with labelled D and with clusters of 12 too: neighbouring atoms do not move independently.
+    # Reliability over more than 20,000 links; without the correlation of neighbours, which was measured without labels, the
+    # middle bins say up to 0.1 too little, and the coupling is off by 0.27.
     pooled = [*near, *far]
     table, coupling = (links_study.reliability(pooled, name) for name in ("links", "coupling"))
     assert table[:, 0].sum() > 5_000 and (table[:, 0] > 0).all()
-    off, far_off = (np.abs(t[:, 2] - t[:, 1]) for t in (table, coupling))
-    assert off.max() < 0.15
-    assert far_off.max() > 1.5 * off.max()
+    off, allowed = np.abs(table[:, 2] - table[:, 1]), np.sqrt(table[:, 1] * (1 - table[:, 1]) / table[:, 0])
+    assert (off < np.maximum(0.05, 3 * allowed)).all()
+    assert np.abs(coupling[:, 2] - coupling[:, 1]).max() > 0.15
     assert table[:, 0] @ off < 0.01 * table[:, 0].sum()
 
 

@@ -36,6 +36,7 @@ __all__ = ["NeighbourCorrelation", "neighbour_correlation"]
 
 _GROUPS = 20  # left out in turn for the standard error
 _FEWEST = 40  # pairs
+_NEAREST = 100  # pairs that are looked at even where they lie farther apart than asked for
 _ROUNDS = 500
 
 
@@ -59,19 +60,22 @@ def neighbour_correlation(
     series: SnapshotSeries,
     prior: LinearGaussianPrior,
     *,
-    neighbours: int = 4,
+    reach: float = 2.0,
+    neighbours: int = 6,
     localisation: float = 0.0,
 ) -> NeighbourCorrelation:
     """Correlation of the displacements of neighbouring particles, without labels.
 
-    Equations as in the module's docstring, over every particle and its nearest `neighbours` in the earlier frame, with the
-    later pair that the most probable assignment gives them, in either order. The standard error is a jackknife over 20 groups
-    of particles. Give `LinkOptions(correlation=c)` to link the particles again; c must be well above its error to be worth it.
+    Equations as in the module's docstring, over every particle and its nearest `neighbours` in the earlier frame up to `reach`
+    away, with the later pair that the most probable assignment gives them, in either order. Such pairs may be exchanged; those
+    farther apart move less together, and do not matter. The standard error is a jackknife over 20 groups of particles. Give
+    `LinkOptions(correlation=c)` to link the particles again; c must be well above its error to be worth it.
 
     Parameters
     ----------
     links : of one gap, or a list of them to be pooled, from `link_particles`; gaps of one length, as c changes with it.
     series, prior, localisation : as for `link_particles`; reflecting walls are not seen.
+    reach : largest distance of a pair, in lengths of the prior's noise; where fewer than 100 pairs are as near, the nearest 100.
     neighbours : nearest particles of each one, at least 1.
 
     Raises
@@ -93,8 +97,9 @@ def neighbour_correlation(
     True
     """
     neighbours = checks.whole_number(neighbours, "neighbours")
+    reach = checks.positive_number(reach, "reach", "give a distance in lengths of the noise, such as 2")
     parts = [
-        _gap_numbers(gap, series, prior, neighbours, localisation)
+        _gap_numbers(gap, series, prior, (reach, neighbours), localisation)
         for gap in ([links] if isinstance(links, ParticleLinks) else links)
     ]
     together, apart, exchanged, group = (
@@ -116,13 +121,17 @@ def neighbour_correlation(
 
 
 def _gap_numbers(
-    links: ParticleLinks, series: SnapshotSeries, prior: LinearGaussianPrior, neighbours: int, localisation: float
+    links: ParticleLinks,
+    series: SnapshotSeries,
+    prior: LinearGaussianPrior,
+    near: tuple[float, int],
+    localisation: float,
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     """|s|²/d, |t|²/d, |t'|²/d of the pairs of one gap, and the group of each."""
     clouds = (series.clouds[links.source], series.clouds[links.target])
     law = link_law(prior, float(series.times[links.target] - series.times[links.source]), clouds, localisation)
     later = links.assignment
-    first, second = _pairs(law, later, neighbours)
+    first, second = _pairs(law, later, *near)
     r_first, r_second = (_displacements(law, rows, later[rows]) for rows in (first, second))
     swapped = _displacements(law, first, later[second]), _displacements(law, second, later[first])
     sides = (r_first + r_second, r_first - r_second, swapped[0] - swapped[1])
@@ -133,13 +142,19 @@ def _gap_numbers(
     return together, apart, exchanged, place * _GROUPS // max(first.size, 1)
 
 
-def _pairs(law: LinkLaw, assignment: np.ndarray, neighbours: int) -> tuple[np.ndarray, np.ndarray]:
+def _pairs(law: LinkLaw, assignment: np.ndarray, reach: float, neighbours: int) -> tuple[np.ndarray, np.ndarray]:
+    """Rows of pairs of linked earlier particles, the nearest first, and no farther apart than asked for if there are enough."""
     tree = law.trees()[0]
-    near = tree.query(tree.data, k=min(neighbours + 1, tree.n))[1].reshape(tree.n, -1)
-    first, second = np.repeat(np.arange(tree.n), near.shape[1]), near.ravel()
-    pairs = np.unique(np.sort(np.stack([first, second], axis=1)[first != second], axis=1), axis=0)
-    pairs = pairs[(assignment[pairs] >= 0).all(axis=1)]
-    return pairs[:, 0], pairs[:, 1]
+    distances, near = tree.query(tree.data, k=min(neighbours + 1, tree.n))
+    first, second = np.repeat(np.arange(tree.n), near.reshape(tree.n, -1).shape[1]), near.ravel()
+    pairs = np.column_stack([np.minimum(first, second), np.maximum(first, second)])
+    pairs, where = np.unique(pairs, axis=0, return_index=True)
+    distances = distances.ravel()[where]
+    usable = (pairs[:, 0] < pairs[:, 1]) & (assignment[pairs] >= 0).all(axis=1)
+    pairs, distances = pairs[usable], distances[usable]
+    order = np.argsort(distances, kind="stable")
+    kept = order[: max(int(np.count_nonzero(distances <= reach)), _NEAREST)]
+    return pairs[kept, 0], pairs[kept, 1]
 
 
 def _displacements(law: LinkLaw, rows: np.ndarray, columns: np.ndarray) -> np.ndarray:
