@@ -17,6 +17,18 @@ __all__ = ["cluster_sums"]
 
 _WEAKEST = 1e-5  # strength of the connection to the centre below which nothing joins a cluster
 
+_LEAST_TOTAL = 1e-280  # well above the numbers that lose their digits
+
+
+@compiled
+def _mean_of_finite(values, count):
+    total, found = 0.0, 0
+    for k in range(count):
+        if math.isfinite(values[k]):
+            total += values[k]
+            found += 1
+    return total / found if found else math.nan
+
 
 @compiled
 def _find(values, count, wanted):
@@ -132,8 +144,17 @@ def cluster_sums(
                 e = places[p]
                 if _find(rows, n, edge_rows[e]) < 0:
                     taken[c] = _add_logs(taken[c], log_weights[e] + to_column[e])
-        # A factor on a row or a column is a factor on the whole sum: bring the largest entries near 1.
-        shift = 0.0
+        # In every assignment n - m more rows leave than columns are taken: e^balance for each that leaves and e^-balance for
+        # each that is taken is one factor on the whole sum. Messages are known up to such a factor, which may be huge.
+        balance = 0.5 * (_mean_of_finite(taken, m) - _mean_of_finite(leave, n))
+        if math.isnan(balance):  # nothing leaves, or nothing is taken
+            balance = 0.0
+        for r in range(n):
+            leave[r] += balance
+        for c in range(m):
+            taken[c] -= balance
+        # A factor on a row or a column is a factor on the whole sum too: bring the largest entries near 1.
+        shift = balance * (m - n)
         for r in range(n):
             top = leave[r]
             for c in range(m):
@@ -186,7 +207,7 @@ def cluster_sums(
                         linked += table[s] * fresh[s | bit]
             w[0, c] *= linked
             total += w[0, c]
-        if not total > 0.0:  # everything underflowed: keep what belief propagation said
+        if not total > _LEAST_TOTAL:  # everything underflowed: keep what belief propagation said
             sizes[i] = 0
             corrections[i] = 0.0
             out_alone[i] = exponential(log_alone_rows[i] - log_row_sums[i])

@@ -9,6 +9,7 @@ import numpy as np
 
 from .. import checks
 from ..snapshots.cells import require_anndata
+from ..snapshots.stages import stage_times
 from ..writing import atomic_path
 from .fates import ancestors, commitment, descendants, label_flows
 from .growth import implied_growth, kept_weights
@@ -18,6 +19,7 @@ if TYPE_CHECKING:
     import pandas
 
     from ..bridges.bridge import Bridge
+    from ..snapshots.series import SnapshotSeries
 
 __all__ = ["annotate_cells", "save_cells"]
 
@@ -34,8 +36,8 @@ def annotate_cells(bridge: Bridge, cells: Any = None) -> Any:
     Parameters
     ----------
     bridge : a bridge between particles of a series with labels.
-    cells : the AnnData object that the series was read from (row numbers match); without it a new object without .X is
-        made of the particles, named by their row.
+    cells : the AnnData object that the series was read from, in any order: cells are found by their names, or by row number
+        where the series has no names; without it a new object without .X is made of the particles, under their names in the file or their rows.
 
     Returns
     -------
@@ -44,7 +46,7 @@ def annotate_cells(bridge: Bridge, cells: Any = None) -> Any:
     Raises
     ------
     InputError
-        If anndata is not installed, or `cells` has fewer rows than the series refers to.
+        If anndata is not installed, or `cells` are not those of the series: names or rows that are missing, other times.
 
     Examples
     --------
@@ -60,15 +62,11 @@ def annotate_cells(bridge: Bridge, cells: Any = None) -> Any:
     series = bridge.series
     rows = np.concatenate(series.rows)
     if cells is None:
-        names = pandas.DataFrame(index=[str(row) for row in rows])
+        called = map(str, rows) if series.names is None else np.concatenate(series.names)
+        names = pandas.DataFrame(index=list(called))
         target, place = anndata.AnnData(obs=names), np.arange(rows.size)
     else:
-        if rows.max() >= cells.n_obs:
-            raise checks.InputError(
-                f"the cells are not those of the bridge; there are {cells.n_obs} where the series refers to row {rows.max()}; "
-                "give the object that the series was read from"
-            )
-        target, place = cells.copy(), rows
+        target, place = cells.copy(), _places(series, cells)
     columns, tables, facts = _content(bridge)
     for name, values in columns.items():
         text = values.dtype == object
@@ -81,6 +79,36 @@ def annotate_cells(bridge: Bridge, cells: Any = None) -> Any:
         target.obsm[f"ensembles_{name}"] = full
     target.uns["ensembles"] = facts
     return target
+
+
+def _places(series: SnapshotSeries, cells: Any) -> np.ndarray:
+    """The row in `cells` of every particle of the series, those of all snapshots one after the other."""
+    remedy = "give the object that the series was read from"
+    if series.names is not None:
+        names = np.concatenate(series.names)
+        place = np.asarray(cells.obs_names.astype(str).get_indexer(names))
+        if (place < 0).any():
+            raise checks.InputError(
+                f"the cells are not those of the bridge; {int((place < 0).sum())} of {names.size} names are missing, the first "
+                f"is {str(names[place < 0][0])!r}; {remedy}"
+            )
+    else:
+        place = np.concatenate(series.rows)
+        if place.max() >= cells.n_obs:
+            raise checks.InputError(
+                f"the cells are not those of the bridge; there are {cells.n_obs} where the series refers to row {place.max()}; "
+                f"{remedy}"
+            )
+    if series.time_name in cells.obs:
+        found = stage_times(np.asarray(cells.obs[series.time_name])[place], series.time_name)[0]
+        own = np.repeat(series.times, series.counts)
+        if (other := found != own).any():
+            first = int(np.argmax(other))
+            raise checks.InputError(
+                f"the cells are not those of the bridge; row {place[first]} has {series.time_name} = {found[first]:g} where the "
+                f"series has {own[first]:g} ({int(other.sum())} such cell(s)); {remedy}, in the same order"
+            )
+    return place
 
 
 def _content(bridge: Bridge) -> tuple[dict[str, np.ndarray], dict[str, np.ndarray], dict[str, Any]]:

@@ -224,7 +224,8 @@ def estimate_prior(
     Raises
     ------
     InputError
-        What `link_particles` refuses; a localisation error from equal gaps; an unknown family or shape.
+        What `link_particles` refuses; a localisation error from equal gaps; an unknown family or shape; a coordinate that
+        never changes.
 
     Warns
     -----
@@ -254,6 +255,7 @@ def estimate_prior(
             f"a localisation error cannot be told from diffusion over equal gaps; all {gaps.size} gap(s) last {gaps[0]:g}; "
             "add a frame at another distance in time, or give the error as a number"
         )
+    _require_extent(series)
     scales = _scales(series)
     chosen = PriorFamily(
         kind=family, dimension=series.dimension, diffusion=diffusion, rate=options.rate, drift=bool(drift),
@@ -278,6 +280,17 @@ def estimate_prior(
     if crowding:
         warnings.warn(crowding, RuntimeWarning, stacklevel=2)
     return estimate
+
+
+def _require_extent(series: SnapshotSeries) -> None:
+    """Refuse a coordinate that never changes: it would count as one along which nothing diffuses."""
+    flat = np.ptp(np.concatenate(series.clouds), axis=0) == 0.0
+    if flat.any():
+        axis = int(np.argmax(flat))
+        raise checks.InputError(
+            f"a coordinate that never changes tells nothing of diffusion; {series.position_names[axis]!r} is "
+            f"{series.clouds[0][0, axis]:g} everywhere; leave it out of the positions"
+        )
 
 
 def _crowding(series: SnapshotSeries, prior: LinearGaussianPrior) -> str:

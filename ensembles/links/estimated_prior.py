@@ -7,6 +7,7 @@ from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+from scipy.interpolate import CubicSpline
 from scipy.stats import chi2, norm
 
 from .. import checks
@@ -106,7 +107,8 @@ class PriorEstimate:
     def profile(self, name: str, points: int = 15) -> pandas.DataFrame:
         """The log evidence along one parameter, the others at their best for it: value, log_evidence, below_maximum.
 
-        Values reach 3.5 standard errors to either side. `below_maximum` is compared with ½ χ²: 1.92 at 95 %.
+        Values reach 3.5 standard errors to either side, the estimate among them. The curve is the integral of the same score
+        whose zero is the estimate. `below_maximum` is compared with ½ χ²: 1.92 at 95 %.
         """
         import pandas
 
@@ -117,14 +119,20 @@ class PriorEstimate:
             )
         points = checks.whole_number(points, "points", 3)
         error = float(np.sqrt(self.covariance[i, i])) if self.has_maximum else 0.5
-        rows = []
-        free = self.free
-        for offset in np.linspace(-3.5, 3.5, points) * error:
-            start = free.copy()
-            start[i] = self.free[i] + offset
-            best, _, _ = self.evidence.maximise(start, held=i)
-            value, _ = self.evidence.at(best, clusters=True)
-            rows.append((float(self.evidence.family.natural(best)[i]), value, max(self.log_evidence - value, 0.0)))
+        # The estimate itself is among the points, and the curve starts from it.
+        offsets = np.union1d(np.linspace(-3.5, 3.5, points) * error, [0.0])
+        places, slopes = [], []
+        # The other parameters follow the uncorrected evidence from where the corrected one has them.
+        shift = self.free - self.evidence.maximise(self.free, held=i)[0]
+        for offset in offsets:
+            start = self.free.copy()
+            start[i] += offset
+            best = self.evidence.maximise(start, held=i)[0] + shift
+            places.append(float(self.evidence.family.natural(best)[i]))
+            slopes.append(self.evidence.at(best, clusters=True)[1][i])
+        curve = CubicSpline(offsets, slopes).antiderivative()
+        change = curve(offsets) - curve(0.0)
+        rows = zip(places, self.log_evidence + change, -change)
         return pandas.DataFrame(rows, columns=["value", "log_evidence", "below_maximum"])
 
     def to_frame(self, level: float = 0.95) -> pandas.DataFrame:

@@ -20,12 +20,12 @@ import numpy as np
 from scipy.optimize import brentq
 
 from .. import checks
-from ..schrodinger.assignment import AssignmentPosterior
+from ..schrodinger.assignment import AssignmentGraph
 from .candidates import LinkOptions, linked_posterior, messages_of_all_pairs
 from .cluster_sums import link_sums
 from .law import LinkLaw
 
-__all__ = ["held_variance"]
+__all__ = ["held_variance", "relative_spread"]
 
 _DERIVATIVE = 1e-3
 _FARTHEST = 2.0  # times the prior's variance, or its inverse; beyond it frames and prior disagree
@@ -45,32 +45,36 @@ def held_variance(
     ComputationError
         Where no factor between 1/2 and 2 will do: the diffusion is wrong, or links are so clear that no factor moves them.
     """
-    above, below = law_at(np.exp(_DERIVATIVE)), law_at(np.exp(-_DERIVATIVE))
     known: dict[float, float] = {}
     start: list[np.ndarray | None] = [None]
 
-    def score(log_factor: float) -> float:
+    def excess(log_factor: float) -> float:
         if log_factor not in known:
             posterior, _ = linked_posterior(law_at(float(np.exp(log_factor))), log_alone, options, start[0])
             start[0] = messages_of_all_pairs(posterior)
-            known[log_factor] = _score(posterior, above, below, options)
+            probabilities = link_sums(posterior, options).probabilities
+            known[log_factor] = relative_spread(posterior.graph, probabilities, law_at) - 1.0
         return known[log_factor]
 
-    way = 1.0 if score(0.0) < 0.0 else -1.0
+    way = 1.0 if excess(0.0) < 0.0 else -1.0
     near, far = 0.0, way * float(np.log(_STEP))
-    while way * score(far) < 0.0:
+    while way * excess(far) < 0.0:
         if abs(far) >= np.log(_FARTHEST):
             raise checks.ComputationError(
                 f"the links {gap} cannot be held to the prior's spread; with {np.exp(far):.3g} times its variance they still "
                 f"move {'less' if way > 0 else 'more'} than it says; give another diffusion, or leave hold_spread out"
             )
         near, far = far, way * float(min(2.0 * abs(far), np.log(_FARTHEST)))
-    return float(np.exp(brentq(score, near, far, xtol=_ACCURACY, rtol=1e-12)))
+    return float(np.exp(brentq(excess, near, far, xtol=_ACCURACY, rtol=1e-12)))
 
 
-def _score(posterior: AssignmentPosterior, above: LinkLaw, below: LinkLaw, options: LinkOptions) -> float:
-    """Mean ∂ log p / ∂ log variance under the prior's own variance: (mean |r|² - d) / 2 without walls."""
-    rows, columns = posterior.graph.rows, posterior.graph.columns
-    slopes = (above.log_weights(rows, columns) - below.log_weights(rows, columns)) / (2.0 * _DERIVATIVE)
-    probabilities = link_sums(posterior, options).probabilities
-    return float(probabilities @ slopes / max(probabilities.sum(), 1e-300))
+def relative_spread(graph: AssignmentGraph, probabilities: np.ndarray, law_at: Callable[[float], LinkLaw]) -> float:
+    """Mean squared displacement over the links (E,) relative to what the prior says: 1 + 2 (mean score) / d.
+
+    The score is ∂ log p / ∂ log variance under the prior's own variance, (|r|² - d) / 2 without walls; its mean is 0 if the
+    prior is right, in a box and with a localisation error too.
+    """
+    above, below = law_at(float(np.exp(_DERIVATIVE))), law_at(float(np.exp(-_DERIVATIVE)))
+    slopes = above.log_weights(graph.rows, graph.columns) - below.log_weights(graph.rows, graph.columns)
+    mean = probabilities @ slopes / (2.0 * _DERIVATIVE * max(float(probabilities.sum()), 1e-300))
+    return 1.0 + 2.0 * float(mean) / above.sources.shape[1]

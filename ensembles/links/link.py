@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import warnings
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -13,7 +14,7 @@ from ..schrodinger.assignment import AssignmentPosterior
 from .candidates import LinkOptions, linked_posterior
 from .cluster_sums import is_enumerated, link_sums
 from .frames import LonerWeights, loner_weights, require_same_particles
-from .held_spread import held_variance
+from .held_spread import held_variance, relative_spread
 from .law import LinkLaw, link_law
 from .particle_links import LinkCertificate, ParticleLinks
 
@@ -21,6 +22,9 @@ if TYPE_CHECKING:
     from ..snapshots.series import SnapshotSeries
 
 __all__ = ["link_particles"]
+
+_FITS = 0.6  # ratio of the links' mean square to the prior's, or its inverse, below which they are called different
+_SURE = 5.0  # standard errors
 
 
 def link_particles(
@@ -63,7 +67,8 @@ def link_particles(
     Warns
     -----
     RuntimeWarning
-        Where a gap is so long that its links carry next to no information, and where belief propagation did not converge.
+        Where a gap is so long that its links carry next to no information, where belief propagation did not converge, and
+        where the links move much more or less than the prior says.
 
     Source: Chertkov, Kroc, Krzakala, Vergassola, Zdeborová, PNAS 2010 (from memory).
 
@@ -96,6 +101,7 @@ def link_particles(
             factor = held_variance(law_at, loners.log_alone, options, _gap_name(series, k))
         posterior, left_out = linked_posterior(law_at(factor), loners.log_alone, options)
         links = _assemble(k, posterior, left_out, loners, options, factor)
+        links = replace(links, spread=relative_spread(links.graph, links.probabilities, law_at))
         _warn(links, series)
         found.append(links)
     return found
@@ -113,6 +119,11 @@ def _assemble(
     enumerated = is_enumerated(posterior)
     sums = link_sums(posterior, options)
     graph = posterior.graph
+    if not np.isfinite(sums.probabilities).all():
+        raise checks.ComputationError(
+            f"link probabilities are not numbers; those of gap {k} left the range of floating point in sums over clusters; "
+            "use LinkOptions(cluster=0), and tell us of the data"
+        )
     row_error = np.abs(np.bincount(graph.rows, weights=sums.probabilities, minlength=n) + sums.alone_rows - 1.0).max()
     column_sums = np.bincount(graph.columns, weights=sums.probabilities, minlength=m) + sums.alone_columns
     log_evidence, missing = posterior.log_evidence + loners.log_constant, sums.log_evidence_correction
@@ -153,6 +164,15 @@ def _warn(links: ParticleLinks, series: SnapshotSeries) -> None:
         warnings.warn(
             f"the links {gap} are not certified; sums are off by up to {max(p.row_error, p.column_error):.2g} after "
             f"{p.iterations} rounds and {links.certificate.left_out:.2g} of a particle is left out; allow more rounds or damping",
+            RuntimeWarning,
+            stacklevel=3,
+        )
+    share = 1.0 / max(links.spread, 1.0 / max(links.spread, 1e-300))
+    if share < _FITS and abs(links.spread - 1.0) > _SURE * np.sqrt(2.0 / (links.shape[0] * series.dimension)):
+        warnings.warn(
+            f"the links {gap} move {links.spread:.3g} times as far, in the mean of squares, as the prior says; links by a prior "
+            "that does not fit are too sure or too unsure: compare with estimate_prior, and look for a missing box and for "
+            "particles that were not found",
             RuntimeWarning,
             stacklevel=3,
         )

@@ -65,6 +65,7 @@ class ParticleLinks:
     method : "enumeration" up to 12 particles, else "propagation and clusters" or "propagation".
     variance_factor : times the prior's variance that told links apart: 1 - c with a `correlation` c, what was found with
         `hold_spread`, else 1.
+    spread : mean squared displacement over the links, relative to what the prior says; near 1 where the prior fits.
     """
 
     source: int
@@ -80,6 +81,7 @@ class ParticleLinks:
     certificate: LinkCertificate
     method: str
     variance_factor: float = 1.0
+    spread: float = 1.0
 
     @property
     def shape(self) -> tuple[int, int]:

@@ -102,7 +102,9 @@ def read_cells(
         units={"time": time_unit or found_unit, "length": length_unit},
         position_names=axes,
     )
-    return replace(series, time_name=time, rows=tuple(split(np.arange(len(names)))))
+    return replace(
+        series, time_name=time, rows=tuple(split(np.arange(len(names)))), names=tuple(split(names.astype(str)))
+    )
 
 
 @contextmanager

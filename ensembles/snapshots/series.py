@@ -56,6 +56,8 @@ class SnapshotSeries:
         The row of each particle in the table it came from, counted from 0.
     position_names, time_name, time_unit, length_unit : names of the axes; '' is an unknown unit
     growth : `Growth`, or None where particles neither divide nor die; see `with_growth`
+    names : tuple of (n_k,) arrays of strings, or None
+        What the file calls each particle (.obs_names of an .h5ad file).
 
     Examples
     --------
@@ -81,6 +83,7 @@ class SnapshotSeries:
     time_unit: str = ""
     length_unit: str = ""
     growth: Growth | None = None
+    names: tuple[np.ndarray, ...] | None = None
 
     def __post_init__(self) -> None:
         if len(self.clouds) < 2:
@@ -93,7 +96,14 @@ class SnapshotSeries:
             )
         for array in (self.times, self.masses):
             array.setflags(write=False)
-        for group in (self.clouds, self.weights, self.rows, self.labels or (), *self.features.values()):
+        for group in (
+            self.clouds,
+            self.weights,
+            self.rows,
+            self.labels or (),
+            self.names or (),
+            *self.features.values(),
+        ):
             for array in group:
                 array.setflags(write=False)
 
@@ -256,6 +266,7 @@ class SnapshotSeries:
             labels=None if self.labels is None else pick(self.labels),
             features={name: pick(values) for name, values in self.features.items()},
             rows=pick(self.rows),
+            names=None if self.names is None else pick(self.names),
         )
 
     def with_growth(self, growth: Growth | None) -> SnapshotSeries:
