@@ -160,6 +160,9 @@ def test_many_particles_are_judged_by_some_of_them():
     population = population_behind(two, equal(2000), rng)
     assert len(population.clusters) == 2
     assert_allclose([cluster.weights.size for cluster in population.clusters], 2000)
+    # A coordinate in which only one particle differs: most choices of some do not see it.
+    rare = np.c_[rng.normal(size=1500), np.r_[np.zeros(1499), 5.0]]
+    assert np.isfinite(population_behind(rare, equal(1500), rng).sample(100, rng)).all()
 
 
 def test_members_sum_to_one_and_repeat_with_the_seed():
@@ -169,3 +172,28 @@ def test_members_sum_to_one_and_repeat_with_the_seed():
     first, second = (memberships(white, equal(150), np.random.default_rng(8)) for _ in range(2))
     assert_allclose(first.sum(axis=1), 1.0, rtol=1e-9)
     assert_allclose(first, second, rtol=0)
+
+
+@pytest.mark.parametrize("kind", ["rounded", "heavy tails", "far and small", "a rare value", "a repeated coordinate"])
+def test_strange_clouds_and_very_unequal_weights_have_a_population(kind):
+    rng = np.random.default_rng(9)
+    for _ in range(12):
+        n, d = int(rng.integers(1, 60)), int(rng.integers(1, 6))
+        cloud = rng.normal(size=(n, d))
+        if kind == "rounded":
+            cloud = np.round(cloud)
+        elif kind == "heavy tails":
+            cloud /= rng.chisquare(1.0, size=(n, 1))
+        elif kind == "far and small":
+            cloud = 1e3 + 1e-6 * cloud
+        elif kind == "a rare value":
+            cloud[:, 0] = np.round(cloud[:, 0] / 3.0)
+        else:
+            cloud[:, -1] = cloud[:, 0] = np.round(cloud[:, 0])
+        weights = rng.gamma(0.05, size=n) + 1e-300
+        drawn = population_behind(cloud, weights / weights.sum(), rng).sample(50, rng)
+        assert drawn.shape == (50, d)
+        # Within the cloud, give or take the noise of its own size.
+        reach = 10.0 * np.ptp(cloud, axis=0) + 1e-9
+        assert (drawn <= cloud.max(axis=0) + reach).all()
+        assert (drawn >= cloud.min(axis=0) - reach).all()

@@ -108,7 +108,9 @@ def _clusters(
     centres = parts @ white
     moved = white - centres[:, None]
     covariances = np.swapaxes(moved * parts[..., None], 1, 2) @ moved
-    if count > 1:
+    if count == 1:
+        covariances = covariances + _FLAT * np.eye(d)  # some particles of a large cloud may be flat where it is not
+    else:
         if np.linalg.eigvalsh(covariances)[:, 0].min() < _FLAT:
             return None
         # One particle's worth of a round cluster: without it the likelihood has no bound.

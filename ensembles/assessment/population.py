@@ -103,7 +103,8 @@ def _cluster(white: np.ndarray, weights: np.ndarray, members: np.ndarray) -> Clu
     inside /= inside.sum()
     centre = inside @ white
     moved = white - centre
-    return Cluster(share, inside, centre, np.linalg.cholesky((moved.T * inside) @ moved))
+    values, vectors = np.linalg.eigh((moved.T * inside) @ moved)
+    return Cluster(share, inside, centre, vectors * np.sqrt(np.maximum(values, 0.0)))
 
 
 def _missing(weights: np.ndarray) -> float:
@@ -122,10 +123,11 @@ def _likeliest_band(white: np.ndarray, weights: np.ndarray, members: np.ndarray,
     logs = np.full((_BANDS.size, rows.size), -np.inf)
     for column in members[rows].T:
         share = float(a @ column)
-        if share * rows.size < p + 2 and members.shape[1] > 1:  # too few of this cluster among the chosen
+        inside = a * column / max(share, np.finfo(float).tiny)
+        if np.sum(inside**2) * (p + 2) > 1.0 and members.shape[1] > 1:  # too few of this cluster among the chosen
             continue
         others = np.maximum(share - a * column, np.finfo(float).tiny) / (1.0 - a)
-        logs = np.logaddexp(logs, np.log(others) + left_out_log_density(z, a * column / share, _BANDS))
+        logs = np.logaddexp(logs, np.log(others) + left_out_log_density(z, inside, _BANDS))
     band = float(_BANDS[int(np.argmax(logs @ a))])
     # The best bandwidth falls as n^(-1/(d + 4)).
     return band * float((rows.size / n) ** (1.0 / (p + 4)))
@@ -138,7 +140,8 @@ def left_out_log_density(points: np.ndarray, weights: np.ndarray, bands: np.ndar
     (1 - q z_i z_iᵀ)/(1 - w_i), whose inverse and determinant are closed forms; so nothing is fitted anew.
     """
     moved = points - weights @ points
-    root = np.linalg.cholesky((moved.T * weights) @ moved)
+    # The few of a large cloud by which the bandwidth is chosen may be flat where the cloud is not.
+    root = np.linalg.cholesky((moved.T * weights) @ moved + _FLAT * np.eye(points.shape[1]))
     z = np.linalg.solve(root, moved.T).T
     d, left = z.shape[1], 1.0 - weights
     gram, q = z @ z.T, weights / left
