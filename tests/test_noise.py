@@ -9,7 +9,7 @@ from numpy.testing import assert_allclose
 
 import ensembles
 from ensembles import InputError
-from ensembles.assessment.interval import profile_interval
+from ensembles.assessment.interval import largest_loss, profile_interval
 from ensembles.assessment.noise import NoiseProfile
 from ensembles.assessment.parameters import with_parameters
 from ensembles.assessment.profile import climb, quadratic_around
@@ -138,6 +138,14 @@ def test_the_interval_is_where_the_profile_loses_less_than_allowed():
     found = profile_interval({"centre": axis}, np.array([0.0]), 0.0, -0.5 * axis**2, 0.5)
     assert_allclose(found["centre"], (-1.0, 1.0), atol=1e-12)
     assert profile_interval({"centre": axis}, np.array([0.0]), 0.0, -0.5 * axis**2, 50.0)["centre"] == (-3.0, 3.0)
+
+
+@pytest.mark.parametrize("repeats", [10, 30, 100])
+def test_one_more_resample_stays_below_the_largest_loss_at_its_rate(repeats):
+    # The chance that a new uniform number lies below an order statistic is that statistic itself.
+    draws = np.random.default_rng(repeats).random((4000, repeats))
+    chances = [largest_loss(row) for row in draws]
+    assert_allclose(np.mean(chances), 0.9, atol=4 * np.std(chances) / np.sqrt(4000))
 
 
 def test_parameters_are_replaced_or_scaled():

@@ -12,7 +12,7 @@ import numpy as np
 from .. import checks
 from ..priors.base import LinearGaussianPrior, require_prior
 from .hold_out import require_interior
-from .interval import coordinate, from_coordinate, profile_interval
+from .interval import coordinate, from_coordinate, largest_loss, profile_interval
 from .pairwise import Comparison, multinomial_weights
 from .parameters import level_grid
 from .profile import Cell, Profile, climb, quadratic_around
@@ -28,7 +28,6 @@ __all__ = ["NoiseLevel", "NoiseProfile", "choose_noise"]
 _ENERGY_DRAWS = 600
 _ENERGY_PARTICLES = 2000
 _BOOTSTRAP_TOLERANCE = 1e-4  # L1 error of the marginals; resampled weights themselves move by far more
-_CHANCE = 0.9
 _RIDGE = 0.8  # correlation of two parameters beyond which it is worth a sentence
 
 
@@ -127,8 +126,10 @@ def choose_noise(
     Each interior snapshot is left out and its particles are scored by log ρ of the bridge between its neighbours. The
     best cell has the largest mean log score. The interval holds all values whose score lies less than c below the
     maximum, where c is such that 90 % of bootstrap resamples of all snapshots, with the bridges fitted again, lose less
-    than c at the estimate against their own maximum. Finite clouds blur: where particles are further apart than the
-    prior's spread between the snapshots, the log score asks for more noise than there was.
+    than c at the estimate against their own maximum. The log-density that finite clouds foretell is too low by half its
+    relative variance, and that is larger the less noise the prior has: the log score asks for somewhat more noise than
+    there was, by a part of its interval (scripts/calibration prints how much), and much more where particles are further
+    apart than the prior's spread between the snapshots.
 
     Parameters
     ----------
@@ -178,7 +179,7 @@ def choose_noise(
     refitted = np.array(run_repeats(refit, repeats, refitting, workers))
     maxima, losses = refitted[:, :-1], refitted[:, -1]
     scores = np.array([profile.score(cell) for cell in cells]).reshape(profile.shape)
-    interval = profile_interval(grid, estimate, around.at(estimate), scores, float(np.quantile(losses, _CHANCE)))
+    interval = profile_interval(grid, estimate, around.at(estimate), scores, largest_loss(losses))
     names = tuple(grid)
     return NoiseProfile(
         names,

@@ -124,9 +124,10 @@ def prior_check(
     A simulation draws two clouds from the population behind the start cloud, independently and of the observed sizes and
     weights, moves the second by the prior, and computes the same statistics as for the data: the energy distance between
     the end cloud and what the prior makes of the start cloud, and the relative entropy of the bridge between the two. The
-    population is a kernel estimate with the mean and the unbiased covariance of the start cloud, its bandwidth by the
-    likelihood of each particle given the others. The p-value is (1 + number of simulations at least as far) /
-    (1 + simulations).
+    population is a smoothed bootstrap of the start cloud within its clusters (`population.py`). The p-value is
+    (1 + number of simulations at least as far) / (1 + simulations). scripts/calibration prints how uniform it is. Heavy
+    tails, of which a cloud shows too little, make the p-value by relative entropy too small; that by energy distance
+    does not mind them.
 
     Parameters
     ----------
