@@ -1,6 +1,7 @@
 """AnnData files in and out, times in words, raw counts, scaling and the way back."""
 
 import sys
+from dataclasses import replace
 
 import anndata
 import numpy as np
@@ -178,8 +179,24 @@ def test_results_go_back_and_nothing_is_lost(tmp_path, file):
     )
     assert again.obs["ensembles_implied_growth"].isna().sum() == 35
     assert set(again.uns["ensembles"]["flows"]["gap"]) == {0, 1}
-    with pytest.raises(ensembles.InputError, match="the cells are not those of the bridge; there are 10 where"):
+    with pytest.raises(ensembles.InputError, match="not those of the bridge; 95 of 105 names are missing, the first"):
         ensembles.annotate_cells(bridge, cells[:10].copy())
+    # Cells are found by name, in whatever order they stand.
+    order = np.random.default_rng(1).permutation(cells.n_obs)
+    shuffled = ensembles.annotate_cells(bridge, cells[order].copy())
+    assert shuffled.obs_names.tolist() == cells.obs_names[order].tolist()
+    assert_allclose(shuffled.obsm["ensembles_descendants"], marked.obsm["ensembles_descendants"][order], rtol=0)
+    assert (shuffled.obs["ensembles_fate"].to_numpy() == marked.obs["ensembles_fate"].to_numpy()[order]).all()
+    # Without names rows count, and times must agree with them.
+    nameless = replace(bridge, series=replace(bridge.series, names=None))
+    assert_allclose(ensembles.annotate_cells(nameless, cells).obsm["ensembles_ancestors"],
+                    marked.obsm["ensembles_ancestors"], rtol=0)  # fmt: skip
+    with pytest.raises(
+        ensembles.InputError, match="row [0-9]+ has stage = .* where the series has .* in the same order"
+    ):
+        ensembles.annotate_cells(nameless, cells[::-1].copy())
+    with pytest.raises(ensembles.InputError, match="the cells are not those of the bridge; there are 10 where"):
+        ensembles.annotate_cells(nameless, cells[:10].copy())
     with pytest.raises(ensembles.InputError, match=r"AnnData is saved as .h5ad; the name is 'x.csv'"):
         ensembles.save_cells(marked, tmp_path / "x.csv")
 

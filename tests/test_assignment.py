@@ -1,5 +1,6 @@
 """Sums over one-to-one assignments: enumeration against permutations, belief propagation and clusters against enumeration."""
 
+from dataclasses import replace
 from itertools import permutations
 
 import numpy as np
@@ -179,3 +180,23 @@ def test_what_cannot_be_assigned():
         exact_assignment(np.array([[0.0, -np.inf], [0.0, -np.inf]]))
     with pytest.raises(InputError, match="too many particles to enumerate; 13 x 13"):
         exact_assignment(np.zeros((13, 13)))
+
+
+@pytest.mark.parametrize("factor", [-300.0, -90.0, 90.0, 300.0])
+def test_messages_up_to_a_factor_give_the_same_clusters(factor):
+    # Without loners messages to rows times c and messages to columns over c are the same beliefs.
+    rng = np.random.default_rng(2)
+    places = rng.random((40, 2)) * 6.0
+    squares = ((places[:, None] - (places + 0.6 * rng.normal(size=places.shape))[None]) ** 2).sum(axis=2)
+    posterior = propagate_beliefs(AssignmentGraph.dense(-0.5 * squares / 0.36), tolerance=1e-8)
+    scaled = replace(
+        posterior,
+        to_row=posterior.to_row + factor,
+        to_column=posterior.to_column - factor,
+        log_row_sums=posterior.log_row_sums + factor,
+        log_column_sums=posterior.log_column_sums - factor,
+    )
+    own, other = (sum_clusters(p, limit=6) for p in (posterior, scaled))
+    assert own.probabilities.min() >= 0.0
+    assert_allclose(other.probabilities, own.probabilities, atol=1e-9)
+    assert_allclose(other.log_evidence_correction, own.log_evidence_correction, atol=1e-7)

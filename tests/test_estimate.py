@@ -100,6 +100,10 @@ def test_a_profile_and_its_table():
     profile = estimate.profile("diffusion", points=9)
     assert list(profile.columns) == ["value", "log_evidence", "below_maximum"]
     assert profile["below_maximum"].idxmin() == 4
+    # The curve has its maximum at the estimate, not near it: symmetric differences around it vanish.
+    assert_allclose(profile["value"][4], estimate.values["diffusion"], rtol=1e-9)
+    assert profile["below_maximum"][4] == 0.0
+    assert_allclose(profile["below_maximum"][3], profile["below_maximum"][5], rtol=0.2)
     # Near the maximum a parabola in log D: at 3.5 standard errors 6.1 below, here within a third for a skew curve.
     assert_allclose(profile["below_maximum"].iloc[[0, -1]], 3.5**2 / 2, rtol=0.35)
     table = estimate.to_frame()
@@ -211,3 +215,13 @@ def test_bad_input(arguments, message):
         ensembles.estimate_prior(SERIES, **arguments)
     with pytest.raises(ensembles.InputError, match="unknown parameter"):
         ensembles.estimate_prior(SERIES, "brownian").profile("drift")
+
+
+def test_a_coordinate_that_never_changes_is_refused():
+    rng = np.random.default_rng(0)
+    clouds = [np.column_stack([cloud, np.full(30, 3.0)]) for cloud in 20.0 * rng.random((2, 30, 1))]
+    series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], clouds)
+    with pytest.raises(
+        ensembles.InputError, match="a coordinate that never changes .* 'y' is 3 everywhere; leave it out"
+    ):
+        ensembles.estimate_prior(series, "brownian")

@@ -256,3 +256,32 @@ def series_of(*clouds, weights=None):
 def test_bad_input(series, keywords, message):
     with pytest.raises(ensembles.InputError, match=message):
         ensembles.link_particles(series, ensembles.Brownian(1.0), **keywords)
+
+
+def test_wrapped_positions_without_their_box_give_numbers_and_a_warning():
+    # Particles that crossed the edge are 20 away: messages differ by factors of e^90, which sums over clusters must survive.
+    rng = np.random.default_rng(5)
+    start = rng.random((300, 2)) * [20, 10]
+    end = rng.permutation((start + rng.normal(0, 0.05**0.5, start.shape)) % [20, 10])
+    series = ensembles.SnapshotSeries.from_arrays([0.0, 0.05], [start, end])
+    with pytest.warns(RuntimeWarning, match="move [0-9.e+]+ times as far, in the mean of squares, .* a missing box"):
+        links = ensembles.link_particles(series, ensembles.Brownian(diffusion=0.5))[0]
+    assert links.spread > 2.0
+    assert np.isfinite(links.probabilities).all() and (links.probabilities >= 0.0).all()
+    assert_allclose(np.asarray(links.sparse().sum(axis=1)).ravel(), 1.0, atol=0.01)
+    assert links.entropy.min() >= 0.0
+
+
+@pytest.mark.parametrize(("factor", "warned"), [(0.1, True), (0.8, False), (1.0, False), (1.25, False)])
+def test_a_prior_that_the_links_contradict_is_said_so(factor, warned):
+    rng = np.random.default_rng(1)
+    start = rng.random((200, 2)) * 40.0
+    end = rng.permutation(start + rng.normal(size=start.shape))
+    series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [start, end])
+    with warnings.catch_warnings(record=True) as caught:
+        warnings.simplefilter("always")
+        links = ensembles.link_particles(series, ensembles.Brownian(diffusion=0.5 * factor))[0]
+    assert any("times as far" in str(w.message) for w in caught) == warned
+    assert (links.spread > 1.0) == (factor < 1.0) or factor == 1.0
+    if factor == 1.0:
+        assert abs(links.spread - 1.0) < 4.0 * np.sqrt(2.0 / 400)

@@ -37,7 +37,8 @@ def annotate_cells(bridge: Bridge, cells: Any = None) -> Any:
     ----------
     bridge : a bridge between particles of a series with labels.
     cells : the AnnData object that the series was read from, in any order: cells are found by their names, or by row number
-        where the series has no names; without it a new object without .X is made of the particles, under their names in the file or their rows.
+        where the series has no names. Without it a new object without .X is made of the particles, under their names in the
+        file or their rows.
 
     Returns
     -------

@@ -167,19 +167,23 @@ def _warn(links: ParticleLinks, series: SnapshotSeries) -> None:
             RuntimeWarning,
             stacklevel=3,
         )
-    share = 1.0 / max(links.spread, 1.0 / max(links.spread, 1e-300))
-    if share < _FITS and abs(links.spread - 1.0) > _SURE * np.sqrt(2.0 / (links.shape[0] * series.dimension)):
-        warnings.warn(
-            f"the links {gap} move {links.spread:.3g} times as far, in the mean of squares, as the prior says; links by a prior "
-            "that does not fit are too sure or too unsure: compare with estimate_prior, and look for a missing box and for "
-            "particles that were not found",
-            RuntimeWarning,
-            stacklevel=3,
-        )
     if not links.informative:
         warnings.warn(
             f"the links {gap} carry next to no information; the mean entropy {links.entropy.mean():.2f} is near log "
             f"{links.shape[1]} = {np.log(links.shape[1]):.2f}; use a shorter gap, or fit_bridge for the population",
+            RuntimeWarning,
+            stacklevel=3,
+        )
+    ratio = min(links.spread, 1.0 / max(links.spread, 1e-300))
+    if (
+        links.informative
+        and ratio < _FITS
+        and abs(links.spread - 1.0) > _SURE * np.sqrt(2.0 / (links.shape[0] * series.dimension))
+    ):
+        warnings.warn(
+            f"the links {gap} move {links.spread:.3g} times as far, in the mean of squares, as the prior says; links by a prior "
+            "that does not fit are too sure or too unsure: compare with estimate_prior, and look for a missing box and for "
+            "particles that were not found",
             RuntimeWarning,
             stacklevel=3,
         )
