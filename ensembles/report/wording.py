@@ -23,6 +23,7 @@ __all__ = [
     "gap_sentence",
     "gap_title",
     "intermediate_times",
+    "parameter_unit",
     "speed_unit",
     "square_unit",
     "time_axis_name",
@@ -104,6 +105,27 @@ def speed_unit(series: SnapshotSeries) -> str:
     if not series.time_unit:
         return ""
     return f"{series.length_unit or '1'}/{series.time_unit}"
+
+
+def parameter_unit(name: str, series: SnapshotSeries) -> str:
+    """Unit of a parameter of a prior; '' where it is unknown or there is none.
+
+    Examples
+    --------
+    >>> import ensembles
+    >>> series = ensembles.SnapshotSeries.from_arrays([0, 1], [[0.0], [1.0]], units={"length": "mm", "time": "h"})
+    >>> parameter_unit("diffusion", series), parameter_unit("drift", series), parameter_unit("rate", series)
+    ('mm²/h', 'mm/h', '1/h')
+    """
+    time = series.time_unit
+    units = {
+        "diffusion": f"{square_unit(series) or '1'}/{time}" if time else "",
+        "drift": speed_unit(series),
+        "rate": f"1/{time}" if time else "",
+        "friction": f"1/{time}" if time else "",
+        "centre": series.length_unit,
+    }
+    return units.get(name, "")
 
 
 def square_unit(series: SnapshotSeries) -> str:
