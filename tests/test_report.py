@@ -180,7 +180,7 @@ def test_words_and_units():
     series = cloud_series(1, (2, 2), units={"time": "s"})
     assert time_text(series, 1.5) == "time = 1.5 s"
     assert quantity(0.5, "µm/s") == "0.5 µm/s"
-    assert quantity(0.5, "1/s") == "0.5/s"
+    assert quantity(0.5, "1/s") == "0.5 per s" and quantity(1.0, "1/d") == "1 per d"
     assert quantity(0.5, "") == "0.5"
     inside = intermediate_times(np.array([0.0, 1.0, 2.0, 9.0]), 5)
     assert len(inside) == 5 and not set(inside) & {0.0, 1.0, 2.0, 9.0}
