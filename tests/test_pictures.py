@@ -8,7 +8,6 @@ import pytest
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import to_rgb
 from matplotlib.figure import Figure
-from numpy.testing import assert_allclose
 
 import ensembles
 from ensembles.assessment.quantities import Moments

@@ -164,7 +164,8 @@ def draw_trends(figure: Figure, trends: pandas.DataFrame, series: SnapshotSeries
     lines, words = axes[0].get_legend_handles_labels()
     patches = [Patch(facecolor=to_rgba(_LABELS[k], 0.15), edgecolor=to_rgba(_LABELS[k], 0.4), hatch=_HATCHES[k], lw=0)
                for k in range(len(lines))]  # fmt: skip
-    figure.legend(list(zip(patches, lines)), words, loc="outside upper right", ncols=min(len(labels), 5),
+    handles: list[Any] = list(zip(patches, lines))
+    figure.legend(handles, words, loc="outside upper right", ncols=min(len(labels), 5),
                   handlelength=3.2, handleheight=1.2)  # fmt: skip
     left_out = [
         f"{len(whole) - len(part)} further {what} are in the table only"
