@@ -156,11 +156,18 @@ def intermediate_times(times: np.ndarray, count: int) -> np.ndarray:
     --------
     >>> intermediate_times(np.array([0.0, 6.0, 12.0]), 5).tolist()
     [1.5, 3.0, 4.5, 8.0, 10.0]
+    >>> intermediate_times(np.arange(17.0), 5).tolist()
+    [1.5, 4.5, 8.5, 11.5, 14.5]
     """
     shares = count * np.diff(times) / (times[-1] - times[0])
     counts = np.floor(shares).astype(int)
-    # Largest remainders; a stable sort gives ties to the earlier gap.
-    counts[np.argsort(counts - shares, kind="stable")[: count - counts.sum()]] += 1
+    if count < len(shares):
+        # Remainders of many short gaps are alike, and ties would gather at the beginning.
+        even = times[0] + (times[-1] - times[0]) * (np.arange(count) + 0.5) / count
+        counts = np.bincount(np.searchsorted(times, even, side="right") - 1, minlength=len(shares))
+    else:
+        # Largest remainders; a stable sort gives ties to the earlier gap.
+        counts[np.argsort(counts - shares, kind="stable")[: count - counts.sum()]] += 1
     inside = [np.linspace(start, end, n + 2)[1:-1] for start, end, n in zip(times, times[1:], counts)]
     return np.concatenate(inside)
 
