@@ -176,6 +176,27 @@ def test_the_key_of_the_drift_has_a_number_without_a_length_unit(hard_bridge):
     assert float(key.label.split()[0]) == key.U
 
 
+def test_the_key_of_the_drift_ends_inside_a_tall_picture():
+    rng = np.random.default_rng(0)
+    clouds = [rng.normal(size=(60, 2)) * [1.0, 4.0] + k for k in range(2)]
+    series = ensembles.SnapshotSeries.from_arrays([0, 1], clouds, units=UNITS)
+    figure = drawn("drift", ensembles.fit_bridge(series, ensembles.Brownian(diffusion=0.3)))
+    (ax,) = figure.axes
+    (key,) = (child for child in ax.get_children() if type(child).__name__ == "QuiverKey")
+    (arrow,) = (child for child in ax.get_children() if type(child).__name__ == "Quiver")
+    # With scale_units "xy" an arrow of speed U is U / scale long in data.
+    length = key.U / arrow.scale * (ax.transData.transform([1.0, 0.0])[0] - ax.transData.transform([0.0, 0.0])[0])
+    width = figure.canvas.get_width_height()[0]
+    assert key.X * width + length < width
+
+
+def test_marks_of_many_snapshots_are_named_where_there_is_room():
+    figure = drawn("density", ensembles.fit_bridge(spreading(snapshots=17, count=8, dimension=1), PRIOR))
+    names = [label.get_window_extent() for label in figure.axes[1].get_yticklabels()]
+    assert len(names) == 6
+    assert all(upper.y0 > lower.y1 - 2 for upper, lower in itertools.pairwise(names))
+
+
 @pytest.mark.parametrize("name", FIGURES)
 def test_a_common_factor_is_no_larger_than_the_ticks_and_clear_of_the_title(name):
     rng = np.random.default_rng(0)

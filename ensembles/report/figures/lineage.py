@@ -29,7 +29,7 @@ __all__ = ["draw_flow", "draw_growth", "draw_trends", "save_lineage_figures"]
 _LABELS = ("#0072b2", "#e69f00", "#009e73", "#cc79a7", "#56b4e9", "#d55e00", "#444444", "#c9b800")
 _DASHES: tuple[Any, ...] = ("-", (0, (5, 1.4)), (0, (6, 1.2, 1, 1.2)), (0, (1, 1)), (0, (3, 1)), (0, (8, 1.5)),
                             (0, (4, 1, 1, 1, 1, 1)), (0, (2, 2)))  # fmt: skip
-_HATCHES = ("", "////", r"\\\\\\\\", "....", "----", "||||", "xxxx", "++++")
+_HATCHES = ("", "//", r"\\\\", "..", "--", "||", "xx", "++")
 _MOST_LABELS = 8
 _OTHERS = "others"
 _SPACE, _BLOCK = 0.02, 0.05  # between blocks, of the whole; width of a block, of the shortest gap
@@ -197,7 +197,7 @@ def draw_growth(figure: Figure, growth: pandas.DataFrame, series: SnapshotSeries
             part = here if label is None else here[here["label"] == label]
             # One given rate for all says nothing along its axis: the labels stand there instead.
             x = k + rng.uniform(-0.3, 0.3, len(part)) if flat else part["given"]
-            ax.scatter(x, part["implied"], s=7, color=_LABELS[k], marker=MARKERS[k % len(MARKERS)], alpha=0.6, lw=0,
+            ax.scatter(x, part["implied"], s=10, color=_LABELS[k], marker=MARKERS[k % len(MARKERS)], alpha=0.75, lw=0,
                        label=plain(str(label)), rasterized=True)  # fmt: skip
         if flat:
             ax.axhline(float(here["given"].iloc[0]), color=GREY, lw=0.8, ls="--")
@@ -211,7 +211,8 @@ def draw_growth(figure: Figure, growth: pandas.DataFrame, series: SnapshotSeries
     if not flat:
         figure.supxlabel(f"given net growth rate{unit}")
         if labels != [None]:
-            figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper right", ncols=min(len(labels), 5))
+            figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper right", ncols=min(len(labels), 5),
+                          markerscale=1.6)  # fmt: skip
     lost = int((growth["implied"] == -np.inf).sum())
     gone = f" {lost} particle(s) that leave nothing are not drawn." if lost else ""
     across = "the labels, since one rate was given for all" if flat else "the given rate"
