@@ -137,6 +137,9 @@ def test_noise_of_two_parameters_has_both_units():
     noise = ensembles.choose_noise(series, prior, {"rate": [0.2, 0.5, 1.0], "diffusion": [0.3, 0.6, 1.2]}, repeats=3)
     figure, _ = finished(draw_noise, noise, series)
     assert (figure.axes[0].get_xlabel(), figure.axes[0].get_ylabel()) == ("rate (1/h)", "diffusion (µm²/h)")
+    # Numbers at the colours as one would write them, not 0.08511.
+    ticks = [label.get_text() for label in figure.axes[1].get_yticklabels()]
+    assert ticks and all(len(tick.replace("0.", "").strip("0")) <= 2 or "e" in tick for tick in ticks)
 
 
 # Pictures of a bridge

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.patheffects import withStroke
 from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 
 from ..wording import axis_name, parameter_unit
@@ -84,11 +85,16 @@ def _draw_contours(figure: Figure, result: NoiseProfile, series: SnapshotSeries)
     with np.errstate(divide="ignore", invalid="ignore"):
         clear = np.where(error > 0, deficit / error, 0.0)
     if clear.max() > 1.0:
+        levels = [v for v in (1.0, 2.0) if v < clear.max()]
         lines = ax.contour(
-            x, y, clear, levels=[v for v in (1.0, 2.0) if v < clear.max()], colors=SECOND, linewidths=1.2
+            x, y, clear, levels=levels, colors=INK, linewidths=1.2, linestyles=["-", "--"][: len(levels)]
         )
-        ax.clabel(lines, fmt=lambda v: f"{v:g} s.e.", fontsize=7)
-    ax.plot(result.resampled[:, 0], result.resampled[:, 1], ".", ms=3, color=INK, alpha=0.6, zorder=3, clip_on=False)
+        # Pale round them: the colours beneath run from light to dark.
+        lines.set_path_effects([withStroke(linewidth=2.6, foreground="white")])
+        for text in ax.clabel(lines, fmt=lambda v: f"{v:g} s.e.", fontsize=7):
+            text.set_bbox({"facecolor": "white", "lw": 0, "pad": 0.8})
+    ax.plot(result.resampled[:, 0], result.resampled[:, 1], "o", ms=3.2, color=INK, mec="white", mew=0.6, zorder=3,
+            clip_on=False)  # fmt: skip
     ax.plot(
         result.best[first], result.best[second], "*", ms=11, color=SECOND, mec=INK, mew=0.6, zorder=4, clip_on=False
     )
@@ -97,11 +103,11 @@ def _draw_contours(figure: Figure, result: NoiseProfile, series: SnapshotSeries)
             _logarithmic(ax, which)
     ax.set_xlabel(_name(first, series))
     ax.set_ylabel(_name(second, series))
-    bar = figure.colorbar(filled, ax=ax)
+    bar = figure.colorbar(filled, ax=ax, format="%.2g")
     bar.set_label("below the best\n(nats per particle)")
     return (
-        f"Held-out log score over {first} and {second}. Colour: how far it lies below the best; lines: where that is one "
-        "and two standard errors; star: the best level; dots: the best of bootstrap resamples."
+        f"Held-out log score over {first} and {second}. Colour: how far it lies below the best; lines, solid and "
+        "dashed: where that is one and two standard errors; star: the best level; dots: the best of bootstrap resamples."
     )
 
 
