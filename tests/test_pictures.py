@@ -94,6 +94,8 @@ def test_prior_check_names_gaps_and_its_clouds_differ_in_grey(series):
     assert figure.axes[0].get_title(loc="left") == "time = 0 → 1 h"
     assert figure._supxlabel.get_text() == "energy distance to the prior's prediction (µm)"
     require_readable(figure)
+    below = figure.axes[len(figure.axes) // 2]
+    assert lightness(below.patches[0].get_facecolor()[:3]) - lightness(below.lines[0].get_color()) > 0.3
     if series.dimension == 2:
         observed, predicted = figure.axes[0].lines
         assert (observed.get_label(), predicted.get_label()) == ("observed", "prior")

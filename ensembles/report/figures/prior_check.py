@@ -10,7 +10,7 @@ from matplotlib.figure import Figure
 
 from ..wording import axis_name, gap_title
 from .pair import draw_pair
-from .style import GREY, SECOND, WIDTH, plain, set_title
+from .style import GREY, INK, WIDTH, plain, set_title
 
 if TYPE_CHECKING:
     from ...assessment.surprise import GapSurprise, PriorCheck
@@ -37,7 +37,7 @@ def draw_prior_check(figure: Figure, result: PriorCheck, series: SnapshotSeries)
     shown = "" if len(gaps) == len(result.gaps) else f" {len(gaps)} of {len(result.gaps)} gaps are shown."
     return (
         "Observed end clouds beside what the prior alone makes of the snapshot before. Above: positions (first two "
-        "coordinates); below: energy distances of end clouds simulated under the prior, and the observed one (line)."
+        "coordinates); below: energy distances of end clouds simulated under the prior, and the observed one (dashed line)."
         f"{shown}"
     )
 
@@ -52,7 +52,7 @@ def _draw_clouds(ax: Axes, series: SnapshotSeries, gap: GapSurprise, *, first: b
 
 def _draw_simulated(ax: Axes, gap: GapSurprise, *, first: bool) -> None:
     ax.hist(gap.simulated_energy, 20, color=GREY, ec=GREY, lw=1.0)
-    ax.axvline(gap.energy_distance, color=SECOND, lw=1.6)
+    ax.axvline(gap.energy_distance, color=INK, lw=1.6, ls=(0, (4, 1.5)))
     entropy = f"\n{gap.entropy_p_value:.2g} by relative entropy" if gap.entropy else ""
     set_title(ax, f"p = {gap.energy_p_value:.2g}{entropy}")
     if first:
