@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from .assessment.noise import NoiseProfile
     from .assessment.surprise import PriorCheck
     from .assessment.uncertainty import Bands
+    from .snapshots.series import SnapshotSeries
 
 __all__ = ["Assessment", "assess_study", "held_out_table", "write_assessment"]
 
@@ -30,10 +31,12 @@ Say = Callable[[str, float], None]
 class Assessment:
     """Everything that judges a study.
 
-    `noise` is None where the study asks for no levels; `prior_check` and `effective_sizes` are None in a box; `scaling` says
-    in words which coordinates all of it is in, None for the file's own.
+    `series` is what was judged, in the coordinates of the fit; `noise` is None where the study asks for no levels;
+    `prior_check` and `effective_sizes` are None in a box; `scaling` says in words which coordinates all of it is in, None
+    for the file's own.
     """
 
+    series: SnapshotSeries
     hold_out: HoldOut
     noise: NoiseProfile | None
     prior_check: PriorCheck | None
@@ -109,7 +112,8 @@ def assess_study(study: Study, *, seed: int, say: Say) -> Assessment:
     times = np.sort(np.concatenate([series.times, *middles])).tolist()
     bands = bootstrap(bridge, Moments(times), repeats=asked.repeats, replicates=asked.replicates, rng=seed + 4)
     sizes = effective_sizes(bridge, rng=seed + 3) if prior.box is None else None
-    return Assessment(held, noise, surprise, sizes, bands, None if scaling.kind == "none" else scaling.sentence)
+    sentence = None if scaling.kind == "none" else scaling.sentence
+    return Assessment(series, held, noise, surprise, sizes, bands, sentence)
 
 
 def held_out_table(found: HoldOut) -> pd.DataFrame:
@@ -141,8 +145,9 @@ def write_assessment(study: Study, found: Assessment, folder: Path, *, seed: int
         if result is not None:
             writing.write_table(folder / f"{name}.csv", result.to_frame())
     figures = save_assessment_figures(
-        folder, hold_out=found.hold_out, noise=found.noise, prior_check=found.prior_check, bands=found.bands
-    )
+        folder, found.series, hold_out=found.hold_out, noise=found.noise, prior_check=found.prior_check,
+        bands=found.bands,
+    )  # fmt: skip
     captions = [f"{name}: {caption}" for name, caption in figures]
     writing.write_text(folder / "verdict.txt", "\n".join([*found.sentences, "", *captions]) + "\n")
     writing.write_text(folder / "study.toml", study.text)

@@ -100,12 +100,14 @@ def myoblast_study(components: int, repeats: int) -> tuple[NoiseProfile, HoldOut
     return noise, held
 
 
-def _pictures(folder: Path, name: str, held: HoldOut | None, noise: NoiseProfile | None) -> None:
+def _pictures(
+    folder: Path, name: str, series: ensembles.SnapshotSeries, held: HoldOut | None, noise: NoiseProfile | None
+) -> None:
     from ensembles.report.figures.assessment import save_assessment_figures
 
     place = folder / name
     place.mkdir(parents=True, exist_ok=True)
-    save_assessment_figures(place, hold_out=held, noise=noise)
+    save_assessment_figures(place, series, hold_out=held, noise=noise)
 
 
 def _profile_text(noise: NoiseProfile) -> str:
@@ -118,6 +120,7 @@ def print_argon(out: Path, repeats: int) -> None:
     for across in (True, False):
         what = "coordinate across the slab" if across else "all three coordinates"
         for frames in (3, 5, 9):
+            series = argon_slab(frames, across=across)
             print(f"== argon, {frames} frames over 0 to {LAST:g} ps, {what} ==")
             for factor in (1.0, 10.0):
                 held = argon_hold_out(frames, factor, across=across, repeats=repeats)
@@ -125,11 +128,11 @@ def print_argon(out: Path, repeats: int) -> None:
                 print(floors_above(held).round(3).to_string(index=False))
                 print(held)
                 if across:
-                    _pictures(out, f"argon_{frames}_frames_{factor:g}D", held, None)
+                    _pictures(out, f"argon_{frames}_frames_{factor:g}D", series, held, None)
             noise = argon_profile(frames, across=across, repeats=repeats)
             print("-- profile over D; physical value 0.205 Å²/ps")
             print(_profile_text(noise), end="\n\n", flush=True)
-            _pictures(out, f"argon_{frames}_frames_{'across' if across else 'space'}", None, noise)
+            _pictures(out, f"argon_{frames}_frames_{'across' if across else 'space'}", series, None, noise)
 
 
 def print_myoblasts(out: Path, repeats: int) -> None:
@@ -141,7 +144,7 @@ def print_myoblasts(out: Path, repeats: int) -> None:
         print(f"-- under D = {noise.best['diffusion']:.3g} per h, value ± standard error")
         print(score_table(held).to_string(index=False))
         print(held, *held.dropped, sep="\n", end="\n\n", flush=True)
-        _pictures(out, f"myoblasts_{components}_components", held, noise)
+        _pictures(out, f"myoblasts_{components}_components", myoblasts(components), held, noise)
 
 
 def main() -> None:

@@ -38,7 +38,7 @@ MAY_IMPORT = {
     "overview": FOUNDATION | {"snapshots", "priors", "report"},
     "results": FOUNDATION | {"study", "overview", "report", "lineage_results", "bridges", "schrodinger"},
     "lineage_results": FOUNDATION | {"lineage", "report", "bridges", "study", "priors", "snapshots"},
-    "assess": FOUNDATION | {"study", "report", "assessment", "bridges", "lineage_results"},
+    "assess": FOUNDATION | {"study", "report", "assessment", "bridges", "lineage_results", "snapshots"},
     "cli": FOUNDATION
     | {"study", "overview", "results", "link_results", "assess", "report", "bridges", "snapshots", "priors"},
     "__main__": {"cli"},

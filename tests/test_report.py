@@ -180,10 +180,14 @@ def test_words_and_units():
     series = cloud_series(1, (2, 2), units={"time": "s"})
     assert time_text(series, 1.5) == "time = 1.5 s"
     assert quantity(0.5, "µm/s") == "0.5 µm/s"
-    assert quantity(0.5, "1/s") == "0.5/s"
+    assert quantity(0.5, "1/s") == "0.5 per s" and quantity(1.0, "1/d") == "1 per d"
     assert quantity(0.5, "") == "0.5"
     inside = intermediate_times(np.array([0.0, 1.0, 2.0, 9.0]), 5)
     assert len(inside) == 5 and not set(inside) & {0.0, 1.0, 2.0, 9.0}
+    # More gaps than times: spread over all of them, not gathered in the first.
+    many = intermediate_times(np.arange(31.0), 5)
+    assert len(many) == 5 and many[0] < 6 and many[-1] > 24 and np.diff(many).max() <= 7
+    assert_allclose(intermediate_times(np.array([0.0, 1.0, 2.0, 99.0]), 2), [2 + 97 / 3, 2 + 194 / 3])
 
 
 # What the pictures compute

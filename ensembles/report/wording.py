@@ -23,6 +23,7 @@ __all__ = [
     "gap_sentence",
     "gap_title",
     "intermediate_times",
+    "parameter_unit",
     "speed_unit",
     "square_unit",
     "time_axis_name",
@@ -106,6 +107,27 @@ def speed_unit(series: SnapshotSeries) -> str:
     return f"{series.length_unit or '1'}/{series.time_unit}"
 
 
+def parameter_unit(name: str, series: SnapshotSeries) -> str:
+    """Unit of a parameter of a prior; '' where it is unknown or there is none.
+
+    Examples
+    --------
+    >>> import ensembles
+    >>> series = ensembles.SnapshotSeries.from_arrays([0, 1], [[0.0], [1.0]], units={"length": "mm", "time": "h"})
+    >>> parameter_unit("diffusion", series), parameter_unit("drift", series), parameter_unit("rate", series)
+    ('mm²/h', 'mm/h', '1/h')
+    """
+    time = series.time_unit
+    units = {
+        "diffusion": f"{square_unit(series) or '1'}/{time}" if time else "",
+        "drift": speed_unit(series),
+        "rate": f"1/{time}" if time else "",
+        "friction": f"1/{time}" if time else "",
+        "centre": series.length_unit,
+    }
+    return units.get(name, "")
+
+
 def square_unit(series: SnapshotSeries) -> str:
     """Length squared."""
     return f"{series.length_unit}²" if series.length_unit else ""
@@ -134,11 +156,18 @@ def intermediate_times(times: np.ndarray, count: int) -> np.ndarray:
     --------
     >>> intermediate_times(np.array([0.0, 6.0, 12.0]), 5).tolist()
     [1.5, 3.0, 4.5, 8.0, 10.0]
+    >>> intermediate_times(np.arange(17.0), 5).tolist()
+    [1.5, 4.5, 8.5, 11.5, 14.5]
     """
     shares = count * np.diff(times) / (times[-1] - times[0])
     counts = np.floor(shares).astype(int)
-    # Largest remainders; a stable sort gives ties to the earlier gap.
-    counts[np.argsort(counts - shares, kind="stable")[: count - counts.sum()]] += 1
+    if count < len(shares):
+        # Remainders of many short gaps are alike, and ties would gather at the beginning.
+        even = times[0] + (times[-1] - times[0]) * (np.arange(count) + 0.5) / count
+        counts = np.bincount(np.searchsorted(times, even, side="right") - 1, minlength=len(shares))
+    else:
+        # Largest remainders; a stable sort gives ties to the earlier gap.
+        counts[np.argsort(counts - shares, kind="stable")[: count - counts.sum()]] += 1
     inside = [np.linspace(start, end, n + 2)[1:-1] for start, end, n in zip(times, times[1:], counts)]
     return np.concatenate(inside)
 

@@ -21,12 +21,14 @@ if TYPE_CHECKING:
     from ...assessment.noise import NoiseProfile
     from ...assessment.surprise import PriorCheck
     from ...assessment.uncertainty import Bands
+    from ...snapshots.series import SnapshotSeries
 
 __all__ = ["save_assessment_figures"]
 
 
 def save_assessment_figures(
     folder: str | Path,
+    series: SnapshotSeries,
     *,
     hold_out: HoldOut | None = None,
     noise: NoiseProfile | None = None,
@@ -35,6 +37,8 @@ def save_assessment_figures(
     dpi: int = 200,
 ) -> list[tuple[str, str]]:
     """Draw what is given into `folder` as holdout.png, noise.png, prior_check.png and bands.png (of `Moments`).
+
+    `series` is the one that was judged; its names and units stand at the axes.
 
     Returns
     -------
@@ -52,7 +56,7 @@ def save_assessment_figures(
             continue
         figure = Figure(layout="constrained", facecolor="white")
         FigureCanvasAgg(figure)
-        caption = draw(figure, result)
+        caption = draw(figure, result, series)
         polish(figure)
         with atomic_path(Path(folder) / name) as temporary:
             figure.savefig(temporary, dpi=dpi)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from textwrap import wrap
+
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
@@ -18,7 +20,6 @@ __all__ = ["draw_convergence"]
 def draw_convergence(figure: Figure, scene: Scene, rng: np.random.Generator) -> str:
     """Draw the L1 errors of both marginals and the Hilbert step of every sweep, one panel a gap."""
     axes = panel_grid(figure, len(scene.gaps), 0.8, most=3, above=0.6)
-    ladders = [_draw_gap(ax, scene, gap) for ax, gap in zip(axes, scene.gaps)]
     lowest = min(solution.certificate.tolerance for solution in scene.bridge.solutions)
     positive = [
         solution.history[:, 2:][solution.history[:, 2:] > 0]
@@ -27,9 +28,11 @@ def draw_convergence(figure: Figure, scene: Scene, rng: np.random.Generator) -> 
     ]
     smallest = min((values.min() for values in positive if values.size), default=lowest)
     largest = max((values.max() for values in positive if values.size), default=1.0)
-    axes[0].set_yscale("log")
     # Errors at the level of rounding, of sweeps that meet one marginal exactly, would flatten everything else.
-    axes[0].set_ylim(0.2 * max(min(smallest, lowest), 1e-3 * lowest), 3.0 * max(largest, lowest))
+    floor = 0.2 * max(min(smallest, lowest), 1e-3 * lowest)
+    ladders = [_draw_gap(ax, scene, gap, floor) for ax, gap in zip(axes, scene.gaps)]
+    axes[0].set_yscale("log")
+    axes[0].set_ylim(floor, 3.0 * max(largest, lowest))
     axes[0].set_xlim(0.5, max(2, *(len(scene.bridge.solutions[gap].history) for gap in scene.gaps)) + 0.5)
     figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper center", ncols=4 if len(axes) > 1 else 2,
                   handlelength=2.6)  # fmt: skip
@@ -38,12 +41,13 @@ def draw_convergence(figure: Figure, scene: Scene, rng: np.random.Generator) -> 
     return _caption(scene, any(ladders))
 
 
-def _draw_gap(ax: Axes, scene: Scene, gap: int) -> bool:
-    """Draw one gap; whether it began on a ladder of noise levels."""
+def _draw_gap(ax: Axes, scene: Scene, gap: int, floor: float) -> bool:
+    """Draw one gap, nothing of it below `floor`; whether it began on a ladder of noise levels."""
     solution = scene.bridge.solutions[gap]
     history = np.asarray(solution.history, dtype=float).reshape(-1, 4)
     sweeps = np.arange(1, len(history) + 1)
-    shown = np.where((history > 0) & np.isfinite(history), history, np.nan)
+    # A line to a point below the axis would leave the panel and look like a fall of the error.
+    shown = np.where((history >= floor) & np.isfinite(history), history, np.nan)
     mark = len(history) <= 60
     for column, name, colour, style, marker in (
         (1, "L1 error, earlier marginal", GREY, (0, (3, 1.2)), "s"),
@@ -57,10 +61,12 @@ def _draw_gap(ax: Axes, scene: Scene, gap: int) -> bool:
     changes = np.flatnonzero(np.diff(history[:, 0])) + 1
     for k in changes:
         ax.axvline(k + 0.5, color=GREY, lw=0.5, zorder=0)
-    for start, scale in zip([0, *changes], history[[0, *changes], 0] if len(history) else []):
-        if changes.size:
-            ax.text(start + (0.62 if start else 0.75), 0.02, f"×{scale:.4g}", transform=ax.get_xaxis_transform(),
-                    rotation=90, fontsize=6.5, color=GREY, va="bottom", ha="left")  # fmt: skip
+    if changes.size:
+        # In one text: steps are often one sweep apart, nearer than two labels are wide.
+        steps = ", ".join(f"×{scale:.4g}" for scale in history[[0, *changes], 0])
+        ax.text(0.03, 0.03, "\n".join(wrap(f"noise {steps}", 24)), transform=ax.transAxes, fontsize=7.5, color=INK,
+                va="bottom", ha="left", zorder=4,
+                bbox={"facecolor": "white", "alpha": 0.85, "lw": 0, "pad": 1.0})  # fmt: skip
     ax.xaxis.set_major_locator(MaxNLocator(5, integer=True, min_n_ticks=1))
     certificate = solution.certificate
     title = (
@@ -68,7 +74,7 @@ def _draw_gap(ax: Axes, scene: Scene, gap: int) -> bool:
         f"contraction {_observed(certificate)} (bound {certificate.contraction_bound:.3g})"
     )
     set_title(ax, title)
-    if not (shown[:, 1:] > 1e-3 * solution.certificate.tolerance).any():
+    if not np.isfinite(shown[:, 1:]).any():
         ax.text(0.5, 0.5, "no error left after the start", transform=ax.transAxes, ha="center", va="center")
     return bool(changes.size)
 
@@ -89,7 +95,9 @@ def _caption(scene: Scene, ladder: bool) -> str:
             f"observed: {_observed(certificate)} (a-priori bound {certificate.contraction_bound:.6g})"
         )
     steps = (
-        " Vertical lines: steps of the noise ladder; ×s is the noise variance over the problem's own." if ladder else ""
+        " Vertical lines: steps of the noise ladder; ×s, in their order, is the noise variance over the problem's own."
+        if ladder
+        else ""
     )
     return (
         "Convergence of the solver, L1 error of both marginals and Hilbert step against the iteration. An iteration is "

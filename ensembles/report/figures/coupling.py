@@ -102,7 +102,8 @@ def draw_coupling(figure: Figure, scene: Scene, rng: np.random.Generator) -> str
     return (
         "Links drawn from the coupling, and how sharp it is. Left: lines from particles "
         f"(up to {_MOST_LINKS} at random) to one partner each in the next snapshot, drawn with the coupling's "
-        "probabilities. Right: effective number of targets of each particle, the exponential of the entropy of its "
+        "probabilities; each snapshot has its own marker, the later one the "
+        "lighter. Right: effective number of targets of each particle, the exponential of the entropy of its "
         "probabilities; 1 is a certain target, and the dashed line is the median "
         f"({', '.join(f'{m:.3g}' for m in medians)}). With many targets a single link means little."
         f"{scene.projection_sentence}{scene.gaps_left_out} {caution}"

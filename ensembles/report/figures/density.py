@@ -73,7 +73,8 @@ def _draw_curves(figure: Figure, scene: Scene, rng: np.random.Generator) -> None
         rows = scene.some(cloud, weights, rng)
         rug.plot(cloud[rows, 0], np.full(rows.size, k), MARKERS[k % len(MARKERS)], ms=3, alpha=0.5,
                  color=TIME((t - series.times[0]) / span), mew=0, rasterized=True)  # fmt: skip
-    rug.set_yticks(range(len(series)), [plain(time_text(series, t)) for t in series.times])
+    step = -(-len(series) // 8)  # more names than that would lie over one another
+    rug.set_yticks(range(0, len(series), step), [plain(time_text(series, t)) for t in series.times[::step]])
     rug.set_ylim(len(series) - 0.4, -0.6)
     rug.set_xlabel(scene.plane.names[0])
 

@@ -15,6 +15,7 @@ __all__ = ["draw_drift"]
 
 _POPULATED = 0.02  # of the largest density: arrows stand where at least that much of the population is
 _ARROWS = 20  # along the longer side of the window
+_LENGTH = 1.3  # of a fast arrow, in cells
 _DRAWS = 4000
 _FEWEST = 6  # draws in a cell, for a mean that is more than noise
 
@@ -78,19 +79,23 @@ def _draw_arrows(figure: Figure, scene: Scene, rng: np.random.Generator) -> str:
     field = _exact_field if exact else _mean_field
     fields = [field(ax, scene, gap, cell, rng) for ax, gap in zip(axes, scene.gaps)]
     rates = np.concatenate([np.linalg.norm(vectors / cell, axis=1) for _, vectors in fields])
-    # One scale in all panels: a fast arrow is 1.3 cells long.
+    # One scale in all panels: a fast arrow is `_LENGTH` cells long.
     fast = float(np.quantile(rates, 0.95)) if rates.size else 0.0
     for ax, gap, (points, vectors) in zip(axes, scene.gaps, fields):
         scene.frame(ax)
         set_title(ax, _title(scene, gap))
         if fast > 0.0:
-            arrows = ax.quiver(*points.T, *vectors.T, angles="xy", scale_units="xy", scale=fast / 1.3,
+            arrows = ax.quiver(*points.T, *vectors.T, angles="xy", scale_units="xy", scale=fast / _LENGTH,
                                color=INK, width=0.0045, headwidth=3.6, headlength=4.2, headaxislength=3.8,
                                minlength=0.5, pivot="tail", zorder=3)  # fmt: skip
     if fast > 0.0:
-        key = round_number(fast * float(cell[0]))
+        # The key's arrow begins at `x` and must end inside the picture.
+        columns = len({round(ax.get_position().x0, 6) for ax in axes})
+        width = float(scene.sides[0]) * columns
+        key = round_number(min(fast * float(cell[0]), 0.1 * width * fast / _LENGTH))
+        x = min(0.91, 0.985 - _LENGTH * key / fast / width)
         text = plain(quantity(key, speed_unit(scene.bridge.series)))
-        axes[-1].quiverkey(arrows, 0.91, 0.13 / figure.get_figheight(), key, text, labelpos="W", coordinates="figure",
+        axes[-1].quiverkey(arrows, x, 0.13 / figure.get_figheight(), key, text, labelpos="W", coordinates="figure",
                            color=INK, fontproperties={"size": 8})  # fmt: skip
     scene.name_axes(figure)
     if exact:

@@ -8,11 +8,13 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
-from ..wording import axis_name
-from .style import ACCENT, GREY, INK, MARKERS, SECOND, WIDTH, plain, set_title
+from ..wording import axis_name, square_unit, time_text
+from .pair import draw_pair
+from .style import ACCENT, GREY, INK, MARKERS, WIDTH, plain, set_title
 
 if TYPE_CHECKING:
     from ...assessment.hold_out import HeldOutTime, HoldOut
+    from ...snapshots.series import SnapshotSeries
 
 __all__ = ["PREDICTION_WORDS", "draw_hold_out"]
 
@@ -28,7 +30,7 @@ _MOST_TIMES = 4
 _MOST_POINTS = 600
 
 
-def draw_hold_out(figure: Figure, result: HoldOut, score: str = "energy_distance") -> str:
+def draw_hold_out(figure: Figure, result: HoldOut, series: SnapshotSeries, score: str = "energy_distance") -> str:
     """Draw scores above, clouds below (up to four times, spread evenly); the caption says what is seen."""
     held = {row.time for row in result.scores if row.score == score}
     if not held:
@@ -42,17 +44,15 @@ def draw_hold_out(figure: Figure, result: HoldOut, score: str = "energy_distance
         ax = figure.add_subplot(grid[0, column], sharex=top, sharey=top)
         top = top or ax
         _draw_scores(ax, result, time.time, score, first=column == 0)
-        set_title(ax, f"left out: {time.time:g} {result.time_unit}".rstrip())
+        set_title(ax, f"left out: {time_text(series, time.time)}")
+        ax.set_xlabel(_score_name(score, series, narrow=len(times) > 2))
     first: Axes | None = None
     for column, time in enumerate(times):
         ax = figure.add_subplot(grid[1, column], sharex=first, sharey=first)
-        _draw_clouds(ax, result, time, first=first is None)
+        _draw_clouds(ax, series, time, first=first is None)
         first = first or ax
     handles, labels = figure.axes[-1].get_legend_handles_labels()
     figure.legend(handles, labels, loc="outside lower center", ncols=2, markerscale=1.6, handletextpad=0.3)
-    unit = {"covariance_error": f"{result.length_unit}²" if result.length_unit else "", "log_density": "nats",
-            "kernel_discrepancy": ""}.get(score, result.length_unit)  # fmt: skip
-    figure.axes[0].set_xlabel(plain(axis_name(score.replace("_", " "), unit)))
     shown = (
         "" if len(times) == len(result.times) else f" {len(times)} of {len(result.times)} left-out snapshots are shown."
     )
@@ -61,6 +61,15 @@ def draw_hold_out(figure: Figure, result: HoldOut, score: str = "energy_distance
         "out. Bars: one standard error; grey band: mean ± two standard deviations of what a second snapshot of the same "
         f"population would score, the floor. Below: the observed snapshot and as many draws from the bridge.{shown}"
     )
+
+
+def _score_name(score: str, series: SnapshotSeries, *, narrow: bool) -> str:
+    """Name and unit of a score, the unit on a line of its own in a narrow panel."""
+    unit = {"covariance_error": square_unit(series), "log_density": "nats", "kernel_discrepancy": ""}.get(
+        score, series.length_unit
+    )
+    name = axis_name(score.replace("_", " "), unit)
+    return plain(name.replace(" (", "\n(") if narrow else name)
 
 
 def _draw_scores(ax: Axes, result: HoldOut, time: float, score: str, *, first: bool) -> None:
@@ -85,23 +94,11 @@ def _draw_scores(ax: Axes, result: HoldOut, time: float, score: str, *, first: b
         ax.set_ylim(len(names) - 0.5, -0.5)
 
 
-def _draw_clouds(ax: Axes, result: HoldOut, time: HeldOutTime, *, first: bool) -> None:
+def _draw_clouds(ax: Axes, series: SnapshotSeries, time: HeldOutTime, *, first: bool) -> None:
     rng = np.random.default_rng(0)
     predicted = time.predictions["bridge"]
     count = min(_MOST_POINTS, len(time.observed), len(predicted))
     observed = time.observed[rng.choice(len(time.observed), count, p=time.weights)]
     predicted = predicted[rng.choice(len(predicted), count, replace=False)]
-    if observed.shape[1] == 1:
-        edges = np.histogram_bin_edges(np.concatenate([observed, predicted])[:, 0], 25)
-        ax.hist(observed[:, 0], edges, color=GREY, alpha=0.5, label="observed")
-        ax.hist(predicted[:, 0], edges, histtype="step", color=ACCENT, lw=1.4, label="bridge")
-        ax.set_xlabel(plain(axis_name(result.names[0], result.length_unit)))
-        if first:
-            ax.set_ylabel("particles")
-    else:
-        ax.plot(*observed[:, :2].T, "o", ms=2.6, color=SECOND, alpha=0.6, mew=0, label="observed", rasterized=True)
-        ax.plot(*predicted[:, :2].T, "^", ms=2.6, color=ACCENT, alpha=0.6, mew=0, label="bridge", rasterized=True)
-        ax.set_xlabel(plain(axis_name(result.names[0], result.length_unit)))
-        if first:
-            ax.set_ylabel(plain(axis_name(result.names[1], result.length_unit)))
+    draw_pair(ax, observed, predicted, series, label="bridge", first=first)
     ax.tick_params(labelleft=first)

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.colors import to_rgba
 from matplotlib.figure import Figure
-from matplotlib.patches import PathPatch, Rectangle
+from matplotlib.patches import Patch, PathPatch, Rectangle
 from matplotlib.path import Path as Outline
 
 from ...lineage.labels import UNLABELLED
@@ -26,6 +27,9 @@ __all__ = ["draw_flow", "draw_growth", "draw_trends", "save_lineage_figures"]
 
 # Okabe and Ito's colours (from memory), told apart with any colour vision, in an order of changing lightness.
 _LABELS = ("#0072b2", "#e69f00", "#009e73", "#cc79a7", "#56b4e9", "#d55e00", "#444444", "#c9b800")
+_DASHES: tuple[Any, ...] = ("-", (0, (5, 1.4)), (0, (6, 1.2, 1, 1.2)), (0, (1, 1)), (0, (3, 1)), (0, (8, 1.5)),
+                            (0, (4, 1, 1, 1, 1, 1)), (0, (2, 2)))  # fmt: skip
+_HATCHES = ("", "//", r"\\\\", "..", "--", "||", "xx", "++")
 _MOST_LABELS = 8
 _OTHERS = "others"
 _SPACE, _BLOCK = 0.02, 0.05  # between blocks, of the whole; width of a block, of the shortest gap
@@ -66,6 +70,7 @@ def draw_flow(figure: Figure, flows: pandas.DataFrame, series: SnapshotSeries) -
         _draw_bands(ax, series, int(gap), matrix, (shares[int(gap)], shares[int(gap) + 1]), width, order, colour)
     ax.set_xticks(series.times, [f"{t:g}" for t in series.times])
     ax.set_yticks([])
+    figure.supylabel("share of the snapshot")  # outside the names of the first blocks
     ax.spines["left"].set_visible(False)
     ax.set_xlabel(plain(time_axis_name(series)))
     ax.set_xlim(series.times[0] - 2 * width, series.times[-1] + 2 * width + 0.16 * np.ptp(series.times))
@@ -147,12 +152,21 @@ def draw_trends(figure: Figure, trends: pandas.DataFrame, series: SnapshotSeries
     for ax, name in zip(axes, shown):
         for k, label in enumerate(labels):
             part = trends[(trends["feature"] == name) & (trends["label"] == label)]
-            ax.fill_between(part["time"], part["lower"], part["upper"], color=_LABELS[k], alpha=0.15, lw=0)
-            ax.plot(part["time"], part["mean"], color=_LABELS[k], lw=1.5, marker=MARKERS[k], markevery=6, ms=3.5,
-                    label=plain(str(label)))  # fmt: skip
+            # Bands overlap: each has an edge in the line's own dashes, and a hatching for those who see no colours.
+            ax.fill_between(part["time"], part["lower"], part["upper"], facecolor=to_rgba(_LABELS[k], 0.15), lw=0,
+                            edgecolor=to_rgba(_LABELS[k], 0.4), hatch=_HATCHES[k])  # fmt: skip
+            for edge in ("lower", "upper"):
+                ax.plot(part["time"], part[edge], color=_LABELS[k], lw=0.7, ls=_DASHES[k])
+            ax.plot(part["time"], part["mean"], color=_LABELS[k], lw=1.6, ls=_DASHES[k], marker=MARKERS[k], markevery=6,
+                    ms=4, mec="white", mew=0.4, label=plain(str(label)), zorder=3)  # fmt: skip
         set_title(ax, name)
     figure.supxlabel(plain(time_axis_name(series)))
-    figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper right", ncols=min(len(labels), 5))
+    lines, words = axes[0].get_legend_handles_labels()
+    patches = [Patch(facecolor=to_rgba(_LABELS[k], 0.15), edgecolor=to_rgba(_LABELS[k], 0.4), hatch=_HATCHES[k], lw=0)
+               for k in range(len(lines))]  # fmt: skip
+    handles: list[Any] = list(zip(patches, lines))
+    figure.legend(handles, words, loc="outside upper right", ncols=min(len(labels), 5),
+                  handlelength=3.2, handleheight=1.2)  # fmt: skip
     left_out = [
         f"{len(whole) - len(part)} further {what} are in the table only"
         for what, whole, part in (
@@ -183,7 +197,7 @@ def draw_growth(figure: Figure, growth: pandas.DataFrame, series: SnapshotSeries
             part = here if label is None else here[here["label"] == label]
             # One given rate for all says nothing along its axis: the labels stand there instead.
             x = k + rng.uniform(-0.3, 0.3, len(part)) if flat else part["given"]
-            ax.scatter(x, part["implied"], s=7, color=_LABELS[k], marker=MARKERS[k % len(MARKERS)], alpha=0.6, lw=0,
+            ax.scatter(x, part["implied"], s=10, color=_LABELS[k], marker=MARKERS[k % len(MARKERS)], alpha=0.75, lw=0,
                        label=plain(str(label)), rasterized=True)  # fmt: skip
         if flat:
             ax.axhline(float(here["given"].iloc[0]), color=GREY, lw=0.8, ls="--")
@@ -197,7 +211,8 @@ def draw_growth(figure: Figure, growth: pandas.DataFrame, series: SnapshotSeries
     if not flat:
         figure.supxlabel(f"given net growth rate{unit}")
         if labels != [None]:
-            figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper right", ncols=min(len(labels), 5))
+            figure.legend(*axes[0].get_legend_handles_labels(), loc="outside upper right", ncols=min(len(labels), 5),
+                          markerscale=1.6)  # fmt: skip
     lost = int((growth["implied"] == -np.inf).sum())
     gone = f" {lost} particle(s) that leave nothing are not drawn." if lost else ""
     across = "the labels, since one rate was given for all" if flat else "the given rate"

@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING
 
 from matplotlib.figure import Figure
 
-from ..wording import bracketed
-from .style import ACCENT, GREY, WIDTH, panel_grid, set_title
+from ..wording import axis_name
+from .style import ACCENT, GREY, WIDTH, panel_grid, plain, set_title, with_error
 
 if TYPE_CHECKING:
     import pandas
@@ -30,9 +30,9 @@ def draw_profiles(figure: Figure, profiles: dict[str, pandas.DataFrame], table: 
         ax.axhline(-drop, color=GREY, linewidth=0.8, linestyle="--")
         ax.axvline(row["value"], color=GREY, linewidth=0.8)
         ax.plot(profile["value"], -profile["below_maximum"], color=ACCENT, marker="o", markersize=3)
-        set_title(ax, f"{name} = {row['value']:.3g} ± {row['standard_error']:.1g}")
-        ax.set_xlabel(bracketed(name, row["unit"]))
-        ax.set_ylabel("log evidence, below maximum (nats)")
+        set_title(ax, f"{name} = {with_error(row['value'], row['standard_error'])}")
+        ax.set_xlabel(plain(axis_name(name, row["unit"])))
+    figure.supylabel("log evidence,\nbelow maximum (nats)", multialignment="center")
     return (
         "Log evidence of each parameter, summed over all links of the unlabelled frames, the other parameters at their best "
         "for it. The band is the 95 % interval from the curvature; where the curve crosses the dashed line is the interval "

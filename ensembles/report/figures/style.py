@@ -17,6 +17,7 @@ __all__ = [
     "GREY",
     "INK",
     "MARKERS",
+    "PALE",
     "SECOND",
     "TIME",
     "WIDTH",
@@ -27,6 +28,7 @@ __all__ = [
     "quantity",
     "round_number",
     "set_title",
+    "with_error",
 ]
 
 WIDTH = 7.0
@@ -34,6 +36,9 @@ WIDTH = 7.0
 
 INK, GREY, ACCENT, SECOND = "#222222", "#8c8c8c", "#0b5d8a", "#c8641e"
 """Text; what stands back; and two colours that differ in hue and in lightness, also in grey."""
+
+PALE = "#f0a868"
+"""Filled marks that lie under `INK`; light also in grey."""
 
 MARKERS = ("o", "^", "s", "D", "v", "P", "X", "*")
 """One a snapshot, so that colour is not needed to tell them apart."""
@@ -108,12 +113,25 @@ def polish(figure: Figure) -> None:
         for spine in ax.spines.values():
             spine.set_linewidth(0.6)
         _size([ax.xaxis.label, ax.yaxis.label], _SIZES["label"])
+        _size([ax.xaxis.get_offset_text(), ax.yaxis.get_offset_text()], _SIZES["tick"])
         _size(ax.texts, _SIZES["note"], only_larger=True)
     legends = [legend for legend in (*figure.legends, *(ax.get_legend() for ax in figure.axes)) if legend]
     for legend in legends:
         legend.set_frame_on(False)
         _size([*legend.get_texts(), legend.get_title()], _SIZES["legend"])
     _size([text for text in figure.texts], _SIZES["label"])
+    _clear_factors(figure)
+
+
+def _clear_factors(figure: Figure) -> None:
+    """Lift titles above the common factor of an axis, such as 1e6, that stands where they begin."""
+    figure.draw_without_rendering()  # the factors are known only then
+    factors = [ax.yaxis.get_offset_text() for ax in figure.axes if ax.get_title(loc="left")]
+    if not any(factor.get_visible() and factor.get_text() for factor in factors):
+        return
+    for ax in figure.axes:  # all of them: titles of a row stay on one line
+        if title := ax.get_title(loc="left"):
+            ax.set_title(title, loc="left", fontsize=_SIZES["title"], color=INK, pad=_SIZES["tick"] + 8.0)
 
 
 def _size(texts: Sequence[Text], size: float, only_larger: bool = False) -> None:
@@ -124,8 +142,26 @@ def _size(texts: Sequence[Text], size: float, only_larger: bool = False) -> None
 
 
 def quantity(value: float, unit: str) -> str:
-    """A number with its unit: ``0.5 µm/s``, ``0.5/d``."""
-    return f"{value:g}{unit[1:]}" if unit.startswith("1/") else f"{value:g} {unit}".rstrip()
+    """A number with its unit: ``0.5 µm/s``; one over a time as ``1 per d``, in which the number is not lost in the unit."""
+    return f"{value:g} per {unit[2:]}" if unit.startswith("1/") else f"{value:g} {unit}".rstrip()
+
+
+def with_error(value: float, error: float) -> str:
+    """A number and its standard error, both to the second significant digit of the error.
+
+    Examples
+    --------
+    >>> with_error(1.3684, 0.1231), with_error(45617.0, 1234.0), with_error(2.0, 0.0996)
+    ('1.37 ± 0.12', '45600 ± 1200', '2.00 ± 0.10')
+    """
+    if not (np.isfinite(value) and np.isfinite(error) and error > 0.0):
+        return f"{value:.3g} ± {error:.2g}"
+    places = 1 - int(f"{error:.1e}".partition("e")[2])
+    if places > 4 or places < -4:
+        power = int(f"{max(abs(value), error):e}".partition("e")[2])
+        places = max(0, power + places)
+        return f"({value / 10.0**power:.{places}f} ± {error / 10.0**power:.{places}f})e{power:+03d}"
+    return f"{round(value, places):.{max(0, places)}f} ± {round(error, places):.{max(0, places)}f}"
 
 
 def round_number(value: float) -> float:
