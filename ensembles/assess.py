@@ -75,7 +75,7 @@ def assess_study(study: Study, *, seed: int, say: Say) -> Assessment:
     Raises
     ------
     InputError
-        With two snapshots, unknown names or levels in the tables, and whatever the data and the prior raise.
+        With identity = "same", two snapshots, unknown names or levels in the tables, and whatever the data and the prior raise.
     ComputationError
         If a fit does not reach its tolerance.
     """
@@ -89,6 +89,11 @@ def assess_study(study: Study, *, seed: int, say: Say) -> Assessment:
     from .bridges.fit import fit_bridge
     from .lineage_results import series_with_growth
 
+    if study.identity == "same":
+        raise checks.InputError(
+            "left-out snapshots judge the bridge of a population; the study has identity = 'same'; use solve, whose page has the "
+            "estimate and the links with their errors, or identity = 'lost'"
+        )
     say("Reading the snapshots", 0.0)
     original, prior, asked = study.read_original(), study.build_prior(), study.holdout
     scaling = study.fit_scaling(original)

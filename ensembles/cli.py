@@ -1,12 +1,13 @@
 """The command line: a thin layer that reads a study, calls the package and says what it did. No mathematics.
 
-Exit status: 0 done, 1 the computation failed and says why, 2 wrong usage or input, 130 interrupted.
+Exit status: 0 done, 1 the computation failed and says why, 2 wrong usage or input, 130 interrupted, 143 terminated.
 """
 
 from __future__ import annotations
 
 import functools
 import io
+import signal
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -40,6 +41,10 @@ StudyFile = Annotated[Path, typer.Argument(metavar="STUDY", help="The study file
 Force = Annotated[bool, typer.Option("--force", help="Replace what an earlier run wrote.")]
 
 
+class _Terminated(KeyboardInterrupt):
+    """SIGTERM, as a batch system sends it: what is half written is removed as after Ctrl-C."""
+
+
 def _output() -> Console:
     return Console(width=None if sys.stdout.isatty() else _WIDE, highlight=False)
 
@@ -65,8 +70,8 @@ def _reported(command: Callable[_Arguments, None]) -> Callable[_Arguments, None]
             raise failed(f"computation failed: {cause}", 1) from None
         except MemoryError as cause:
             raise failed(f"computation failed: out of memory; {cause}; use fewer particles or paths", 1) from None
-        except KeyboardInterrupt:
-            raise failed("interrupted; nothing was written", 130) from None
+        except KeyboardInterrupt as cause:
+            raise failed("interrupted; nothing was written", 143 if isinstance(cause, _Terminated) else 130) from None
         except BrokenPipeError:
             raise
         except OSError as cause:
@@ -94,6 +99,13 @@ def _print_frame(console: Console, title: str, frame: pd.DataFrame) -> None:
     for row in frame.itertuples(index=False):
         table.add_row(*[Text(f"{value:.4g}" if isinstance(value, float) else str(value)) for value in row])
     console.print(table)
+
+
+def _say_written(out: Path, written: list[str], warned: list[str]) -> None:
+    """Say what was written, and on stderr what the page warns of."""
+    for sentence in warned:
+        _errors().print(f"warning: {sentence}", markup=False)
+    _output().print(f"Wrote {out}: {', '.join(written)}", markup=False, soft_wrap=True)
 
 
 def _version(wanted: bool) -> None:
@@ -156,6 +168,7 @@ def solve(
     force: Force = False,
 ) -> None:
     """Fit the bridge of a study and write its tables, pictures and report page."""
+    from .report.wording import warning_sentences
     from .results import fit_study, write_results
     from .study import read_study
 
@@ -165,15 +178,14 @@ def solve(
         from .link_results import write_links
 
         with _progress() as say, writing.output_folder(out, force=force) as folder:
-            written = write_links(study, folder, seed=study.seed if seed is None else seed, say=say)
-        _output().print(f"Wrote {out}: {', '.join(written)}", markup=False, soft_wrap=True)
+            written, warned = write_links(study, folder, seed=study.seed if seed is None else seed, say=say)
+        _say_written(out, written, warned)
         return
     with _progress() as say:
         bridge = fit_study(study, say=say)
         with writing.output_folder(out, force=force) as folder:
             written = write_results(study, bridge, folder, seed=study.seed if seed is None else seed, say=say)
-    console = _output()
-    console.print(f"Wrote {out}: {', '.join(written)}", markup=False, soft_wrap=True)
+    _say_written(out, written, warning_sentences(bridge))
 
 
 @app.command()
@@ -206,6 +218,11 @@ def holdout(
 
 def main(arguments: list[str] | None = None) -> Any:
     """Run the command line; ends the process with its exit status."""
+
+    def terminated(number: int, frame: Any) -> None:
+        raise _Terminated
+
+    signal.signal(signal.SIGTERM, terminated)
     for stream in (sys.stdout, sys.stderr):
         # A terminal that knows no µ shows a question mark; it must not stop the run.
         if isinstance(stream, io.TextIOWrapper):

@@ -26,12 +26,12 @@ __all__ = ["write_links"]
 Say = Callable[[str, float], None]
 
 
-def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]:
+def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> tuple[list[str], list[str]]:
     """Write links.csv, particles.csv, estimate.csv, paths.csv, two pictures, report.html, summary.json and the study file.
 
     Returns
     -------
-    list of the names of the files written, sorted.
+    the names of the files written, sorted, and the warnings that the page shows.
 
     Raises
     ------
@@ -77,7 +77,7 @@ def write_links(study: Study, folder: Path, *, seed: int, say: Say) -> list[str]
     write_page(folder, summary, figures, LINKS)
     # Last: the folder is known as a complete output by this file.
     writing.write_json(folder / writing.MARKER, summary)
-    return sorted(path.name for path in folder.iterdir())
+    return sorted(path.name for path in folder.iterdir()), said
 
 
 def _links_table(series: SnapshotSeries, links: list[ParticleLinks], box: Box | None, count: int) -> pandas.DataFrame:

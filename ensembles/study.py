@@ -20,7 +20,7 @@ from .snapshots.files import read_snapshots
 from .snapshots.growth import Growth
 from .snapshots.scaling import Scaling, fit_scaling
 from .snapshots.series import SnapshotSeries
-from .study_links import BoxTable, LinksTable, box_problems, with_numbers
+from .study_links import BoxTable, LinksTable, box_problems, links_problems, with_numbers
 from .study_problems import Problem, line_of, problem_of, refuse, syntax_line, unknown_key
 from .study_tables import (
     DataTable,
@@ -172,7 +172,7 @@ def read_study(path: str | PathLike[str]) -> Study:
         errors = {tuple(error["loc"]): error for error in cause.errors(include_url=False)}
         problems += [problem_of(text, error, tables) for error in errors.values()]
     if not problems:
-        problems += box_problems(content, text)
+        problems += box_problems(content, text) + links_problems(content, text)
     problems += _unnamed_columns(content, text) + _prior_problems(content, text, tables)
     refuse(place, problems)
     assert found is not None  # refuse() raised otherwise

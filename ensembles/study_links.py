@@ -12,7 +12,7 @@ from .priors.box import Box
 from .quantities import DIMENSIONS, read_quantity
 from .study_problems import Problem, line_of
 
-__all__ = ["BoxTable", "LinksTable", "box_problems", "with_numbers"]
+__all__ = ["BoxTable", "LinksTable", "box_problems", "links_problems", "with_numbers"]
 
 _Edges = Annotated[tuple[float, ...], Field(strict=False)] | float | None
 _Boundaries = Annotated[tuple[str, ...], Field(strict=False)] | str
@@ -81,6 +81,18 @@ def with_numbers(content: Mapping[str, Any], text: str) -> tuple[dict[str, Any],
                 read[name] = 1.0  # stands in, so that one mistake is reported once
         changed[table] = read
     return changed, problems
+
+
+def links_problems(content: Mapping[str, Any], text: str) -> list[Problem]:
+    """A table [links] in a study whose individuals are lost, which would be ignored."""
+    study = content.get("study")
+    identity = study.get("identity", "lost") if isinstance(study, Mapping) else "lost"
+    if "links" not in content or identity != "lost":
+        return []
+    message = (
+        "[links] is for the same particles in every frame; identity is 'lost'; set identity = 'same', or remove it"
+    )
+    return [Problem(line_of(text, ["links"]), message)]
 
 
 def box_problems(content: Mapping[str, Any], text: str) -> list[Problem]:

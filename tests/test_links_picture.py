@@ -55,3 +55,13 @@ def test_links_across_a_periodic_edge_are_short():
     figure, _, _ = drawn([start, end], box, 0.1)
     lengths = [float(np.linalg.norm(s[1] - s[0])) for s in segments(figure.axes[0])]
     assert len(lengths) == 3 and max(lengths) < 0.6
+
+
+def test_later_places_are_drawn_without_any_probable_link():
+    rng = np.random.default_rng(4)
+    clouds = 10.0 * rng.random((2, 35, 2))
+    with pytest.warns(RuntimeWarning, match="next to no information"):
+        figure, _, links = drawn(list(clouds), diffusion=5e3)
+    assert links[0].probabilities.max() < 0.1 and not segments(figure.axes[0])
+    points = np.concatenate([c.get_offsets() for c in figure.axes[0].collections if len(c.get_offsets()) > 1])
+    assert len(points) >= 35 + 30

@@ -1,6 +1,8 @@
 """Study files about the same particles: identity, boxes, units; what `solve` then writes."""
 
 import json
+import subprocess
+import sys
 
 import numpy as np
 import pandas
@@ -165,3 +167,43 @@ def test_bad_study_files(tmp_path, changes, message):
     assert result.exit_code == 2
     assert message in result.output.replace("\n", " ")
     assert not (tmp_path / "out").exists()
+
+
+def test_what_the_page_warns_of_stands_on_stderr_too(tmp_path):
+    # Links by a diffusion of a tenth move much farther than it says.
+    study = write_study(tmp_path, diffusion='"0.02 um^2/s"')
+    result = run(study, tmp_path / "out")
+    assert result.exit_code == 0, result.output
+    summary = json.loads((tmp_path / "out" / "summary.json").read_text(encoding="utf-8"))
+    assert any("times as far" in sentence for sentence in summary["warnings"])
+    assert "warning: the links between t = 0 and t = 0.5 move" in result.output
+    assert "the links between t = 0 and t = 0.5 move" in (tmp_path / "out" / "report.html").read_text(encoding="utf-8")
+
+
+def test_left_out_snapshots_and_links_do_not_mix(tmp_path):
+    study = write_study(tmp_path)
+    result = CliRunner().invoke(app, ["holdout", str(study), "--out", str(tmp_path / "out")])
+    assert result.exit_code == 2
+    assert "judge the bridge of a population; the study has identity = 'same'; use solve" in result.output
+    lost = write_study(tmp_path, identity="lost", links="[links]\ndetection = 0.5")
+    with pytest.raises(
+        ensembles.InputError, match=r"\[links\] is for the same particles in every frame; identity is 'lost'"
+    ):
+        read_study(lost)
+
+
+def test_a_terminated_run_leaves_nothing_behind(tmp_path):
+    study = write_study(tmp_path)
+    # Held where it draws, with its hidden folder half full.
+    code = (
+        "import time, ensembles.link_results as r, ensembles.cli as c\n"
+        "def wait(*a, **k):\n    print('drawing', flush=True)\n    time.sleep(60)\n"
+        f"r._save_figures = wait\nc.main(['solve', {str(study)!r}, '--out', {str(tmp_path / 'out.1')!r}])\n"
+    )
+    process = subprocess.Popen([sys.executable, "-c", code], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
+    assert process.stdout.readline() == "drawing\n"
+    assert any(".partial" in path.name for path in tmp_path.iterdir())
+    process.terminate()
+    _, said = process.communicate(timeout=30)
+    assert process.returncode == 143 and "interrupted; nothing was written" in said
+    assert sorted(path.name for path in tmp_path.iterdir()) == ["data.csv", "study.toml"]

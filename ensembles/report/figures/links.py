@@ -87,7 +87,11 @@ def _draw_map(ax: Axes, series: SnapshotSeries, links: ParticleLinks, box: Box |
         upper = least
     span = series.times[-1] - series.times[0]
     starts = np.column_stack([np.full(chosen.size, times[0]), early[chosen, 0]]) if line else early[chosen, :2]
-    for points, k in ((at[1], links.target), (starts, links.source)):
+    low, high = early[chosen].min(axis=0), early[chosen].max(axis=0)
+    margin = 0.05 * (high - low)
+    inside = late[((late >= low - margin) & (late <= high + margin)).all(axis=1)]
+    later = np.column_stack([np.full(len(inside), times[1]), inside[:, 0]]) if line else inside[:, :2]
+    for points, k in ((np.concatenate([at[1], later]), links.target), (starts, links.source)):
         colour = TIME((series.times[k] - series.times[0]) / span)
         ax.scatter(*points.T, s=9, marker=MARKERS[int(k == links.target)], color=colour, edgecolor="white", linewidth=0.3,
                    zorder=4)  # fmt: skip
