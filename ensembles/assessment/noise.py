@@ -103,9 +103,9 @@ class NoiseProfile:
 
     def __repr__(self) -> str:
         parts = [
-            f"{name}: best {self.best[name]:.3g}, smallest within one standard error "
-            f"{self.smallest_within_error[name]:.3g}, 90 % interval {self.interval[name][0]:.3g} to "
-            f"{self.interval[name][1]:.3g}"
+            f"{name}: {self.estimate[name]:.3g} between the levels, 90 % interval {self.interval[name][0]:.3g} to "
+            f"{self.interval[name][1]:.3g}; best level {self.best[name]:.3g}, smallest within one standard error "
+            f"{self.smallest_within_error[name]:.3g}"
             for name in self.names
         ]
         return "\n".join([*parts, *self.warnings])
