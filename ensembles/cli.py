@@ -144,16 +144,20 @@ def demo(
 @_reported
 def look(study_file: StudyFile) -> None:
     """Show what a study's data hold, and whether its noise is of the right order. Writes nothing."""
-    from .overview import gap_table, position_table, snapshot_table, verdicts
+    from .overview import crowding, gap_table, position_table, snapshot_table, verdicts
     from .study import read_study
 
     study = read_study(study_file)
     series, prior = study.read_series(), study.build_prior()
+    if prior.box is not None:
+        for time, cloud in zip(series.times, series.clouds):
+            prior.box.require_inside(cloud, f" in snapshot t = {time:g}")
     console = _output()
     _print_frame(console, f"{study.title or study_file}: snapshots", snapshot_table(series))
     _print_frame(console, "Mean ± spread", position_table(series))
     _print_frame(console, f"Gaps under {prior!r}", gap_table(series, prior))
-    for sentence in (*verdicts(series, prior), *series.notes()):
+    judged = crowding(series, prior) if study.identity == "same" else verdicts(series, prior)
+    for sentence in (*judged, *series.notes()):
         console.print(sentence, markup=False, soft_wrap=True)
 
 

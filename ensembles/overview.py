@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
+from scipy.spatial import cKDTree
 
 from .priors.base import LinearGaussianPrior
 from .report.wording import axis_name, gap_title, time_axis_name, time_text
@@ -15,7 +16,10 @@ from .snapshots.summary import describe_snapshots, displacement
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["gap_table", "position_table", "snapshot_table", "verdicts"]
+__all__ = ["crowding", "gap_table", "position_table", "snapshot_table", "verdicts"]
+
+_CLEAR, _CROWDED = 0.2, 1.0
+"""Noise length over the distance to the nearest neighbour: links are clear below the one, and tell little above the other."""
 
 _FAR = 10.0
 """Ratio of squared displacement to squared spread from which the noise is of another order."""
@@ -147,4 +151,33 @@ def verdicts(series: SnapshotSeries, prior: LinearGaussianPrior) -> Sequence[str
         else:
             text = f"the diffusion is of the right order (spread equals displacement at {ratio:.3g} times as much)"
         sentences.append(f"{gap_title(series, gap)}: {text}")
+    return sentences
+
+
+def crowding(series: SnapshotSeries, prior: LinearGaussianPrior) -> Sequence[str]:
+    """For the same particles in every frame, one sentence a gap: how far do they move beside how near they are?
+
+    The noise length is sqrt(tr Q / d), Q the covariance of the prior's transition.
+
+    Examples
+    --------
+    >>> from ensembles import Brownian
+    >>> series = SnapshotSeries.from_arrays([0, 2], [[0.0, 10.0, 20.0], [0.5, 10.1, 19.0]])
+    >>> print(*crowding(series, Brownian(0.25)))
+    time = 0 → 2: the noise length 1 is 0.1 of the mean distance to the nearest neighbour, 10; most links will be clear
+    """
+    sentences = []
+    for gap in range(len(series) - 1):
+        noise = float(np.sqrt(_squared_spread(series, prior, gap) / series.dimension))
+        tree = cKDTree(series.clouds[gap])
+        near = float(tree.query(tree.data, k=2)[0][:, 1].mean()) if tree.n > 1 else np.inf
+        means = "most links will be clear"
+        if noise > _CLEAR * near:
+            means = "several particles compete for a place, and links are probabilities between them"
+        if noise > _CROWDED * near:
+            means = "links tell little; a shorter gap would tell more"
+        sentences.append(
+            f"{gap_title(series, gap)}: the noise length {noise:.3g} is {noise / near:.2g} of the mean distance to the nearest "
+            f"neighbour, {near:.3g}; {means}"
+        )
     return sentences

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field
 
 from .study_links import BoxTable, LinksTable
 
@@ -22,7 +22,10 @@ __all__ = [
     "UnitsTable",
 ]
 
-_Names = Annotated[tuple[str, ...], Field(strict=False)]
+_Names = Annotated[
+    tuple[str, ...], Field(strict=False), BeforeValidator(lambda value: [value] if isinstance(value, str) else value)
+]
+"""A list of names, or one name."""
 
 
 class _Table(BaseModel):

@@ -207,3 +207,26 @@ def test_a_terminated_run_leaves_nothing_behind(tmp_path):
     _, said = process.communicate(timeout=30)
     assert process.returncode == 143 and "interrupted; nothing was written" in said
     assert sorted(path.name for path in tmp_path.iterdir()) == ["data.csv", "study.toml"]
+
+
+def test_look_judges_linked_particles_by_their_neighbours_and_their_box(tmp_path):
+    look = ["look", str(write_study(tmp_path))]
+    said = CliRunner().invoke(app, look)
+    assert said.exit_code == 0, said.output
+    places = pandas.read_csv(tmp_path / "data.csv").query("t_s == 0")[["x", "y"]].to_numpy()
+    apart = np.linalg.norm(places[:, None] - places[None], axis=2) + 1e9 * np.eye(len(places))
+    near, noise = apart.min(axis=1).mean(), np.sqrt(2 * 0.2 * 0.5)
+    assert (
+        f"the noise length {noise:.3g} is {noise / near:.2g} of the mean distance to the nearest neighbour"
+        in said.output
+    )
+    assert "several particles compete" in said.output and "of the right order" not in said.output
+    write_study(tmp_path, box="[box]\nlower = [0, 0]\nupper = [2, 2]")
+    refused = CliRunner().invoke(app, look)
+    assert refused.exit_code == 2 and "positions must lie in the box" in refused.output
+
+
+def test_one_position_needs_no_list(tmp_path):
+    study = write_study(tmp_path, identity="lost")
+    study.write_text(study.read_text(encoding="utf-8").replace('["x", "y"]', '"x"'), encoding="utf-8")
+    assert read_study(study).read_series().position_names == ("x",)
