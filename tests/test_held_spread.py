@@ -77,7 +77,7 @@ def test_links_of_a_whole_liquid_are_reliable_when_held():
     # from tagged atoms without labels, and prints ten draws.
     draws = []
     for hold in (True, False):
-        looks = [links_study.two_frames(1000, 1, seed, wrapped=True) for seed in range(2)]
+        looks = [links_study.two_frames(1000, 1, seed, wrapped=True) for seed in range(3)]
         said, so = [], []
         for look in looks:
             prior = ensembles.Brownian(diffusion=0.205, box=look.box)

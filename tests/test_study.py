@@ -171,7 +171,7 @@ def test_cells_branch():
         ("seed = 7", "seed = true", 3, r"wrong value; study.seed = true; it should be a whole number"),
         ('time = "t_s"', "time = 3", 7, r"wrong value; data.time = 3; it should be a text in quotes"),
         ('["x_um", "y_um"]', '["x_um", 2]', 8, r"wrong value; data.position\[1\] = 2; it should be a text in quotes"),
-        ('["x_um", "y_um"]', '7', 8, r'wrong value; data.position = 7; it should be a list such as'),
+        ('["x_um", "y_um"]', "7", 8, r"wrong value; data.position = 7; it should be a list such as"),
         ('["x_um", "y_um"]', "[]", 8, r"wrong value; data.position = \[\]; it should hold at least one entry"),
         ('file = "beads.csv"\n', "", 5, r"missing key; \[data\] has no 'file'"),
         ('time = "t_s"\n', "", 5, r"missing key; \[data\] has no 'time'; add a line such as: time = \"t\""),
