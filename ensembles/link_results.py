@@ -123,27 +123,15 @@ def _save_figures(
     folder: Path, series: SnapshotSeries, estimate: PriorEstimate, links: list[ParticleLinks], box: Box | None
 ) -> list[tuple[str, str]]:
     """Draw the links and the evidence of every parameter; (file name, caption) of each picture."""
-    from matplotlib.backends.backend_agg import FigureCanvasAgg
-    from matplotlib.figure import Figure
-
     from .report.figures.links import draw_links
     from .report.figures.profile import draw_profiles
-    from .report.figures.style import polish
+    from .report.figures.saving import save_drawing
 
     profiles = {name: estimate.profile(name, points=9) for name in list(estimate.values)[:6]}
-    drawings: dict[str, Callable[[Figure], str]] = {
-        "links.png": lambda figure: draw_links(figure, series, links, box),
-        "profile.png": lambda figure: draw_profiles(figure, profiles, estimate.to_frame(), estimate.drop_at()),
-    }
-    saved = []
-    for file, draw in drawings.items():
-        figure = Figure(layout="constrained", facecolor="white")
-        FigureCanvasAgg(figure)
-        saved.append((file, draw(figure)))
-        polish(figure)
-        with writing.atomic_path(folder / file) as temporary:
-            figure.savefig(temporary, dpi=200, format="png")
-    return saved
+    return [
+        save_drawing(folder, "links", draw_links, series, links, box),
+        save_drawing(folder, "profile", draw_profiles, profiles, estimate.to_frame(), estimate.drop_at()),
+    ]
 
 
 def _summary(

@@ -9,7 +9,7 @@ import numpy as np
 from scipy.spatial import cKDTree
 
 from .priors.base import LinearGaussianPrior
-from .report.wording import axis_name, gap_title, time_axis_name, time_text
+from .report.wording import axis_name, gap_title, parameter_unit, time_axis_name, time_text
 from .snapshots.series import SnapshotSeries
 from .snapshots.summary import describe_snapshots, displacement
 
@@ -23,12 +23,6 @@ _CLEAR, _CROWDED = 0.2, 1.0
 
 _FAR = 10.0
 """Ratio of squared displacement to squared spread from which the noise is of another order."""
-
-
-def _diffusion_unit(series: SnapshotSeries) -> str:
-    if not series.time_unit:
-        return ""
-    return f"{series.length_unit}²/{series.time_unit}" if series.length_unit else f"1/{series.time_unit}"
 
 
 def snapshot_table(series: SnapshotSeries) -> pd.DataFrame:
@@ -117,8 +111,8 @@ def gap_table(series: SnapshotSeries, prior: LinearGaussianPrior) -> pd.DataFram
                 axis_name("duration", series.time_unit): moved.duration,
                 axis_name("displacement", series.length_unit): np.sqrt(moved.squared_displacement),
                 axis_name("prior's spread", series.length_unit): np.sqrt(_squared_spread(series, prior, gap)),
-                axis_name("diffusion", _diffusion_unit(series)): diffusion,
-                axis_name("equal at", _diffusion_unit(series)): diffusion * ratio,
+                axis_name("diffusion", parameter_unit("diffusion", series)): diffusion,
+                axis_name("equal at", parameter_unit("diffusion", series)): diffusion * ratio,
             }
         )
     return pandas.DataFrame(rows)

@@ -1,6 +1,7 @@
 """Links between frames of the same particles: laws, enumeration, missed and new particles, chains, refusals."""
 
 import warnings
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -8,6 +9,7 @@ from numpy.testing import assert_allclose
 from scipy.optimize import linear_sum_assignment
 
 import ensembles
+from ensembles.links import link
 from ensembles.links.candidates import LinkOptions
 from ensembles.links.law import link_law
 from ensembles.schrodinger.exact_assignment import exact_assignment
@@ -285,3 +287,16 @@ def test_a_prior_that_the_links_contradict_is_said_so(factor, warned):
     assert (links.spread > 1.0) == (factor < 1.0) or factor == 1.0
     if factor == 1.0:
         assert abs(links.spread - 1.0) < 4.0 * np.sqrt(2.0 / 400)
+
+
+def test_probabilities_that_are_no_numbers_are_never_handed_on(monkeypatch):
+    series = ensembles.SnapshotSeries.from_arrays([0.0, 1.0], [[[0.0], [5.0]], [[0.1], [5.2]]])
+    own = link.link_sums
+
+    def broken(posterior, options):
+        sums = own(posterior, options)
+        return replace(sums, probabilities=np.full_like(sums.probabilities, np.nan))
+
+    monkeypatch.setattr(link, "link_sums", broken)
+    with pytest.raises(ensembles.ComputationError, match="not numbers; those of gap 0 left the range .*cluster=0"):
+        ensembles.link_particles(series, ensembles.Brownian(diffusion=0.5))

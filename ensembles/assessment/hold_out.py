@@ -74,16 +74,12 @@ class HoldOut:
     times : one `HeldOutTime` a left-out snapshot.
     dropped : sentences on scores that could not be computed, with the reason.
     verdict : sentences in plain words: one a time, and one over all of them.
-    names, length_unit, time_unit : of the series, for axes.
     """
 
     scores: tuple[HeldOutScore, ...]
     times: tuple[HeldOutTime, ...]
     dropped: tuple[str, ...]
     verdict: tuple[str, ...]
-    names: tuple[str, ...]
-    length_unit: str
-    time_unit: str
 
     def value(self, time: float, prediction: str, score: str) -> HeldOutScore:
         """One number of the table.
@@ -192,9 +188,6 @@ def hold_out(
         tuple(times),
         tuple(dropped),
         held_out_verdict(rows, series.time_name, series.time_unit),
-        series.position_names,
-        series.length_unit,
-        series.time_unit,
     )
 
 

@@ -76,14 +76,11 @@ class PriorCheck:
     gaps : one `GapSurprise` a gap.
     dropped : sentences on what could not be computed, with the reason.
     verdict : one sentence a gap.
-    names, length_unit : of the coordinates, for axes.
     """
 
     gaps: tuple[GapSurprise, ...]
     dropped: tuple[str, ...]
     verdict: tuple[str, ...]
-    names: tuple[str, ...]
-    length_unit: str
 
     def to_frame(self) -> pandas.DataFrame:
         """One row a gap: p-values, energy distance, and the relative entropy with its parts."""
@@ -167,7 +164,7 @@ def prior_check(
         if reason:
             dropped.append(f"the relative entropy from {found.start:g} to {found.end:g} was dropped: {reason}")
         verdict.append(_sentence(found))
-    return PriorCheck(tuple(gaps), tuple(dropped), tuple(verdict), series.position_names, series.length_unit)
+    return PriorCheck(tuple(gaps), tuple(dropped), tuple(verdict))
 
 
 class _Case:

@@ -12,18 +12,16 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
 from ... import checks
-from ...writing import atomic_path
 from .clouds import draw_clouds
 from .convergence import draw_convergence
 from .coupling import draw_coupling
 from .density import draw_density
 from .drift import draw_drift
+from .saving import save_drawing
 from .scene import Scene
-from .style import polish
 
 if TYPE_CHECKING:
     from ...bridges.bridge import Bridge
@@ -70,14 +68,9 @@ def save_figures(
     ['clouds.png', 'density.png', 'drift.png', 'coupling.png', 'convergence.png']
     """
     scene = Scene(bridge, paths)
-    saved = []
     # One stream each: another picture in the list does not change the rest.
-    for (name, draw), stream in zip(FIGURES.items(), checks.generator(rng).spawn(len(FIGURES))):
-        figure = Figure(layout="constrained", facecolor="white")
-        FigureCanvasAgg(figure)
-        caption = draw(figure, scene, stream)
-        polish(figure)
-        with atomic_path(Path(folder) / f"{name}.png") as temporary:
-            figure.savefig(temporary, dpi=dpi)
-        saved.append((f"{name}.png", caption))
-    return saved
+    streams = checks.generator(rng).spawn(len(FIGURES))
+    return [
+        save_drawing(folder, name, draw, scene, stream, dpi=dpi)
+        for (name, draw), stream in zip(FIGURES.items(), streams)
+    ]

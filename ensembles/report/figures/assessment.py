@@ -6,15 +6,11 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from matplotlib.backends.backend_agg import FigureCanvasAgg
-from matplotlib.figure import Figure
-
-from ...writing import atomic_path
 from .bands import draw_bands
 from .holdout import draw_hold_out
 from .noise import draw_noise
 from .prior_check import draw_prior_check
-from .style import polish
+from .saving import save_drawing
 
 if TYPE_CHECKING:
     from ...assessment.hold_out import HoldOut
@@ -45,20 +41,11 @@ def save_assessment_figures(
     list of (file name, caption).
     """
     wanted: list[tuple[str, Callable[..., str], Any]] = [
-        ("holdout.png", draw_hold_out, hold_out),
-        ("noise.png", draw_noise, noise),
-        ("prior_check.png", draw_prior_check, prior_check),
-        ("bands.png", draw_bands, bands),
+        ("holdout", draw_hold_out, hold_out),
+        ("noise", draw_noise, noise),
+        ("prior_check", draw_prior_check, prior_check),
+        ("bands", draw_bands, bands),
     ]
-    saved = []
-    for name, draw, result in wanted:
-        if result is None:
-            continue
-        figure = Figure(layout="constrained", facecolor="white")
-        FigureCanvasAgg(figure)
-        caption = draw(figure, result, series)
-        polish(figure)
-        with atomic_path(Path(folder) / name) as temporary:
-            figure.savefig(temporary, dpi=dpi)
-        saved.append((name, caption))
-    return saved
+    return [
+        save_drawing(folder, name, draw, result, series, dpi=dpi) for name, draw, result in wanted if result is not None
+    ]

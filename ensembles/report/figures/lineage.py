@@ -7,16 +7,15 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from matplotlib.axes import Axes
-from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import to_rgba
 from matplotlib.figure import Figure
 from matplotlib.patches import Patch, PathPatch, Rectangle
 from matplotlib.path import Path as Outline
 
 from ...lineage.labels import UNLABELLED
-from ...writing import atomic_path
 from ..wording import gap_title, time_axis_name
-from .style import GREY, INK, MARKERS, WIDTH, panel_grid, plain, polish, set_title
+from .saving import save_drawing
+from .style import GREY, INK, MARKERS, WIDTH, panel_grid, plain, set_title
 
 if TYPE_CHECKING:
     import pandas
@@ -247,19 +246,7 @@ def save_lineage_figures(
     >>> [name for name, _ in save_lineage_figures(folder, series, flows=ensembles.label_flows(bridge), dpi=40)]
     ['flow.png']
     """
-    saved = []
-    for name, draw, table in (
-        ("flow", draw_flow, flows),
-        ("trends", draw_trends, trends),
-        ("growth", draw_growth, growth),
-    ):
-        if table is None:
-            continue
-        figure = Figure(layout="constrained", facecolor="white")
-        FigureCanvasAgg(figure)
-        caption = draw(figure, table, series)
-        polish(figure)
-        with atomic_path(Path(folder) / f"{name}.png") as temporary:
-            figure.savefig(temporary, dpi=dpi)
-        saved.append((f"{name}.png", caption))
-    return saved
+    wanted = (("flow", draw_flow, flows), ("trends", draw_trends, trends), ("growth", draw_growth, growth))
+    return [
+        save_drawing(folder, name, draw, table, series, dpi=dpi) for name, draw, table in wanted if table is not None
+    ]

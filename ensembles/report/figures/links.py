@@ -74,29 +74,27 @@ def _draw_map(ax: Axes, series: SnapshotSeries, links: ParticleLinks, box: Box |
     moved = late[targets] - early[sources]
     ends = early[sources] + (moved if box is None else box.shortest(moved))
     line = series.dimension == 1
-    times = series.times[[links.source, links.target]]
-    at = [
-        np.column_stack([np.full(len(x), t), x[:, 0]]) if line else x[:, :2]
-        for t, x in zip(times, (early[sources], ends))
-    ]
-    segments = np.stack(at, axis=1)
+
+    def on_page(points: np.ndarray, k: int) -> np.ndarray:
+        return np.column_stack([np.full(len(points), series.times[k]), points[:, 0]]) if line else points[:, :2]
+
+    segments = np.stack([on_page(early[sources], links.source), on_page(ends, links.target)], axis=1)
     upper = np.inf
     for z, (least, _, style) in enumerate(_STYLES):
         part = (probability >= least) & (probability < upper)
         ax.add_collection(LineCollection(list(segments[part]), zorder=3 - 0.1 * z, capstyle="round", **style))
         upper = least
     span = series.times[-1] - series.times[0]
-    starts = np.column_stack([np.full(chosen.size, times[0]), early[chosen, 0]]) if line else early[chosen, :2]
     low, high = early[chosen].min(axis=0), early[chosen].max(axis=0)
     margin = 0.05 * (high - low)
     inside = late[((late >= low - margin) & (late <= high + margin)).all(axis=1)]
-    later = np.column_stack([np.full(len(inside), times[1]), inside[:, 0]]) if line else inside[:, :2]
-    for points, k in ((np.concatenate([at[1], later]), links.target), (starts, links.source)):
+    for points, k in ((np.concatenate([ends, inside]), links.target), (early[chosen], links.source)):
         colour = TIME((series.times[k] - series.times[0]) / span)
-        ax.scatter(*points.T, s=9, marker=MARKERS[int(k == links.target)], color=colour, edgecolor="white", linewidth=0.3,
-                   zorder=4)  # fmt: skip
+        ax.scatter(*on_page(points, k).T, s=9, marker=MARKERS[int(k == links.target)], color=colour,
+                   edgecolor="white", linewidth=0.3, zorder=4)  # fmt: skip
     names = [axis_name(name, series.length_unit) for name in series.position_names]
     if line:
+        times = series.times[[links.source, links.target]]
         ax.set_xticks(times, [f"{t:g}" for t in times])
         ax.set_xlabel(plain(time_axis_name(series)))
         ax.set_ylabel(plain(names[0]))
