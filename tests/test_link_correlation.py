@@ -39,6 +39,23 @@ def test_the_correlation_is_found_without_labels(correlation):
     assert 4.0 * scatter + 0.03 < 0.3
 
 
+def test_pairs_that_cannot_be_exchanged_do_not_count():
+    # Motion is shared over a short distance only: what all neighbours share is less than what the nearest do.
+    found = []
+    for seed in range(8):
+        series, own = frames(0.8, seed, reach=2.0)
+        start = series.clouds[0]
+        moved = series.clouds[1][own] - start
+        apart = cdist(start, start)
+        near = (apart > 0.0) & (apart <= 2.0)
+        labelled = float((moved @ moved.T)[near].mean() / 2.0)
+        found.append((labelled, measured(series).value, measured(series, reach=100.0).value))
+    labelled, near, far = np.array(found).T
+    assert abs((near - labelled).mean()) < 4.0 * (near - labelled).std(ddof=1) / np.sqrt(8.0) + 0.03
+    assert (near - far).mean() > 4.0 * (near - far).std(ddof=1) / np.sqrt(8.0)
+    assert near.mean() > far.mean() + 0.05
+
+
 def test_independent_particles_stay_within_their_errors():
     z = np.array([(one := measured(frames(0.0, seed)[0])).value / one.standard_error for seed in range(20, 36)])
     assert np.abs(z).max() < 4.5
